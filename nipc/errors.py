@@ -62,3 +62,9 @@ class LedgerError(NipcError):
 
 class RunsError(NipcError):
     """Too many runs failed for an answer to be given."""
+
+
+class Interrupted(NipcError):
+    """The user stopped the work; what was finished is kept."""
+
+    exit_code = 130

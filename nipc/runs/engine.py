@@ -1,0 +1,308 @@
+"""Runs every missing run of a batch, keeps each as it is finished, never runs one twice."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from types import TracebackType
+from typing import Self
+
+import numpy as np
+
+from nipc.errors import Interrupted, RunsError
+from nipc.runs import failures
+from nipc.runs.crew import Crew, InlineCrew, Work
+from nipc.runs.keys import run_keys
+from nipc.runs.ledger import Ledger
+from nipc.runs.outcomes import Outcomes
+from nipc.runs.processes import ProcessCrew
+from nipc.runs.progress import Progress, Silent
+from nipc.runs.propagator import Batch, Propagator
+from nipc.runs.record import Record, Status
+from nipc.runs.unit import Answer, Problem, Unit
+from nipc.runs.writer import Writer
+
+BLOCK = 64  # runs in one call of a vectorised propagator, whatever the number of workers
+BLOCK_NUMBERS = 1 << 21  # and at most so many float64 in its answer
+
+
+@dataclass(frozen=True)
+class FailurePolicy:
+    """What is done about runs that fail.
+
+    A failed run is tried again alone `retries` times. When more than the share `tolerated` of a
+    batch has failed, the rest is not run. `again`: failures kept from before are tried anew.
+    """
+
+    retries: int = 1
+    tolerated: float = 1.0
+    again: bool = False
+
+
+class Engine:
+    """Runs batches of one propagator and keeps them in one ledger.
+
+    Worker processes start with the first run and stay until `close`; use it in a `with` block.
+    The numbers are the same whatever `n_jobs` and `backend`, and however often it was interrupted:
+    a propagator that is not vectorised is asked for one run at a time, a vectorised one for blocks
+    that depend on the batch alone, each kept whole or not at all.
+
+    backend: "processes" (default: a run that crashes or hangs costs itself only), "inline" (this
+    process), "dask" (a cluster, through joblib; see `nipc.runs.remote`). `n_jobs` < 0 counts from
+    the number of processors, -1 being all. `time_limit` is in seconds a run.
+    """
+
+    def __init__(
+        self,
+        propagator: Propagator,
+        ledger: Ledger,
+        *,
+        n_jobs: int = 1,
+        time_limit: float | None = None,
+        policy: FailurePolicy = FailurePolicy(),
+        progress: Progress | None = None,
+        backend: str = "processes",
+        scheduler: str | None = None,
+    ) -> None:
+        self.propagator = propagator
+        self.ledger = ledger
+        self.policy = policy
+        self.notes: list[str] = []
+        self.runs_done = 0
+        self.runs_reused = 0
+        self._progress: Progress = Silent() if progress is None else progress
+        self._fingerprint = propagator.fingerprint()
+        self._crew = _crew(propagator, ledger, n_jobs, time_limit, backend, scheduler)
+        foreign = ledger.foreign(self._fingerprint)
+        if foreign:
+            self.notes.append(
+                f"{foreign} kept runs are of a propagator with other code or settings, and are"
+                " not used"
+            )
+
+    def run(self, batch: Batch, label: str) -> Outcomes:
+        """Outcomes of all runs of the batch; only those that the ledger lacks are propagated.
+
+        Raises Interrupted on Ctrl-C and RunsError when more fail than the policy tolerates; what
+        was finished is kept in both cases. LedgerError when it cannot be.
+        """
+        fresh = self.ensure(batch, label)
+        found = self.collect(batch, fresh)
+        if "missing" in found.kinds:  # struck out as damaged while they were read
+            fresh |= self.ensure(batch, label)
+            found = self.collect(batch, fresh)
+        return found
+
+    # -- running ---------------------------------------------------------------------------------
+
+    def ensure(self, batch: Batch, label: str) -> frozenset[bytes]:
+        """Run and keep what is missing; the keys of those. Memory does not grow with their number.
+
+        Raises as `run`.
+        """
+        if self.propagator.fingerprint() != self._fingerprint:
+            raise RunsError(
+                "the propagator's files changed while the study was running; start again: runs of"
+                " the old files will not be used"
+            )
+        keys = run_keys(batch, self._fingerprint)
+        known = self.ledger.find(keys)
+        unique = {key: row for row, key in reversed(list(enumerate(keys)))}
+        rows = sorted(row for key, row in unique.items() if not self._settled(known.get(key)))
+        reused = len(batch) - len(rows)
+        self.runs_reused += reused
+        if not rows:
+            return frozenset()
+        number = self.ledger.begin(batch, self._fingerprint, label, len(batch), reused)
+        writer = Writer(self.ledger, number, keys, batch, self._progress)
+        tally = _Tally(len(batch), sum(
+            known[key][0] is Status.FAILED for key in unique if self._settled(known.get(key))
+        ))  # fmt: skip
+        units = self._first_units(batch, rows, keys, known)
+        alone = False
+        self._progress.start(label, len(batch), reused)
+        try:
+            while units:
+                units = self._round(Work(batch, units, alone), writer, tally)
+                alone = True
+            writer.commit()
+        except KeyboardInterrupt:
+            self._crew.close()
+            writer.commit()
+            raise Interrupted(
+                f"stopped at {label}; {writer.kept} runs finished in this batch are kept, and the"
+                " next start goes on from here"
+            ) from None
+        except RunsError:
+            self._crew.close()
+            writer.commit()
+            raise
+        finally:
+            self.runs_done += writer.kept
+            self._progress.finish()
+        return frozenset(keys[row] for row in rows)
+
+    def _settled(self, state: tuple[Status, int] | None) -> bool:
+        if state is None or state[0] is Status.ALONE:
+            return False
+        return state[0] is Status.DONE or not self.policy.again
+
+    def _first_units(
+        self,
+        batch: Batch,
+        rows: list[int],
+        keys: Sequence[bytes],
+        known: dict[bytes, tuple[Status, int]],
+    ) -> list[Unit]:
+        """Single rows, or blocks that depend on the batch's order and on nothing else."""
+        singles, fresh = [], []
+        for row in rows:
+            status, attempts = known.get(keys[row], (None, 0))
+            if status is None:
+                fresh.append(row)
+            else:
+                before = attempts if status is Status.ALONE else 0
+                singles.append(Unit(np.array([row]), before + 1))
+        if not self.propagator.vectorised:
+            return [Unit(np.array([row])) for row in fresh] + singles
+        size = block_size(batch)
+        blocks: dict[int, list[int]] = {}
+        for row in fresh:
+            blocks.setdefault(row // size, []).append(row)
+        return [Unit(np.array(block)) for block in blocks.values()] + singles
+
+    def _round(self, work: Work, writer: Writer, tally: _Tally) -> list[Unit]:
+        """Carry units out; those that are to be tried again come back."""
+        again: list[Unit] = []
+        for answer in self._crew.answers(work):
+            if answer is not None:
+                again += self._judge(answer, writer, tally)
+            writer.commit_when_due()
+            if tally.share > self.policy.tolerated:
+                raise RunsError(
+                    f"{tally.failed} of {tally.total} runs have failed, more than the"
+                    f" {self.policy.tolerated:.0%} that is tolerated; the rest is not run. Last"
+                    f" reason: {tally.last}"
+                )
+        return again
+
+    def _judge(self, answer: Answer, writer: Writer, tally: _Tally) -> list[Unit]:
+        """Keep what is final, all at once; the rest as units of one run."""
+        unit = answer.unit
+        verdicts: list[tuple[int, Status, int]] = []  # place, status, attempts
+        again: list[Unit] = []
+        for place, problem in enumerate(answer.problems):
+            single = unit.rows[place : place + 1]
+            if problem is None:
+                verdicts.append((place, Status.DONE, unit.attempt))
+            elif problem.kind == "suspect":
+                return [unit]
+            elif len(unit) > 1 and answer.states is None:
+                # a block failed as a whole: each run's own first attempt is still to come
+                verdicts.append((place, Status.ALONE, 0))
+                again.append(Unit(single, 1))
+            elif unit.attempt <= self.policy.retries:
+                if len(unit) > 1:
+                    verdicts.append((place, Status.ALONE, 1))
+                again.append(Unit(single, unit.attempt + 1))
+            else:
+                verdicts.append((place, Status.FAILED, unit.attempt))
+                tally.fail(problem)
+        writer.add(answer, verdicts)
+        return again
+
+    # -- collecting ------------------------------------------------------------------------------
+
+    def collect(self, batch: Batch, fresh: frozenset[bytes] = frozenset()) -> Outcomes:
+        """What the ledger holds of a batch; runs that it lacks count as failed.
+
+        `fresh` are the keys of runs that count as new rather than reused.
+        """
+        n, m, d = len(batch), batch.times.size, batch.states.shape[1]
+        keys = run_keys(batch, self._fingerprint)
+        states, ended, seconds = np.full((n, m, d), np.nan), np.full(n, np.nan), np.zeros(n)
+        ok, reused = np.zeros(n, bool), np.zeros(n, bool)
+        kinds: list[str | None] = ["missing"] * n
+        reasons: list[str | None] = ["not run"] * n
+        for rows, record in self._records(keys):
+            for row in rows:
+                seconds[row] = record.seconds
+                reused[row] = record.key not in fresh
+                if record.states is not None:
+                    states[row], ended[row], ok[row] = record.states, record.ended, True
+                    kinds[row] = reasons[row] = None
+                else:
+                    kinds[row], reasons[row] = record.kind, record.reason
+        germ = np.concatenate([batch.states, batch.forcing.coefficients, batch.parameters], axis=1)
+        names = (
+            *(f"start[{k}]" for k in range(d)), *batch.forcing.labels,
+            *(f"parameter[{k}]" for k in range(batch.parameters.shape[1])),
+        )  # fmt: skip
+        found = failures.report(ok, kinds, reasons, germ, names)
+        return Outcomes(
+            states, ok, ended, tuple(reasons), tuple(kinds), reused, seconds, found
+        )
+
+    def _records(self, keys: list[bytes]) -> Iterator[tuple[list[int], Record]]:
+        rows: dict[bytes, list[int]] = {}
+        for row, key in enumerate(keys):
+            rows.setdefault(key, []).append(row)
+        for record in self.ledger.read(list(rows)):
+            yield rows[record.key], record
+
+    # -- end -------------------------------------------------------------------------------------
+
+    def close(self) -> None:
+        """End the worker processes."""
+        self._crew.close()
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self.close()
+
+
+def block_size(batch: Batch) -> int:
+    """Runs in one call of a vectorised propagator."""
+    numbers = max(1, batch.times.size * batch.states.shape[1])
+    return int(max(1, min(BLOCK, BLOCK_NUMBERS // numbers)))
+
+
+def _crew(
+    propagator: Propagator,
+    ledger: Ledger,
+    n_jobs: int,
+    limit: float | None,
+    backend: str,
+    scheduler: str | None,
+) -> Crew:
+    if n_jobs == 0:
+        raise ValueError("n_jobs counts workers and cannot be 0")
+    count = n_jobs if n_jobs > 0 else max(1, (os.cpu_count() or 1) + 1 + n_jobs)
+    if backend == "processes":
+        return ProcessCrew(propagator, limit, count, ledger.folder)
+    if backend == "inline":
+        return InlineCrew(propagator, limit)
+    raise ValueError(f"no backend is called {backend!r}; there are processes, inline and dask")
+
+
+class _Tally:
+    """How many runs of a batch have failed."""
+
+    def __init__(self, total: int, failed: int) -> None:
+        self.total, self.failed, self.last = total, failed, ""
+
+    def fail(self, problem: Problem) -> None:
+        self.failed += 1
+        self.last = problem.reason
+
+    @property
+    def share(self) -> float:
+        return self.failed / self.total

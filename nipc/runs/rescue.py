@@ -1,0 +1,146 @@
+"""What is whole in a damaged ledger is taken over into a new one."""
+
+from __future__ import annotations
+
+import itertools
+import sqlite3
+from collections import Counter
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+
+from nipc.runs import schema
+from nipc.runs.record import COLUMNS, from_row
+
+_STEP = 256  # rows read at once where nothing is wrong
+_SMALLEST_ROW = 100  # bytes
+
+
+def replace(path: Path) -> tuple[sqlite3.Connection, str]:
+    """Set the damaged file aside, fill a new one; the connection, and a sentence for the user.
+
+    Runs that were propagated together are taken over only together, so that those that must be
+    run again are run as they were, and give the same numbers.
+    """
+    aside = next(
+        name
+        for number in itertools.count(1)
+        if not (name := path.with_name(f"{path.stem}.damaged-{number}{path.suffix}")).exists()
+    )
+    path.rename(aside)
+    for suffix in ("-wal", "-shm"):
+        companion = path.with_name(path.name + suffix)
+        if companion.exists():
+            companion.rename(aside.with_name(aside.name + suffix))
+    connection = schema.connect(path)
+    lost, kept = 0, 0
+    try:
+        old = _reader(aside)
+        try:
+            lost, kept = _copy(old, connection, aside.stat().st_size)
+        finally:
+            old.close()
+    except sqlite3.DatabaseError as error:
+        if not schema.is_damage(error):
+            raise
+    note = (
+        f"{path}: the ledger was damaged; {kept} whole runs were rescued"
+        + (f", {lost} could be read but not trusted" if lost else "")
+        + f". What is missing will be run again. The damaged file is kept as {aside.name}"
+    )
+    return connection, note
+
+
+def _reader(path: Path) -> sqlite3.Connection:
+    """A connection that reads as much of a damaged file as SQLite allows."""
+    _mend_first_page(path)
+    connection = sqlite3.connect(path, isolation_level=None)
+    connection.execute("PRAGMA writable_schema = ON")  # or a short file would not be read at all
+    connection.execute("PRAGMA query_only = ON")
+    connection.execute("PRAGMA cell_size_check = ON")
+    connection.text_factory = lambda raw: raw.decode("utf-8", "replace")
+    return connection
+
+
+def _mend_first_page(path: Path) -> None:
+    """Put a ledger's own first page where the header or the list of tables is unreadable.
+
+    The tables of every ledger are made in one order, so their roots are on the same pages.
+    """
+    probe = sqlite3.connect(path, isolation_level=None)
+    try:
+        probe.execute("PRAGMA writable_schema = ON")
+        probe.execute("SELECT count(key) FROM runs WHERE id < 0").fetchone()
+        return
+    except sqlite3.DatabaseError:
+        pass
+    finally:
+        probe.close()
+    model = path.with_name(path.name + ".model")
+    model.unlink(missing_ok=True)
+    schema.connect(model).close()
+    page = bytearray(model.read_bytes()[:8192])
+    model.unlink()
+    size = path.stat().st_size
+    page[28:32] = (size // len(page)).to_bytes(4, "big")
+    page[32:40] = bytes(8)  # no free pages are known
+    with path.open("r+b") as file:
+        file.write(page)
+
+
+def _copy(old: sqlite3.Connection, new: sqlite3.Connection, size: int) -> tuple[int, int]:
+    new.execute("BEGIN IMMEDIATE")
+    for table in ("arcs", "batches", "facts"):
+        _copy_table(old, new, table)
+    blocks: Counter[bytes] = Counter()
+    sizes: dict[bytes, int] = {}
+    lost = kept = 0
+    for row in _rows(old, size // _SMALLEST_ROW + 1):
+        record = from_row(row)
+        if record is None:
+            lost += 1
+            continue
+        new.execute(schema.UPSERT, row)
+        blocks[record.block] += 1
+        sizes[record.block] = record.block_size
+        kept += 1
+    for block, count in blocks.items():
+        if count < sizes[block]:
+            new.execute("DELETE FROM runs WHERE block = ?", (block,))
+            lost, kept = lost + count, kept - count
+    new.execute(
+        "INSERT INTO arcs SELECT DISTINCT arc, 'lost ' || arc, '', x'', x'', '' FROM runs"
+        " WHERE arc NOT IN (SELECT id FROM arcs)"
+    )
+    new.execute("COMMIT")
+    return lost, kept
+
+
+def _rows(old: sqlite3.Connection, bound: int) -> Iterator[tuple[Any, ...]]:
+    """Every row that can be read; ranges of ids that cannot are halved down to single rows."""
+    ranges = [(0, bound)]
+    query = f"SELECT {', '.join(COLUMNS)} FROM runs WHERE id BETWEEN ? AND ? ORDER BY id LIMIT ?"
+    while ranges:
+        first, last = ranges.pop()
+        try:
+            rows = old.execute(query.replace("SELECT ", "SELECT id, "), (first, last, _STEP))
+            found = rows.fetchall()
+        except sqlite3.DatabaseError:
+            if first < last:
+                middle = (first + last) // 2
+                ranges += [(middle + 1, last), (first, middle)]
+            continue
+        yield from (row[1:] for row in found)
+        if len(found) == _STEP:
+            ranges.append((found[-1][0] + 1, last))
+
+
+def _copy_table(old: sqlite3.Connection, new: sqlite3.Connection, table: str) -> None:
+    """A small table, as far as it can be read."""
+    try:
+        cursor = old.execute(f"SELECT * FROM {table}")
+        marks = ", ".join("?" * len(cursor.description))
+        for row in cursor:
+            new.execute(f"INSERT OR REPLACE INTO {table} VALUES ({marks})", row)
+    except sqlite3.DatabaseError:
+        return

@@ -64,7 +64,7 @@ class RunsError(NipcError):
     """Too many runs failed for an answer to be given."""
 
 
-class Interrupted(NipcError):
+class Interrupted(NipcError):  # noqa: N818 - nothing is wrong
     """The user stopped the work; what was finished is kept."""
 
     exit_code = 130

@@ -37,6 +37,9 @@ class Crew(ABC):
     def answers(self, work: Work) -> Iterator[Answer | None]:
         """One answer a unit; None now and then while nothing is ready."""
 
+    def stop(self) -> None:  # noqa: B027 - not every crew has something at work
+        """End what is at work; its answers are not wanted."""
+
     def close(self) -> None:  # noqa: B027 - not every crew has something to let go
         """Let go of processes."""
 

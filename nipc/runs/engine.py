@@ -10,20 +10,20 @@ from typing import Self
 
 import numpy as np
 
-from nipc.errors import Interrupted, RunsError
-from nipc.runs import failures
+from nipc.errors import InputError, Interrupted, RunsError
 from nipc.runs.crew import Crew, InlineCrew, Work
 from nipc.runs.keys import run_keys
 from nipc.runs.ledger import Ledger
-from nipc.runs.outcomes import Outcomes
+from nipc.runs.outcomes import Outcomes, gather
 from nipc.runs.processes import ProcessCrew
 from nipc.runs.progress import Progress, Silent
 from nipc.runs.propagator import Batch, Propagator
-from nipc.runs.record import Record, Status
+from nipc.runs.record import Status
 from nipc.runs.unit import Answer, Problem, Unit
 from nipc.runs.writer import Writer
 
 BLOCK = 64  # runs in one call of a vectorised propagator, whatever the number of workers
+FIRST = 16  # runs that must all fail before the propagator itself is doubted
 BLOCK_NUMBERS = 1 << 21  # and at most so many float64 in its answer
 
 
@@ -125,17 +125,18 @@ class Engine:
         try:
             while units:
                 units = self._round(Work(batch, units, alone), writer, tally)
-                alone = True
+                alone = bool(units)
+                units = units or tally.release()
             writer.commit()
         except KeyboardInterrupt:
-            self._crew.close()
+            self._crew.stop()
             writer.commit()
             raise Interrupted(
                 f"stopped at {label}; {writer.kept} runs finished in this batch are kept, and the"
                 " next start goes on from here"
             ) from None
         except RunsError:
-            self._crew.close()
+            self._crew.stop()
             writer.commit()
             raise
         finally:
@@ -173,18 +174,24 @@ class Engine:
         return [Unit(np.array(block)) for block in blocks.values()] + singles
 
     def _round(self, work: Work, writer: Writer, tally: _Tally) -> list[Unit]:
-        """Carry units out; those that are to be tried again come back."""
+        """Carry units out; those that are to be tried again come back, and those not begun.
+
+        When the first `FIRST` runs all fail, they are tried again before any other is begun: a
+        propagator that cannot run at all is found at once and not after a night.
+        """
         again: list[Unit] = []
+        left = {unit.rows.tobytes(): unit for unit in work.units}
         for answer in self._crew.answers(work):
             if answer is not None:
+                del left[answer.unit.rows.tobytes()]
                 again += self._judge(answer, writer, tally)
-            writer.commit_when_due()
-            if tally.share > self.policy.tolerated:
-                raise RunsError(
-                    f"{tally.failed} of {tally.total} runs have failed, more than the"
-                    f" {self.policy.tolerated:.0%} that is tolerated; the rest is not run. Last"
-                    f" reason: {tally.last}"
-                )
+                tally.good += sum(problem is None for problem in answer.problems)
+            writer.commit_when_due(0.0 if answer is None else answer.seconds * len(answer.unit))
+            tally.check(self.policy)
+            if not work.alone and not tally.good and len(again) >= FIRST and left:
+                self._crew.stop()
+                tally.hold(list(left.values()))
+                return again
         return again
 
     def _judge(self, answer: Answer, writer: Writer, tally: _Tally) -> list[Unit]:
@@ -215,41 +222,14 @@ class Engine:
     # -- collecting ------------------------------------------------------------------------------
 
     def collect(self, batch: Batch, fresh: frozenset[bytes] = frozenset()) -> Outcomes:
-        """What the ledger holds of a batch; runs that it lacks count as failed.
+        """What the ledger holds of a batch, without running anything."""
+        return gather(self.ledger, batch, self._fingerprint, fresh)
 
-        `fresh` are the keys of runs that count as new rather than reused.
-        """
-        n, m, d = len(batch), batch.times.size, batch.states.shape[1]
-        keys = run_keys(batch, self._fingerprint)
-        states, ended, seconds = np.full((n, m, d), np.nan), np.full(n, np.nan), np.zeros(n)
-        ok, reused = np.zeros(n, bool), np.zeros(n, bool)
-        kinds: list[str | None] = ["missing"] * n
-        reasons: list[str | None] = ["not run"] * n
-        for rows, record in self._records(keys):
-            for row in rows:
-                seconds[row] = record.seconds
-                reused[row] = record.key not in fresh
-                if record.states is not None:
-                    states[row], ended[row], ok[row] = record.states, record.ended, True
-                    kinds[row] = reasons[row] = None
-                else:
-                    kinds[row], reasons[row] = record.kind, record.reason
-        germ = np.concatenate([batch.states, batch.forcing.coefficients, batch.parameters], axis=1)
-        names = (
-            *(f"start[{k}]" for k in range(d)), *batch.forcing.labels,
-            *(f"parameter[{k}]" for k in range(batch.parameters.shape[1])),
-        )  # fmt: skip
-        found = failures.report(ok, kinds, reasons, germ, names)
-        return Outcomes(
-            states, ok, ended, tuple(reasons), tuple(kinds), reused, seconds, found
-        )
-
-    def _records(self, keys: list[bytes]) -> Iterator[tuple[list[int], Record]]:
-        rows: dict[bytes, list[int]] = {}
-        for row, key in enumerate(keys):
-            rows.setdefault(key, []).append(row)
-        for record in self.ledger.read(list(rows)):
-            yield rows[record.key], record
+    def pieces(self, batch: Batch, size: int = 1024) -> Iterator[tuple[slice, Outcomes]]:
+        """The same, so many runs at a time, for batches that do not fit into memory."""
+        for first in range(0, len(batch), size):
+            rows = slice(first, min(first + size, len(batch)))
+            yield rows, self.collect(batch.take(rows))
 
     # -- end -------------------------------------------------------------------------------------
 
@@ -290,19 +270,45 @@ def _crew(
         return ProcessCrew(propagator, limit, count, ledger.folder)
     if backend == "inline":
         return InlineCrew(propagator, limit)
+    if backend == "dask":
+        if scheduler is None:
+            raise InputError("the engine `dask` needs the address of its scheduler")
+        from nipc.runs.remote import DaskCrew  # an extra, and slow to import
+
+        return DaskCrew(propagator, limit, scheduler)
     raise ValueError(f"no backend is called {backend!r}; there are processes, inline and dask")
 
 
 class _Tally:
-    """How many runs of a batch have failed."""
+    """How many runs of a batch have failed, and what was put off meanwhile."""
 
     def __init__(self, total: int, failed: int) -> None:
-        self.total, self.failed, self.last = total, failed, ""
+        self.total, self.failed, self.good, self.last = total, failed, 0, ""
+        self._held: list[Unit] = []
 
     def fail(self, problem: Problem) -> None:
         self.failed += 1
         self.last = problem.reason
 
-    @property
-    def share(self) -> float:
-        return self.failed / self.total
+    def hold(self, units: list[Unit]) -> None:
+        """These wait until it is known whether the propagator can run at all."""
+        self._held = units
+
+    def release(self) -> list[Unit]:
+        """What waited."""
+        held, self._held = self._held, []
+        return held
+
+    def check(self, policy: FailurePolicy) -> None:
+        """Raise when more has failed than is tolerated."""
+        if self.failed > policy.tolerated * self.total:
+            raise RunsError(
+                f"{self.failed} of {self.total} runs have failed, more than the"
+                f" {policy.tolerated:.0%} that is tolerated; the rest is not run. Last reason:"
+                f" {self.last}"
+            )
+        if self._held and policy.tolerated < 1.0 and not self.good and self.failed >= FIRST:
+            raise RunsError(
+                f"the first {self.failed} runs have all failed; the rest of {self.total} is not"
+                f" run. Last reason: {self.last}"
+            )

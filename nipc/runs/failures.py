@@ -85,9 +85,7 @@ def _without_numbers(reason: str) -> str:
     return re.sub(r"[-+]?\d+(\.\d*)?([eEdD][-+]?\d+)?", "#", reason)
 
 
-def _regions(
-    ok: BoolArray, germ: FloatArray, names: Sequence[str]
-) -> tuple[FailureRegion, ...]:
+def _regions(ok: BoolArray, germ: FloatArray, names: Sequence[str]) -> tuple[FailureRegion, ...]:
     """Coordinates, and the distance from the centre, in which failed runs lie apart.
 
     Mann & Whitney (1947) rank test on each, at a level shared among them.

@@ -122,7 +122,7 @@ class Ledger:
             before = self._connection.total_changes
             for key in keys:
                 self._connection.execute(
-                    "DELETE FROM runs WHERE key = :key OR block = "
+                    "DELETE FROM runs WHERE key = :key OR block_size > 1 AND block = "
                     "(SELECT block FROM runs WHERE key = :key)",
                     {"key": key},
                 )
@@ -144,7 +144,8 @@ class Ledger:
     def foreign(self, fingerprint: str) -> int:
         """How many runs are kept of a propagator with another fingerprint."""
         query = (
-            "SELECT count(*) FROM runs JOIN arcs ON arcs.id = runs.arc"
+            "SELECT count(*) FROM runs JOIN batches ON batches.id = runs.batch"
+            " JOIN arcs ON arcs.id = batches.arc"
             " WHERE arcs.fingerprint NOT IN (?, '')"
         )
         return int(self._recovering(

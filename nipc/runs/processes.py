@@ -7,6 +7,7 @@ end a single run; hence each worker has its own connection, and the master knows
 from __future__ import annotations
 
 import contextlib
+import fcntl
 import itertools
 import json
 import os
@@ -14,6 +15,7 @@ import signal
 import socket
 import subprocess
 import sys
+import tempfile
 import time
 from collections import deque
 from collections.abc import Iterator
@@ -44,11 +46,10 @@ _ENTRY = (
 class Worker:
     """One process and what it has been given."""
 
-    def __init__(self, setup: bytes, folder: Path, name: str) -> None:
+    def __init__(self, setup: bytes, folder: Path | None) -> None:
         ours, theirs = socket.socketpair()
-        path = folder / f"{name}.log"
-        self._log = os.open(path, os.O_RDWR | os.O_CREAT | os.O_TRUNC | os.O_APPEND, 0o600)
-        path.unlink()  # it lives as long as somebody has it open
+        self._log = tempfile.TemporaryFile(dir=folder, buffering=0)  # noqa: SIM115 - see `end`
+        fcntl.fcntl(self._log, fcntl.F_SETFL, os.O_APPEND)
         with theirs:
             self.process = subprocess.Popen(
                 [sys.executable, "-c", _ENTRY, str(theirs.fileno()), json.dumps(sys.path)],
@@ -118,12 +119,13 @@ class Worker:
         self.connection.close()
         text = _ending(code)
         with contextlib.suppress(OSError):
-            size = os.fstat(self._log).st_size
-            tail = os.pread(self._log, 2000, max(0, size - 2000)).decode("utf-8", "replace")
-            lines = [line.strip() for line in tail.splitlines() if line.strip()]
+            log = self._log.fileno()
+            tail = os.pread(log, 2000, max(0, os.fstat(log).st_size - 2000))
+            lines = [line.strip() for line in tail.decode(errors="replace").splitlines()]
+            lines = [line for line in lines if line]
             if lines:
                 text += ": " + " | ".join(lines[-4:])[:400]
-        os.close(self._log)
+        self._log.close()
         return text
 
 
@@ -137,10 +139,10 @@ def _ending(code: int | None) -> str:
 
 
 class ProcessCrew(Crew):
-    """`n_jobs` worker processes on this machine."""
+    """`n_jobs` worker processes on this machine; what they print as errors waits in `folder`."""
 
     def __init__(
-        self, propagator: Propagator, limit: float | None, n_jobs: int, folder: Path
+        self, propagator: Propagator, limit: float | None, n_jobs: int, folder: Path | None = None
     ) -> None:
         super().__init__(propagator, limit)
         self.n_jobs = n_jobs
@@ -170,8 +172,7 @@ class ProcessCrew(Crew):
     def _hand_out(self, todo: deque[Unit], work: Work) -> None:
         busy = sum(1 for worker in self._workers if worker.tasks)
         while len(self._workers) < min(self.n_jobs, busy + len(todo)):
-            name = f"worker-{os.getpid()}-{next(self._numbers)}"
-            self._workers.append(Worker(self._setup, self.folder, name))
+            self._workers.append(Worker(self._setup, self.folder))
         depth = 1 if work.alone else 2  # one task to work at and one to go on with
         for level in range(depth):
             for worker in self._workers:
@@ -249,6 +250,9 @@ class ProcessCrew(Crew):
             if worker.tasks or worker.process.poll() is not None:
                 worker.end()
                 self._workers.remove(worker)
+
+    def stop(self) -> None:
+        self.close()
 
     def close(self) -> None:
         while self._workers:

@@ -27,7 +27,7 @@ class Record:
     """A run as the ledger keeps it.
 
     `states` is (m, d), or None when the run failed; `block` names the runs it was propagated
-    together with (its own key when alone) and `block_size` counts them.
+    together with (empty when alone) and `block_size` counts them.
     """
 
     key: bytes
@@ -80,7 +80,7 @@ def to_row(record: Record, arc: int, batch: int, finished: float) -> tuple[objec
     )
     return (
         record.key, int(record.status), record.kind, reason, float(record.seconds),
-        int(record.attempt), record.block or record.key, int(record.block_size), record.host,
+        int(record.attempt), record.block, int(record.block_size), record.host,
         float(record.elapsed), finished, arc, batch, ended, *shape, *blobs, check,
     )  # fmt: skip
 

@@ -92,8 +92,7 @@ def _copy(old: sqlite3.Connection, new: sqlite3.Connection, size: int) -> tuple[
     new.execute("BEGIN IMMEDIATE")
     for table in ("arcs", "batches", "facts"):
         _copy_table(old, new, table)
-    blocks: Counter[bytes] = Counter()
-    sizes: dict[bytes, int] = {}
+    blocks: Counter[tuple[bytes, int]] = Counter()
     lost = kept = 0
     for row in _rows(old, size // _SMALLEST_ROW + 1):
         record = from_row(row)
@@ -101,12 +100,12 @@ def _copy(old: sqlite3.Connection, new: sqlite3.Connection, size: int) -> tuple[
             lost += 1
             continue
         new.execute(schema.UPSERT, row)
-        blocks[record.block] += 1
-        sizes[record.block] = record.block_size
+        if record.block_size > 1:
+            blocks[record.block, record.block_size] += 1
         kept += 1
-    for block, count in blocks.items():
-        if count < sizes[block]:
-            new.execute("DELETE FROM runs WHERE block = ?", (block,))
+    for (block, size), count in blocks.items():
+        if count < size:
+            new.execute("DELETE FROM runs WHERE block = ? AND block_size > 1", (block,))
             lost, kept = lost + count, kept - count
     new.execute(
         "INSERT INTO arcs SELECT DISTINCT arc, 'lost ' || arc, '', x'', x'', '' FROM runs"

@@ -31,7 +31,6 @@ CREATE TABLE runs (
     checksum BLOB NOT NULL
 );
 CREATE INDEX runs_by_batch ON runs (batch, status, elapsed);
-CREATE INDEX runs_by_block ON runs (block);
 CREATE TABLE facts (name TEXT PRIMARY KEY, value TEXT NOT NULL);
 """
 

@@ -21,7 +21,8 @@ from nipc.runs.unit import Answer, call
 
 TOGETHER = 0.02  # seconds for which quick answers are collected before they are sent
 LATEST = 0.2  # seconds after which collected answers are sent whatever the worker is doing
-_LOG_SIZE = 1 << 20
+_LOG_SIZE = 1 << 20  # bytes of the user's error output that may pile up
+_MODELS = 8
 
 
 class Outbox:
@@ -100,10 +101,14 @@ def main(file: int) -> None:
     out.say("set up", "")
     times: Any = None
     model: Any = None
+    models: dict[bytes, Any] = {}
     while True:
         match inbox.get():
             case ("arc", times, model):
-                pass
+                # a model that is known brings along what it has computed
+                model = models.setdefault(model.digest(), model)
+                if len(models) > _MODELS:
+                    models.pop(next(iter(models)))
             case ("units", task, units):
                 for unit, states, coefficients, parameters in units:
                     part = Batch(states, times, model.realise(coefficients), parameters)

@@ -65,12 +65,16 @@ class Writer:
 
     def _block(self, rows: IntArray) -> bytes:
         if rows.size == 1:
-            return self._keys[int(rows[0])]
+            return b""
         return block_digest([self._keys[int(row)] for row in rows])
 
-    def commit_when_due(self) -> None:
-        """Keep what was collected when it has waited long enough or grown large."""
-        if time.monotonic() - self._last > COMMIT_SECONDS or self._bytes > COMMIT_BYTES:
+    def commit_when_due(self, expected: float = 0.0) -> None:
+        """Keep what was collected if it has waited long enough or grown large.
+
+        `expected` is in how many seconds the next call may come at the latest, as far as known.
+        """
+        waited = time.monotonic() - self._last
+        if waited + expected > COMMIT_SECONDS or self._bytes > COMMIT_BYTES:
             self.commit()
 
     def commit(self) -> None:

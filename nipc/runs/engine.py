@@ -174,7 +174,7 @@ class Engine:
         return [Unit(np.array(block)) for block in blocks.values()] + singles
 
     def _round(self, work: Work, writer: Writer, tally: _Tally) -> list[Unit]:
-        """Carry units out; those that are to be tried again come back, and those not begun.
+        """Carry units out; those that are to be tried again come back.
 
         When the first `FIRST` runs all fail, they are tried again before any other is begun: a
         propagator that cannot run at all is found at once and not after a night.
@@ -188,7 +188,8 @@ class Engine:
                 tally.good += sum(problem is None for problem in answer.problems)
             writer.commit_when_due(0.0 if answer is None else answer.seconds * len(answer.unit))
             tally.check(self.policy)
-            if not work.alone and not tally.good and len(again) >= FIRST and left:
+            doubtful = not work.alone and not tally.good and len(again) >= FIRST
+            if doubtful and left and self.policy.tolerated < 1.0:
                 self._crew.stop()
                 tally.hold(list(left.values()))
                 return again
@@ -307,7 +308,7 @@ class _Tally:
                 f" {policy.tolerated:.0%} that is tolerated; the rest is not run. Last reason:"
                 f" {self.last}"
             )
-        if self._held and policy.tolerated < 1.0 and not self.good and self.failed >= FIRST:
+        if self._held and not self.good and self.failed >= FIRST:
             raise RunsError(
                 f"the first {self.failed} runs have all failed; the rest of {self.total} is not"
                 f" run. Last reason: {self.last}"

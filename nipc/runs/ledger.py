@@ -98,41 +98,23 @@ class Ledger:
     def read(self, keys: Sequence[bytes]) -> Iterator[Record]:
         """The records of those of the keys that are known and whole, in no particular order.
 
-        A record whose checksum does not fit is struck out, with all runs of its block: they can
-        only be had again, bit for bit, together.
+        When a record's checksum does not fit it, the file is rescued, and `notes` says so.
         """
-        broken: list[bytes] = []
+        damaged = False
         for part in _parts(keys, _RUNS_AT_ONCE):
             for row in self._recovering(lambda part=part: self._rows(part)):  # type: ignore[misc]
                 record = from_row(row)
                 if record is None:
-                    broken.append(row[0])
+                    damaged = True
                 else:
                     yield record
-        if broken:
-            self._strike(broken)
+        if damaged:
+            self._rescue()
 
     def _rows(self, keys: Sequence[bytes]) -> list[tuple[Any, ...]]:
         marks = ",".join("?" * len(keys))
         query = f"SELECT {', '.join(COLUMNS)} FROM runs WHERE key IN ({marks})"
         return self._connection.execute(query, keys).fetchall()
-
-    def _strike(self, keys: list[bytes]) -> None:
-        def work() -> int:
-            before = self._connection.total_changes
-            for key in keys:
-                self._connection.execute(
-                    "DELETE FROM runs WHERE key = :key OR block_size > 1 AND block = "
-                    "(SELECT block FROM runs WHERE key = :key)",
-                    {"key": key},
-                )
-            return self._connection.total_changes - before
-
-        count = self._writing(work)
-        self.notes.append(
-            f"{self.path}: {len(keys)} kept runs are damaged (their checksums do not fit);"
-            f" {count} runs are struck out and will be run again"
-        )
 
     def count(self, status: Status | None = None) -> int:
         """How many runs are kept, of one status or of all."""
@@ -230,13 +212,17 @@ class Ledger:
             except sqlite3.DatabaseError as error:
                 if not schema.is_damage(error):
                     raise
-            self._connection.close()
-            self._arcs.clear()
-            self._connection, note = rescue.replace(self.path)
-            self.notes.append(note)
+            self._rescue()
             return work()
         except sqlite3.Error as error:
             raise schema.explain(error, self.folder) from None
+
+    def _rescue(self) -> None:
+        """Go on with a new file that holds what is whole in the old one."""
+        self._connection.close()
+        self._arcs.clear()
+        self._connection, note = rescue.replace(self.path)
+        self.notes.append(note)
 
     # -- end -------------------------------------------------------------------------------------
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import enum
 import hashlib
-import struct
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Any
 
@@ -51,38 +51,32 @@ class Record:
         return (0, 0) if self.states is None else (self.states.shape[0], self.states.shape[1])
 
 
-def checksum(
-    key: bytes, status: int, ended: float, shape: tuple[int, int], reason: str, *blobs: bytes
-) -> bytes:
-    """16 bytes that change when any bit that matters does."""
-    digest = hashlib.blake2b(key, digest_size=16)
-    digest.update(struct.pack("<qdqq", status, ended, *shape))
-    for blob in (reason.encode("utf-8", "replace"), *blobs):
-        digest.update(len(blob).to_bytes(8, "little"))
-        digest.update(blob)
+def checksum(values: Iterable[object]) -> bytes:
+    """16 bytes that change when any bit of a row does."""
+    digest = hashlib.blake2b(digest_size=16)
+    for value in values:
+        part = value if isinstance(value, bytes) else repr(value).encode("utf-8", "replace")
+        digest.update(len(part).to_bytes(8, "little"))
+        digest.update(part)
     return digest.digest()
 
 
 def to_row(record: Record, arc: int, batch: int, finished: float) -> tuple[object, ...]:
     """The record in the order of `COLUMNS`."""
-    blobs = (
-        little(record.start),
-        little(record.coefficients),
-        little(record.parameters),
-        b"" if record.states is None else little(record.states),
-    )
     # SQLite has no NaN: it would read back as NULL, so "did not end" is NULL from the start
-    ended = None if np.isnan(record.ended) else float(record.ended)
-    reason = record.reason.encode("utf-8", "replace").decode()
-    shape = record.shape()
-    check = checksum(
-        record.key, int(record.status), -np.inf if ended is None else ended, shape, reason, *blobs
-    )
-    return (
-        record.key, int(record.status), record.kind, reason, float(record.seconds),
-        int(record.attempt), record.block, int(record.block_size), record.host,
-        float(record.elapsed), finished, arc, batch, ended, *shape, *blobs, check,
+    values = (
+        record.key, int(record.status), record.kind, _storable(record.reason),
+        float(record.seconds), int(record.attempt), record.block, int(record.block_size),
+        record.host, float(record.elapsed), float(finished), arc, batch,
+        None if np.isnan(record.ended) else float(record.ended), *record.shape(),
+        little(record.start), little(record.coefficients), little(record.parameters),
+        b"" if record.states is None else little(record.states),
     )  # fmt: skip
+    return (*values, checksum(values))
+
+
+def _storable(text: str) -> str:
+    return text.encode("utf-8", "replace").decode()
 
 
 COLUMNS = (
@@ -94,23 +88,17 @@ COLUMNS = (
 
 def from_row(row: tuple[Any, ...]) -> Record | None:
     """The record of a row in the order of `COLUMNS`; None when its checksum does not fit it."""
-    try:
-        (
-            key, status, kind, reason, seconds, attempt, block, block_size, host,
-            elapsed, _, _, _, ended, n_times, n_states, *blobs, check,
-        ) = row  # fmt: skip
-        shape = (int(n_times), int(n_states))
-        mark = -np.inf if ended is None else float(ended)
-        if check != checksum(key, status, mark, shape, reason, *blobs):
-            return None
-        start, coefficients, parameters, states = (np.frombuffer(b, dtype="<f8") for b in blobs)
-        return Record(
-            key=key, status=Status(status), start=start, coefficients=coefficients,
-            parameters=parameters,
-            states=states.reshape(shape) if Status(status) is Status.DONE else None,
-            ended=np.nan if ended is None else mark, kind=kind, reason=reason,
-            seconds=float(seconds), attempt=int(attempt), block=block,
-            block_size=int(block_size), host=host, elapsed=float(elapsed),
-        )  # fmt: skip
-    except (TypeError, ValueError, AttributeError, struct.error, UnicodeError):
+    if row[-1] != checksum(row[:-1]):
         return None
+    (
+        key, status, kind, reason, seconds, attempt, block, block_size, host,
+        elapsed, _, _, _, ended, n_times, n_states, *blobs, _,
+    ) = row  # fmt: skip
+    start, coefficients, parameters, states = (np.frombuffer(blob, dtype="<f8") for blob in blobs)
+    done = Status(status) is Status.DONE
+    return Record(
+        key=key, status=Status(status), start=start, coefficients=coefficients,
+        parameters=parameters, states=states.reshape(n_times, n_states) if done else None,
+        ended=np.nan if ended is None else ended, kind=kind, reason=reason, seconds=seconds,
+        attempt=attempt, block=block, block_size=block_size, host=host, elapsed=elapsed,
+    )  # fmt: skip

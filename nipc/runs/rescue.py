@@ -93,12 +93,16 @@ def _copy(old: sqlite3.Connection, new: sqlite3.Connection, size: int) -> tuple[
     for table in ("arcs", "batches", "facts"):
         _copy_table(old, new, table)
     blocks: Counter[tuple[bytes, int]] = Counter()
+    seen: set[bytes] = set()
     lost = kept = 0
     for row in _rows(old, size // _SMALLEST_ROW + 1):
         record = from_row(row)
         if record is None:
             lost += 1
             continue
+        if record.key in seen:  # pages may be listed twice
+            continue
+        seen.add(record.key)
         new.execute(schema.UPSERT, row)
         if record.block_size > 1:
             blocks[record.block, record.block_size] += 1

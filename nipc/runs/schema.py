@@ -6,11 +6,11 @@ import sqlite3
 from pathlib import Path
 
 from nipc.errors import LedgerError
-from nipc.runs.record import COLUMNS
+from nipc.runs.record import COLUMNS, from_row
 
 VERSION = 1
 APPLICATION = 0x6E697063  # "nipc"; SQLite keeps it in the file's header
-_SMALL = 1 << 28  # bytes; larger files are not examined as a whole on each start
+_SMALL = 1 << 26  # bytes; larger files are examined where they are read
 
 TABLES = """
 CREATE TABLE arcs (
@@ -68,10 +68,7 @@ def create(connection: sqlite3.Connection) -> None:
 
 
 def examine(connection: sqlite3.Connection, path: Path) -> None:
-    """Raise where the file is damaged or not for this version.
-
-    Large files are examined where they are read: each run carries a checksum of its own.
-    """
+    """Raise where the file is damaged or not for this version."""
     (version,) = connection.execute("PRAGMA user_version").fetchone()
     (application,) = connection.execute("PRAGMA application_id").fetchone()
     if application != APPLICATION:
@@ -84,10 +81,12 @@ def examine(connection: sqlite3.Connection, path: Path) -> None:
             f" {VERSION}); use that nipc, or another work folder"
         )
     if path.stat().st_size <= _SMALL:
-        (verdict,) = connection.execute("PRAGMA quick_check(1)").fetchone()
+        (verdict,) = connection.execute("PRAGMA integrity_check(1)").fetchone()
         if verdict != "ok":
             raise sqlite3.DatabaseError(f"malformed: {verdict}")
-    connection.execute("SELECT max(id) FROM runs").fetchone()
+        for row in connection.execute(f"SELECT {', '.join(COLUMNS)} FROM runs"):
+            if from_row(row) is None:
+                raise sqlite3.DatabaseError("malformed: a run's checksum does not fit it")
 
 
 def is_damage(error: sqlite3.DatabaseError) -> bool:

@@ -16,6 +16,7 @@ import numpy as np
 from nipc.errors import Finding
 from nipc.problem.quantities import RESERVED, expression_fault
 from nipc.problem.start import covariance_fault, read_matrix
+from nipc.problem.units import SECONDS
 
 Raw = dict[str, Any]
 
@@ -144,6 +145,14 @@ def _noise(raw: Raw, folder: Path) -> Iterator[Finding]:
     propagator = propagator if isinstance(propagator, dict) else {}
     corrected = propagator.get("adapter") == "kicks"
     for i, table in enumerate(_tables(raw, "noise"), start=1):
+        clock = raw.get("clock")
+        unit = clock.get("unit", "s") if isinstance(clock, dict) else "s"
+        if table.get("per") is not None and unit not in SECONDS:
+            yield Finding(
+                f"noise[{i}].per",
+                f"the clock's unit is {unit!r}, which has no known length; leave `per` out and "
+                "give the intensity per square root of the clock's unit",
+            )
         ito = table.get("calculus") == "ito" and table.get("enters") == "multiplicative"
         if ito and not corrected:
             yield Finding(

@@ -13,6 +13,7 @@ from nipc.problem.charts import ChartSettings
 from nipc.problem.noise import BASES, NoiseBasis, Source
 from nipc.problem.parameters import Finite, Fixed, Name, Parameter, Positive
 from nipc.problem.start import Start, read_matrix
+from nipc.problem.units import SECONDS, TimeUnit
 
 Reference = Annotated[str, Field(pattern=r"^[A-Za-z_][\w./-]*:[A-Za-z_]\w*$")]
 Count = Annotated[int, Field(ge=1)]
@@ -93,12 +94,15 @@ class NoiseSettings(_Section):
     """One noise source and the basis it is expanded on.
 
     White: intensity is per square root of time, so that a velocity it drives has variance
-    intensity^2 t. Gauss-Markov: intensity is the stationary standard deviation.
+    intensity^2 t. The time is the clock's unit, or the one that `per` names: 2e-8 km/s^1.5 beside a
+    clock in days is intensity = 2e-8, per = "s", and the propagator still gets km/s^2.
+    Gauss-Markov: intensity is the stationary standard deviation.
     """
 
     name: Name
     unit: str = ""
     intensity: Positive
+    per: TimeUnit | None = None
     kind: Literal["white", "gauss-markov"] = "white"
     time_constant: Positive | None = None
     basis: Literal["legendre", "karhunen-loeve", "completed"] = "legendre"
@@ -116,9 +120,12 @@ class NoiseSettings(_Section):
             )
         return self
 
-    @property
-    def source(self) -> Source:
-        return Source(self.name, self.unit, self.intensity, self.kind, self.time_constant)
+    def source(self, clock_unit: str) -> Source:
+        """The source, its intensity per square root of the clock's unit."""
+        factor = 1.0
+        if self.per is not None and self.kind == "white":
+            factor = (SECONDS[self.per] / SECONDS[clock_unit]) ** 0.5
+        return Source(self.name, self.unit, self.intensity * factor, self.kind, self.time_constant)
 
     def expanded_on(self, terms: int) -> NoiseBasis:
         return BASES[self.basis](terms)

@@ -18,7 +18,7 @@ class KarhunenLoeve(NoiseBasis):
 
     @property
     def frequencies(self) -> FloatArray:
-        """(k - 1/2) pi; the eigenvalues of the Wiener process on [0, 1] are their inverse squares."""
+        """(k - 1/2) pi; their inverse squares are the Wiener process's eigenvalues."""
         return (np.arange(1, self.terms + 1) - 0.5) * np.pi
 
     def values(self, u: FloatArray) -> FloatArray:

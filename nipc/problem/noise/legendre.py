@@ -9,7 +9,7 @@ from nipc.problem.noise.basis import NoiseBasis
 
 
 class Legendre(NoiseBasis):
-    """Legendre polynomials: spectrally accurate for smooth responses, and exact at the arc's end."""
+    """Legendre polynomials: spectrally accurate for smooth responses, exact at the end."""
 
     name = "legendre"
 

@@ -6,7 +6,6 @@ from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
-from scipy.interpolate import CubicHermiteSpline
 
 from nipc.arrays import FloatArray
 from nipc.problem.noise.basis import NoiseBasis
@@ -74,6 +73,8 @@ class GaussMarkovShapes:
         self.basis, self.start, self.length = basis, start, end - start
         self.intensity, self.time_constant = intensity, time_constant
         self.count = basis.terms + 1
+        from scipy.interpolate import CubicHermiteSpline  # slow to import, and seldom needed
+
         self._white = WhiteShapes(basis, start, end, 1.0)
         # 100 points per e-folding or per half wave of the fastest function
         scale = min(time_constant, self.length / (basis.terms + 1))

@@ -1,0 +1,144 @@
+"""W_j(t) of every member, cell by cell: noise histories that no cutting into arcs can change.
+
+The horizon is divided into cells. On each cell a source's white noise has independent standard
+coefficients on Legendre polynomials, drawn from a stream of their own (counter-based, keyed by
+seed, source, cell and block of members), so nothing is stored and any member's history can be
+drawn again. An arc is a run of cells; its coefficients on any basis are projections of the cells'.
+"""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from nipc.arrays import FloatArray
+from nipc.problem.noise import Legendre, NoiseBasis, Source
+
+BLOCK = 4096
+
+
+@dataclass(frozen=True, eq=False)
+class NoiseHistory:
+    """Brownian histories of a set of members.
+
+    edges (C + 1,) are the cells' boundaries; `streams` names each source's stream, so that two
+    ensembles share a source's history exactly where its stream is the same (pick and freeze);
+    `scales` (J,) multiply the sources.
+    """
+
+    seed: int
+    streams: tuple[str, ...]
+    sources: tuple[Source, ...]
+    edges: FloatArray
+    cell_terms: int
+    scales: FloatArray
+    _projections: dict[tuple[object, ...], FloatArray] = field(default_factory=dict, repr=False)
+
+    def with_stream(self, source: int, stream: str) -> NoiseHistory:
+        """The same with another independent history for one source."""
+        streams = tuple(stream if j == source else s for j, s in enumerate(self.streams))
+        return self._replaced(streams, self.scales)
+
+    def scaled(self, scales: FloatArray) -> NoiseHistory:
+        """The same histories with each source multiplied by its scale."""
+        return self._replaced(self.streams, np.asarray(scales, float))
+
+    def _replaced(self, streams: tuple[str, ...], scales: FloatArray) -> NoiseHistory:
+        return NoiseHistory(
+            self.seed, streams, self.sources, self.edges, self.cell_terms, scales,
+            self._projections,
+        )  # fmt: skip
+
+    def _generator(self, stream: str, cell: int, block: int) -> np.random.Generator:
+        text = f"{self.seed}/{stream}/{cell}/{block}".encode()
+        key = int.from_bytes(hashlib.sha256(text).digest()[:16], "little")
+        return np.random.Generator(np.random.Philox(key=key))
+
+    def cell(self, source: int, cell: int, block: int, count: int, terms: int) -> FloatArray:
+        """Coefficients (terms, count) of the first `count` members of a block on one cell.
+
+        Row k is the same however many rows are asked for.
+        """
+        stream = f"{self.sources[source].name}:{self.streams[source]}"
+        rng = self._generator(stream, cell, block)
+        return rng.standard_normal((terms, BLOCK))[:, :count]
+
+    def initial(self, source: int, block: int, count: int) -> FloatArray:
+        """A Gauss-Markov source's value at the start over its stationary deviation: (count,)."""
+        stream = f"{self.sources[source].name}:{self.streams[source]}:initial"
+        return self._generator(stream, 0, block).standard_normal(BLOCK)[:count]
+
+    def white(
+        self, source: int, basis: NoiseBasis, first: int, last: int, block: int, count: int
+    ) -> FloatArray:
+        """Coefficients (count, basis.terms) on the arc of cells first ... last - 1."""
+        if last - first == 1 and isinstance(basis, Legendre) and basis.terms <= self.cell_terms:
+            return self.cell(source, first, block, count, basis.terms).T * self.scales[source]
+        total = np.zeros((count, basis.terms))
+        matrix = self._projection(basis, first, last)
+        for i, cell in enumerate(range(first, last)):
+            drawn = self.cell(source, cell, block, count, matrix.shape[2])
+            total += drawn.T @ matrix[i].T
+        return total * self.scales[source]
+
+    def _projection(self, basis: NoiseBasis, first: int, last: int) -> FloatArray:
+        """(cells, basis.terms, cell terms) inner products, rows made orthonormal together."""
+        widths = np.diff(self.edges[first : last + 1])
+        key = (basis.name, basis.terms, tuple(np.round(widths / widths.sum(), 12)))
+        if key not in self._projections:
+            inner = Legendre(self.cell_terms)
+            nodes, weights = np.polynomial.legendre.leggauss(16 + self.cell_terms + 2 * basis.terms)
+            u, w = 0.5 * (nodes + 1.0), 0.5 * weights
+            start, span = self.edges[first], self.edges[last] - self.edges[first]
+            blocks = []
+            for a, width in zip(self.edges[first:last], widths, strict=True):
+                outer = basis.values((a + width * u - start) / span)
+                blocks.append(np.sqrt(width / span) * (outer * w) @ inner.values(u).T)
+            matrix = np.array(blocks)
+            # the cells' finite terms lose a trace of variance; give it back
+            flat = matrix.transpose(1, 0, 2).reshape(basis.terms, -1)
+            factor = np.linalg.cholesky(flat @ flat.T)
+            flat = np.linalg.solve(factor, flat)
+            shape = (basis.terms, len(widths), self.cell_terms)
+            self._projections[key] = flat.reshape(shape).transpose(1, 0, 2)
+        return self._projections[key]
+
+    def carry(
+        self, source: int, values: FloatArray, first: int, last: int, block: int
+    ) -> FloatArray:
+        """Standardised Gauss-Markov values (count,) at the end of cells first ... last - 1.
+
+        u_b = exp(-h/tau) u_a + sqrt(2/tau) int exp(-(b-s)/tau) dW; what the cell's terms miss of
+        the integral's variance is made up by one independent normal, so that the law at every cell
+        boundary is exact.
+        """
+        law = self.sources[source]
+        assert law.time_constant is not None
+        for cell in range(first, last):
+            width = self.edges[cell + 1] - self.edges[cell]
+            gains = _end_gains(law.time_constant, width, self.cell_terms)
+            drawn = self.cell(source, cell, block, values.size, self.cell_terms + 1)
+            missing = -np.expm1(-2.0 * width / law.time_constant) - gains @ gains
+            fresh = gains @ drawn[:-1] + np.sqrt(max(missing, 0.0)) * drawn[-1]
+            values = np.exp(-width / law.time_constant) * values + self.scales[source] * fresh
+        return values
+
+
+def _end_gains(time_constant: float, width: float, terms: int) -> FloatArray:
+    """sqrt(2/tau) int_a^b exp(-(b-s)/tau) phi_k(s) ds for k = 1 ... terms."""
+    ratio = width / time_constant
+    nodes, weights = np.polynomial.legendre.leggauss(32 + 2 * terms)
+    # the kernel lives in the last few time constants of the cell
+    low = max(0.0, 1.0 - 40.0 / ratio) if ratio > 40.0 else 0.0
+    u = low + 0.5 * (1.0 - low) * (nodes + 1.0)
+    w = 0.5 * (1.0 - low) * weights
+    kernel = np.sqrt(2.0 * ratio) * np.exp(-ratio * (1.0 - u))
+    return Legendre(terms).values(u) @ (w * kernel)
+
+
+def blocks_of(count: int) -> Sequence[tuple[int, int]]:
+    """(block number, members in it) for a number of members."""
+    return [(b, min(BLOCK, count - b * BLOCK)) for b in range((count + BLOCK - 1) // BLOCK)]

@@ -8,7 +8,6 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.stats import mannwhitneyu
 
 from nipc.arrays import BoolArray, FloatArray
 
@@ -92,6 +91,8 @@ def _regions(ok: BoolArray, germ: FloatArray, names: Sequence[str]) -> tuple[Fai
     """
     if ok.all() or not ok.any() or not germ.shape[1]:
         return ()
+    from scipy.stats import mannwhitneyu  # slow to import, and seldom needed
+
     spread = germ.std(axis=0)
     used = spread > 0.0
     scaled = (germ[:, used] - germ[:, used].mean(axis=0)) / spread[used]

@@ -33,6 +33,7 @@ _CHUNK_SECONDS = 0.15  # work handed out at once, so that messages cost nothing 
 _CHUNK_UNITS = 256
 _POLL = 0.2
 _START_SECONDS = 120.0
+_TAIL = 1 << 14  # bytes of its error output that are looked at when a worker died
 _THREADS = (
     "OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "BLIS_NUM_THREADS",
     "VECLIB_MAXIMUM_THREADS", "NUMEXPR_NUM_THREADS", "NUMBA_NUM_THREADS",
@@ -120,13 +121,20 @@ class Worker:
         text = _ending(code)
         with contextlib.suppress(OSError):
             log = self._log.fileno()
-            tail = os.pread(log, 2000, max(0, os.fstat(log).st_size - 2000))
-            lines = [line.strip() for line in tail.decode(errors="replace").splitlines()]
-            lines = [line for line in lines if line]
-            if lines:
-                text += ": " + " | ".join(lines[-4:])[:400]
+            tail = os.pread(log, _TAIL, max(0, os.fstat(log).st_size - _TAIL))
+            words = _last_words(tail.decode(errors="replace"))
+            text += f": {words}" if words else ""
         self._log.close()
         return text
+
+
+def _last_words(log: str) -> str:
+    """Where a fatal signal struck, if the interpreter could say so, or else the last lines."""
+    _, found, stack = log.rpartition("(most recent call first):\n")
+    if found:
+        return stack.split("\n", 1)[0].strip()
+    lines = [line.strip() for line in log.splitlines() if line.strip()]
+    return " | ".join(lines[-3:])[:300]
 
 
 def _ending(code: int | None) -> str:

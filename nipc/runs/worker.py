@@ -89,7 +89,7 @@ def _end() -> None:
 def main(file: int) -> None:
     """Serve the master at the other end of this file descriptor."""
     os.set_inheritable(file, False)
-    faulthandler.enable()
+    faulthandler.enable(all_threads=False)
     connection = Connection(file)
     out = Outbox(connection)
     inbox: queue.SimpleQueue[Any] = queue.SimpleQueue()

@@ -178,7 +178,7 @@ def test_a_ledger_of_a_later_version_is_refused_and_left_alone(tmp_path):
 
 
 def _open_as_nobody(folder):
-    """What Ledger.open says to a user without rights there; a process of its own, for the rights."""
+    """What Ledger.open says to a user without rights there; in a process that gives up its own."""
     reader, writer = os.pipe()
     child = os.fork()
     if child == 0:

@@ -1,0 +1,1 @@
+"""Where the propagator is run: families of nodes; each is one file."""

@@ -1,0 +1,30 @@
+"""The figures of a result: one function each, from a dataset to its axes.
+
+Each raises KeyError, saying what is missing, when the result cannot fill it; `catalogue` tells
+beforehand which figures a result can fill.
+"""
+
+from nipc.report.figures.bands import bands
+from nipc.report.figures.catalogue import Entry, catalogue
+from nipc.report.figures.chain import chain
+from nipc.report.figures.confinement import confinement
+from nipc.report.figures.drivers import driver_ranking, driver_shares
+from nipc.report.figures.failures import failures
+from nipc.report.figures.spreading import diffusion, nonlinear_share, spread_rate
+from nipc.report.figures.trust import check_error, direct_against_expansion
+
+__all__ = [
+    "Entry",
+    "bands",
+    "catalogue",
+    "chain",
+    "check_error",
+    "confinement",
+    "diffusion",
+    "direct_against_expansion",
+    "driver_ranking",
+    "driver_shares",
+    "failures",
+    "nonlinear_share",
+    "spread_rate",
+]

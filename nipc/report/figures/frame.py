@@ -1,0 +1,164 @@
+"""What every figure shares: its axes, time axis, legend row and the mark of the trust horizon."""
+
+from __future__ import annotations
+
+import textwrap
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+import xarray as xr
+from matplotlib.artist import Artist
+from matplotlib.axes import Axes
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.figure import Figure
+from matplotlib.layout_engine import ConstrainedLayoutEngine
+from matplotlib.patches import Patch
+from matplotlib.transforms import blended_transform_factory
+
+from nipc.report import reading
+from nipc.report.numbers import amount, power_of_ten
+from nipc.report.style import HEIGHT, LIGHT, WIDTH
+
+_CHARACTER = 0.0135  # width of a legend's character over that of the axes, generous
+
+
+def new_axes(ax: Axes | None, height: float = HEIGHT) -> Axes:
+    """The axes given, or those of a new figure."""
+    return ax if ax is not None else new_figure(1, height)[0]
+
+
+def new_figure(rows: int, height: float, ratios: Sequence[float] | None = None) -> list[Axes]:
+    """Axes one above the other that share their horizontal axis."""
+    figure = Figure(
+        figsize=(WIDTH, height), layout=ConstrainedLayoutEngine(w_pad=0.06, h_pad=0.06)
+    )
+    FigureCanvasAgg(figure)
+    grid = figure.subplots(rows, 1, sharex=True, squeeze=False, height_ratios=ratios)
+    return list(grid[:, 0])
+
+
+def printable(name: str) -> str:
+    """A name as a label: on one line, not too long, and not hidden by a leading underscore."""
+    shown = " ".join(str(name).split()) or "(no name)"
+    if len(shown) > 34:
+        shown = shown[:32] + "…"
+    return "\u200a" + shown if shown.startswith("_") else shown
+
+
+def with_unit(label: str, unit: str) -> str:
+    """An axis label: what, and in which unit."""
+    return f"{label} ({unit})" if unit and unit != "1" else label
+
+
+def quantity_label(dataset: xr.Dataset, quantity: str, form: str = "{}") -> str:
+    """A quantity and its unit for a vertical axis, on as many lines as it needs."""
+    unit = reading.unit(dataset, quantity)
+    return textwrap.fill(with_unit(form.format(printable(quantity)), unit), 30)
+
+
+def time_axis(ax: Axes, dataset: xr.Dataset) -> None:
+    """Label and limits of a time axis."""
+    times = reading.times(dataset)
+    ax.set_xlabel(with_unit("time", reading.time_unit(dataset)))
+    if times[-1] > times[0]:
+        ax.set_xlim(float(times[0]), float(times[-1]))
+
+
+def offset_in_label(ax: Axes) -> None:
+    """A large offset of the vertical axis goes where it cannot meet the legend."""
+    ax.yaxis.get_offset_text().set_visible(False)
+    formatter = ax.yaxis.get_major_formatter()
+    formatter.set_locs(list(ax.get_yticks()))
+    offset = getattr(formatter, "get_offset", lambda: "")()
+    if offset:
+        ax.set_ylabel(f"{ax.get_ylabel()}\n{_plain_offset(offset)}", linespacing=1.3)
+
+
+def _plain_offset(offset: str) -> str:
+    """ "1e-6-4.72" in words: x 10^-6, less 4.72."""
+    cleaned = offset.replace("−", "-")
+    factor, rest = "", cleaned
+    if cleaned.startswith("1e"):
+        cut = next((i for i, c in enumerate(cleaned) if c in "+-" and i > 2), len(cleaned))
+        exponent, rest = cleaned[2:cut], cleaned[cut:]
+        factor = f"× {power_of_ten(int(exponent))}"
+    if rest.startswith("+"):
+        rest = "+ " + rest[1:]
+    elif rest.startswith("-"):
+        rest = "− " + rest[1:]
+    return f"{factor} {rest}".strip()
+
+
+def legend(
+    ax: Axes, handles: Sequence[Any], labels: Sequence[str], raised: bool = False
+) -> None:
+    """A row of keys above the axes, where no curve can be; as many columns as fit."""
+    if not handles:
+        return
+    longest = max(len(label) for label in labels)
+    columns = int(np.clip(1.0 / ((longest + 6) * _CHARACTER), 1, len(labels)))
+    ax.legend(
+        list(handles),
+        list(labels),
+        loc="lower left",
+        bbox_to_anchor=(0.0, 1.1 if raised else 1.03),
+        ncols=columns,
+    )
+
+
+def mark_trust(ax: Axes, dataset: xr.Dataset, quantity: str) -> bool:
+    """Shade what lies past the trust horizons and say so above the axes; whether it did."""
+    trust = reading.trust(dataset, quantity)
+    start, end = ax.get_xlim()
+    unit = reading.time_unit(dataset)
+    if not trust.checked:
+        _zone(ax, start, end, "not")
+        _trust_label(ax, 0.0, "not checked against direct runs: no trust horizon")
+        return True
+    paths = trust.paths if np.isfinite(trust.paths) else float(reading.times(dataset)[0])
+    last = float(reading.times(dataset)[-1])
+    if not trust.mark(last):
+        return False
+    _zone(ax, paths, trust.distribution, "distribution")
+    _zone(ax, trust.distribution, last, "not")
+    if trust.distribution > paths:
+        words = f"trust horizon: paths {amount(paths, unit, 3)}, "
+        words += f"distribution {amount(trust.distribution, unit, 3)}"
+    else:
+        words = f"trust horizon {amount(paths, unit, 3)}"
+    ax.axvline(paths, color=LIGHT["ink"], lw=0.9, zorder=3)
+    fraction = ax.transAxes.inverted().transform(ax.transData.transform((paths, ax.get_ylim()[0])))
+    _trust_label(ax, float(fraction[0]), words)
+    return True
+
+
+def _zone(ax: Axes, low: float, high: float, kind: str) -> None:
+    if not high > low:
+        return
+    hatch = {"distribution": "/", "not": "//"}[kind]
+    band = blended_transform_factory(ax.transData, ax.transAxes)
+    alpha = 0.11 if kind == "distribution" else 0.22
+    shape: dict[str, Any] = {"transform": band, "lw": 0.0, "zorder": 2.5}
+    ax.fill_between([low, high], 0, 1, facecolor=LIGHT["doubt"], alpha=alpha, **shape)
+    ax.fill_between([low, high], 0, 1, facecolor="none", edgecolor=LIGHT["doubt"], alpha=0.5,
+                    hatch=hatch, **shape)
+
+
+def _trust_label(ax: Axes, fraction: float, words: str) -> None:
+    """Above the axes, beginning or ending at the horizon, wherever it fits."""
+    text = f"▾ {words}"
+    width = len(text) * _CHARACTER
+    side, at = "left", fraction
+    if fraction + width > 1.0:
+        side, at = ("right", fraction) if fraction > width else ("right", 1.0)
+        text = f"{words} ▾" if fraction > width else words
+    ax.text(
+        at, 1.015, text, transform=ax.transAxes, ha=side, va="bottom", fontsize=9,
+        color=LIGHT["soft"],
+    )
+
+
+def patch_key(ink: str, **how: Any) -> Artist:
+    """A filled key for the legend."""
+    return Patch(facecolor=LIGHT[ink], **how)

@@ -1,0 +1,221 @@
+"""One HTML file that holds a whole result: no network, no scripts needed, made to be reviewed."""
+
+from __future__ import annotations
+
+from dataclasses import asdict, dataclass, field
+from importlib.resources import files
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import xarray as xr
+
+from nipc.report import headline, hover, reading, tables
+from nipc.report.numbers import amount, number, seconds
+from nipc.report.style import DARK, LIGHT
+
+POINTS = 600
+"""Times kept in the page; figures a few inches wide show no more."""
+
+SECTIONS = (
+    ("spread", "Where it goes", ("bands",)),
+    ("stays", "Stays or leaves", ("confinement",)),
+    ("drivers", "What drives it", ("driver_shares", "driver_ranking")),
+    ("kind", "Kind of spreading", ("diffusion", "spread_rate", "nonlinear_share")),
+    ("trust", "How far to trust it", ("check_error", "direct_against_expansion")),
+    ("cost", "What it cost", ("chain", "failures")),
+)
+
+
+@dataclass(frozen=True)
+class Plate:
+    """A numbered figure of the page."""
+
+    key: str
+    number: int
+    kind: str
+    quantity: str | None
+    caption: str
+    markup: Any
+    frame: dict[str, Any] | None
+    lines: list[dict[str, Any]]
+
+
+@dataclass
+class Section:
+    """A section: its figures and tables."""
+
+    key: str
+    title: str
+    plates: list[Plate] = field(default_factory=list)
+    tables: list[tables.Table] = field(default_factory=list)
+
+
+def write_page(dataset: xr.Dataset, path: Path) -> Path:
+    """Write the page of a result to `path`; whatever the result lacks is left out.
+
+    The file is whole by itself and below 5 MB. Returns the path.
+    """
+    path = Path(path)
+    text = render(dataset)
+    part = path.with_name(path.name + ".part")
+    part.write_text(text, encoding="utf-8")
+    part.replace(path)
+    return path
+
+
+def render(dataset: xr.Dataset) -> str:
+    """The page as text."""
+    from jinja2 import Environment, PackageLoader, StrictUndefined
+    from markupsafe import Markup
+
+    environment = Environment(
+        loader=PackageLoader("nipc.report", "templates"), autoescape=True,
+        undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True,
+    )
+    small = thinned(dataset)
+    sections = _sections(small)
+    templates = files("nipc.report") / "templates"
+    return environment.get_template("page.html.j2").render(
+        title=str(dataset.attrs.get("title") or "A study"),
+        findings=reading.listed(dataset, "findings") or [],
+        columns=headline.columns(dataset),
+        rows=headline.rows(dataset),
+        cost=headline.cost(dataset),
+        horizon=_horizon(dataset),
+        sections=sections,
+        values=[tables.moments(dataset, q) for q in reading.quantities(dataset)],
+        study=str(dataset.attrs.get("study", "")),
+        provenance=_provenance(dataset),
+        cautions=_cautions(dataset),
+        clock={"times": hover.compact(reading.times(small)), "unit": reading.time_unit(small)},
+        css=Markup((templates / "page.css").read_text("utf-8")),
+        script=Markup((templates / "page.js").read_text("utf-8")),
+        light=LIGHT, dark=DARK,
+    )
+
+
+def thinned(dataset: xr.Dataset) -> xr.Dataset:
+    """At most so many times that the page stays small however many quantities there are."""
+    count = dataset.sizes["time"]
+    limit = int(np.clip(4 * POINTS / max(dataset.sizes["quantity"], 1), 100, POINTS))
+    if count <= limit:
+        return dataset
+    return dataset.isel(time=np.unique(np.linspace(0, count - 1, limit).round().astype(int)))
+
+
+def _sections(dataset: xr.Dataset) -> list[Section]:
+    from markupsafe import Markup
+
+    from nipc.report.figures import catalogue
+    from nipc.report.svg import inline
+
+    built = {key: Section(key, title) for key, title, _ in SECTIONS}
+    entries = list(catalogue(dataset))
+    counter = 0
+    for key, _, kinds in SECTIONS:
+        for kind in kinds:
+            for entry in (e for e in entries if e.name == kind):
+                counter += 1
+                axes = entry.draw()
+                first = axes[0] if isinstance(axes, tuple) else axes
+                drawing = inline(first.figure, f"f{counter}")
+                lines = hover.lines(dataset, entry.name, entry.quantity) if drawing.frame else []
+                built[key].plates.append(Plate(
+                    f"f{counter}", counter, entry.name, entry.quantity, entry.caption,
+                    Markup(drawing.markup), asdict(drawing.frame) if drawing.frame else None,
+                    hover.block(lines)))
+    for key, maker in (("stays", tables.exits), ("drivers", tables.allowances),
+                       ("cost", tables.arcs)):
+        table = maker(dataset)
+        if table is not None:
+            built[key].tables.append(table)
+    return [section for section in built.values() if section.plates or section.tables]
+
+
+def _horizon(dataset: xr.Dataset) -> str:
+    times, unit = reading.times(dataset), reading.time_unit(dataset)
+    return f"from {number(times[0], 5)} to {amount(times[-1], unit, 5)}"
+
+
+def _provenance(dataset: xr.Dataset) -> list[tuple[str, str]]:
+    held = dataset.attrs
+    rows: list[tuple[str, str]] = []
+    if "created" in held:
+        rows.append(("made", str(held["created"])))
+    if "seed" in held:
+        rows.append(("seed", str(held["seed"])))
+    for name, label in (("propagator_runs", "runs of the propagator"),
+                        ("run_equivalents", "run-equivalents"), ("budget", "budget of runs"),
+                        ("failed_runs", "failed runs")):
+        if name in held:
+            rows.append((label, number(float(held[name]), 6)))
+    if "tolerance" in held:
+        rows.append(("tolerance", f"{number(float(held['tolerance']))} of the spread"))
+    if "monitoring_interval" in held:
+        rows.append(("monitoring interval", amount(float(held["monitoring_interval"]),
+                                                   reading.time_unit(dataset), 3)))
+    if "wall_time" in held:
+        rows.append(("wall time", seconds(float(held["wall_time"]))))
+    versions = reading.listed(dataset, "versions")
+    if isinstance(versions, dict):
+        rows.append(("versions", ", ".join(f"{k} {v}" for k, v in versions.items())))
+    return rows
+
+
+def _cautions(dataset: xr.Dataset) -> list[str]:
+    """What this very result should be read with."""
+    unit, said = reading.time_unit(dataset), []
+    for quantity in reading.quantities(dataset):
+        trust = reading.trust(dataset, quantity)
+        if not trust.checked:
+            said.append(f"{quantity}: not checked against direct runs; nothing said of it is "
+                        "confirmed.")
+        elif trust.mark(trust.end):
+            words = f"{quantity}: single paths agree with direct runs up to "
+            words += amount(trust.paths, unit, 3) if np.isfinite(trust.paths) else "no time"
+            if trust.distribution > trust.paths:
+                words += f", its distribution up to {amount(trust.distribution, unit, 3)}"
+            said.append(words + "; what is shown later is marked, and not confirmed.")
+    interval = dataset.attrs.get("monitoring_interval")
+    if interval is not None and reading.has(dataset, "survival_probability"):
+        said.append(f"Boxes are watched every {amount(float(interval), unit, 3)}; a motion that "
+                    "leaves and comes back in between is not seen, so that survival may be "
+                    "overstated.")
+    failed = int(dataset.attrs.get("failed_runs", 0))
+    if failed:
+        said.append(f"{failed} runs of the propagator failed; if they failed because of where they "
+                    "were, the answers lean away from there.")
+    return said
+
+
+def save_figures(
+    dataset: xr.Dataset, folder: Path, formats: tuple[str, ...] = ("png", "svg", "pdf")
+) -> list[Path]:
+    """Save every figure that the result can fill into `folder`; the files written."""
+    from nipc.report.figures import catalogue
+    from nipc.report.style import styled
+
+    folder = Path(folder)
+    folder.mkdir(parents=True, exist_ok=True)
+    names, written = reading.quantities(dataset), []
+    for entry in catalogue(dataset):
+        axes = entry.draw()
+        first = axes[0] if isinstance(axes, tuple) else axes
+        stem = entry.name
+        if entry.quantity is not None:
+            stem += f"-{_file_name(entry.quantity, names)}"
+        for form in formats:
+            target = folder / f"{stem}.{form}"
+            with styled():
+                first.figure.savefig(target, dpi=200)
+            written.append(target)
+    return written
+
+
+def _file_name(quantity: str, names: list[str]) -> str:
+    """A quantity's name as part of a file name: letters and digits only, and unambiguous."""
+    plain = "".join(c if c.isascii() and c.isalnum() else "_" for c in quantity)[:40]
+    same = [n for n in names if "".join(
+        c if c.isascii() and c.isalnum() else "_" for c in n)[:40] == plain]
+    return plain if len(same) == 1 and plain.strip("_") else f"{plain}_{names.index(quantity) + 1}"

@@ -1,0 +1,118 @@
+"""The page's smaller tables: values over time, exits, allowances, arcs."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import xarray as xr
+
+from nipc.report import reading
+from nipc.report.numbers import amount, number, percent, probability
+
+MOMENTS = 9
+
+
+@dataclass(frozen=True)
+class Table:
+    """Heads and rows of text; the first cell of a row is its head."""
+
+    caption: str
+    heads: tuple[str, ...]
+    rows: tuple[tuple[str, ...], ...]
+
+
+def moments(dataset: xr.Dataset, quantity: str) -> Table:
+    """A quantity's answers at some times, for those who read numbers or no figures at all."""
+    times, trust = reading.times(dataset), reading.trust(dataset, quantity)
+    picks = np.unique(np.linspace(0, len(times) - 1, min(MOMENTS, len(times))).round().astype(int))
+    found: list[tuple[str, list[str]]] = []
+    for name, head in (("mean", "mean"), ("std", "std")):
+        values = reading.series(dataset, name, quantity)
+        if values is not None:
+            found.append((head, [number(values[i], 6 if name == "mean" else 3) for i in picks]))
+    for level in (0.025, 0.975):
+        values = reading.quantile(dataset, level, quantity)
+        if values is not None:
+            found.append((f"{100 * level:g} %", [number(values[i], 6) for i in picks]))
+    for name, head in (("inside_probability", "inside"), ("survival_probability", "all the time")):
+        values = reading.series(dataset, name, quantity)
+        if values is not None:
+            found.append((f"P({head})", [probability(values[i]) for i in picks]))
+    shares = reading.shares(dataset, "driver_total", quantity)
+    if shares is not None:
+        names = reading.sources(dataset)
+        found.append(("main driver", [_leader(shares[:, i], names) for i in picks]))
+    unit = reading.time_unit(dataset)
+    heads = (f"time ({unit})" if unit else "time", *(head for head, _ in found))
+    rows = tuple(
+        (f"{number(times[i], 4)}\u202f{trust.mark(times[i])}".rstrip(),
+         *(column[row] for _, column in found))
+        for row, i in enumerate(picks)
+    )
+    q_unit = reading.unit(dataset, quantity)
+    return Table(quantity + (f", in {q_unit}" if q_unit else ""), heads, rows)
+
+
+def _leader(shares: np.ndarray, names: list[str]) -> str:
+    if np.isnan(shares).all():
+        return "–"
+    index = int(np.nanargmax(shares))
+    return f"{names[index]} {percent(float(shares[index]))}"
+
+
+def exits(dataset: xr.Dataset) -> Table | None:
+    """When members leave: quantiles of the exit time, and who drives the leaving."""
+    boxed = [q for q in reading.quantities(dataset) if reading.box(dataset, q) is not None]
+    if not boxed or not reading.has(dataset, "exit_time_quantile"):
+        return None
+    levels, unit = np.asarray(dataset["level"].values, float), reading.time_unit(dataset)
+    rows = []
+    for quantity in boxed:
+        times = reading.series(dataset, "exit_time_quantile", quantity)
+        if times is None:
+            continue
+        cells = [amount(t, unit, 3) if np.isfinite(t) else "not within the horizon" for t in times]
+        driver = reading.series(dataset, "exit_driver_total", quantity)
+        cells.append("–" if driver is None else _leader(driver, reading.sources(dataset)))
+        rows.append((quantity, *cells))
+    heads = ("quantity", *(f"{100 * level:g} % have left by" for level in levels),
+             "leaving is driven by")
+    return Table("When members leave their box", heads, tuple(rows)) if rows else None
+
+
+def allowances(dataset: xr.Dataset) -> Table | None:
+    """The largest intensity of each source that still keeps each box."""
+    boxed = [q for q in reading.quantities(dataset) if reading.box(dataset, q) is not None]
+    if not boxed or not reading.has(dataset, "allowance"):
+        return None
+    rows = []
+    for index, source in enumerate(reading.sources(dataset)):
+        cells = []
+        for quantity in boxed:
+            part = dataset["allowance"].transpose("source", ...).isel(source=index)
+            value = float(part.isel(quantity=reading.position(dataset, quantity)))
+            cells.append("no limit found" if np.isinf(value) else number(value, 3))
+        rows.append((source, *cells))
+    return Table("Largest intensity (of the start and parameters: scale) that keeps the box, the "
+                 "others as they are", ("source", *boxed), tuple(rows))
+
+
+def arcs(dataset: xr.Dataset) -> Table | None:
+    """Every arc of the chain."""
+    if not (reading.has(dataset, "arc_start") and reading.has(dataset, "arc_end")):
+        return None
+    wanted = {"arc_start": "from", "arc_end": "to", "arc_degree": "degree", "arc_terms": "terms",
+              "arc_runs": "runs", "arc_failed": "failed", "arc_error": "error",
+              "arc_note": "note"}
+    held = [name for name in wanted if name in dataset]
+    digits = {"arc_error": 2, "arc_start": 5, "arc_end": 5}
+    rows = []
+    for index in range(dataset.sizes["arc"]):
+        cells = [str(index + 1)]
+        for name in held:
+            value = dataset[name].values[index]
+            text = str(value) if name == "arc_note" else number(float(value), digits.get(name, 4))
+            cells.append(text)
+        rows.append(tuple(cells))
+    return Table("Arcs", ("arc", *(wanted[name] for name in held)), tuple(rows))

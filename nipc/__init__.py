@@ -1,1 +1,35 @@
-"""nipc."""
+"""Noise and uncertain starts pushed through a propagator that stays a black box."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from nipc.answers.result import Result, load_result
+    from nipc.errors import NipcError
+    from nipc.problem.study import Study
+    from nipc.workflow import load_study, plan, report, run
+
+__version__ = "0.1.0"
+
+_HOMES = {
+    "NipcError": "nipc.errors",
+    "Result": "nipc.answers.result",
+    "Study": "nipc.problem.study",
+    "load_result": "nipc.answers.result",
+    "load_study": "nipc.workflow",
+    "plan": "nipc.workflow",
+    "report": "nipc.workflow",
+    "run": "nipc.workflow",
+}
+
+__all__ = ["NipcError", "Result", "Study", "load_result", "load_study", "plan", "report", "run"]
+
+
+def __getattr__(name: str) -> Any:
+    # heavy imports wait until something is asked for: `import nipc` stays quick
+    if name not in _HOMES:
+        raise AttributeError(f"module 'nipc' has no attribute {name!r}")
+    from importlib import import_module
+
+    return getattr(import_module(_HOMES[name]), name)

@@ -1,0 +1,125 @@
+"""What an ensemble says: quantiles, inside and survival probability, exit times, some members."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+import numpy as np
+
+from nipc.answers.boxes import Box
+from nipc.answers.confinement import Confinement, ConfinementAccumulator
+from nipc.answers.moments import MomentAccumulator
+from nipc.answers.quantiles import QuantileAccumulator
+from nipc.answers.table import LEVELS, ResultTable
+from nipc.arrays import FloatArray
+from nipc.problem.study import Study
+
+SHOWN = 60
+
+
+def boxes_of(study: Study) -> tuple[list[Box], list[Box]]:
+    """The boxes of single quantities and the joint ones."""
+    single = {
+        q.name: Box.single(q.name, i, q.box[0], q.box[1])
+        for i, q in enumerate(study.quantity)
+        if q.box is not None
+    }
+    joint = [Box.joint(j.name, [single[n] for n in j.quantities]) for j in study.joint_box]
+    return list(single.values()), joint
+
+
+def add_ensemble(
+    table: ResultTable, blocks: Iterable[tuple[FloatArray, FloatArray | None]], margin: FloatArray
+) -> MomentAccumulator:
+    """Gather the answers of members given in blocks of (values (n, T, Q), ended (n,) or None).
+
+    `margin` (T, Q) is the 95 % half-width of the path error, which widens the intervals of
+    probabilities. Returns the moments, which the diffusion law is read from.
+    """
+    study = table.study
+    single, joint = boxes_of(study)
+    times = study.clock.times
+    confinement = ConfinementAccumulator(times, [*single, *joint], np.nan_to_num(margin))
+    quantiles, moments = QuantileAccumulator(), MomentAccumulator()
+    shown: FloatArray | None = None
+    for values, ended in blocks:
+        confinement.update(values, ended)
+        quantiles.update(values)
+        moments.update(values)
+        if shown is None:
+            shown = values[:SHOWN].copy()
+    assert shown is not None
+    names = "quantile of the quantity"
+    table.add(
+        "quantile",
+        ("level", "quantity", "time"),
+        np.swapaxes(quantiles.quantiles(LEVELS), 1, 2),
+        "as the quantity",
+        names,
+    )
+    table.add(
+        "member_quantity",
+        ("member", "quantity", "time"),
+        np.swapaxes(shown, 1, 2),
+        "as the quantity",
+        "some members of the ensemble",
+    )
+    result = confinement.result()
+    _add_boxes(table, result, [b.columns[0] for b in single])
+    if joint:
+        _add_joint(table, result, len(single))
+    return moments
+
+
+def _add_boxes(table: ResultTable, result: Confinement, columns: list[int]) -> None:
+    study = table.study
+    count, times = len(study.quantity), study.clock.times
+    ends = np.full((2, count), np.nan)
+    for i, q in enumerate(study.quantity):
+        if q.box is not None:
+            ends[:, i] = q.box
+    table.by_quantity("box_low", ends[0], "as the quantity", "low end of the box")
+    table.by_quantity("box_high", ends[1], "as the quantity", "high end of the box")
+
+    def spread(values: FloatArray) -> FloatArray:
+        full = np.full((times.size, count), np.nan)
+        full[:, columns] = values[: len(columns)].T
+        return full
+
+    for name, value, interval, words in (
+        ("inside_probability", result.inside, result.inside_interval, "P(in the box at t)"),
+        (
+            "survival_probability",
+            result.survival,
+            result.survival_interval,
+            "P(in the box at all output times up to t)",
+        ),
+    ):
+        ends_ = type(interval)(spread(interval.low), spread(interval.high))
+        table.over_time(name, spread(value), "1", words, ends_)
+    exit_times, exit_interval = result.exit_quantiles(LEVELS)
+    full = np.full((3, len(LEVELS), count), np.nan)
+    for k, values in enumerate((exit_times, exit_interval.low, exit_interval.high)):
+        full[k][:, columns] = values[:, : len(columns)]
+    for suffix, values in zip(("", "_low", "_high"), full, strict=True):
+        table.add(
+            f"exit_time_quantile{suffix}",
+            ("level", "quantity"),
+            values,
+            study.clock.unit,
+            "time by which this share has left the box; infinite when later than the horizon",
+        )
+
+
+def _add_joint(table: ResultTable, result: Confinement, first: int) -> None:
+    for name, value, interval, words in (
+        ("joint_inside_probability", result.inside, result.inside_interval, "P(in all at t)"),
+        (
+            "joint_survival_probability",
+            result.survival,
+            result.survival_interval,
+            "P(in all at all output times up to t)",
+        ),
+    ):
+        ends = type(interval)(interval.low[first:].T, interval.high[first:].T)
+        table.over_time(name, value[first:].T, "1", words, ends, dim="joint")

@@ -1,0 +1,308 @@
+"""The findings in plain sentences: stays or leaves, since when, why, how sure, what to change.
+
+Each sentence carries its numbers with their intervals, speaks of a time that held-out runs have
+confirmed, and says up to when that is.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import xarray as xr
+
+from nipc.answers.wording import estimate, number, percent
+
+KIND_WORDS = {"noise": "the noise source", "start": "the uncertain", "parameter": "the parameter"}
+
+
+def findings(dataset: xr.Dataset) -> list[str]:
+    """Sentences on each quantity of a result, then on the joint boxes and on the runs."""
+    sentences: list[str] = []
+    for name in dataset["quantity"].values:
+        view = _View(dataset, str(name))
+        parts = (_confinement, _spread, _law, _driver, _allowance, _nonlinear)
+        said = [part(view) for part in parts]
+        sentences += [f"{s} {view.trust.clause}" for s in said if s]
+    sentences += _joint(dataset)
+    sentences += _monitoring(dataset) + _runs(dataset)
+    return sentences
+
+
+@dataclass(frozen=True)
+class _Trust:
+    """Up to which output time figures are stated, and how that is said."""
+
+    index: int
+    clause: str
+    confirmed: bool
+
+
+class _View:
+    """One quantity's part of a dataset; what is not there reads as NaN."""
+
+    def __init__(self, dataset: xr.Dataset, name: str) -> None:
+        self.data = dataset.sel(quantity=name)
+        self.name = name
+        self.unit = str(self.data["quantity_unit"].item()) if "quantity_unit" in self.data else ""
+        self.clock = _clock(dataset)
+        self.times = np.asarray(dataset["time"].values, float)
+        self.trust = _trust(dataset, self.data)
+
+    @property
+    def unconfirmed(self) -> str:
+        """A mark for what is said of the end of the horizon, where that is not trusted."""
+        whole = self.trust.confirmed and self.trust.index == self.times.size - 1
+        return "" if whole else " (this is of the end of the horizon, and not confirmed)"
+
+    @property
+    def when(self) -> str:
+        return f"{number(float(self.times[self.trust.index]))} {self.clock}".strip()
+
+    def value(self, variable: str, **labels: Any) -> float:
+        """A number at the trusted time, at labels; NaN where the result has none."""
+        if variable not in self.data:
+            return float("nan")
+        array = self.data[variable]
+        if "time" in array.dims:
+            array = array.isel(time=self.trust.index)
+        return float(array.sel(**labels).item()) if labels else float(array.item())
+
+    def triple(self, variable: str, **labels: Any) -> tuple[float, float, float]:
+        """(value, low, high)."""
+        return (
+            self.value(variable, **labels),
+            self.value(f"{variable}_low", **labels),
+            self.value(f"{variable}_high", **labels),
+        )
+
+    def source(self, name: str) -> str:
+        """`the noise source 'thrust'`."""
+        kind = "noise"
+        if "source_kind" in self.data.coords:
+            kind = str(self.data["source_kind"].sel(source=name).item())
+        if kind == "start":
+            return "the uncertain start"
+        return f"{KIND_WORDS.get(kind, 'the source')} {name!r}"
+
+    def ranked(self, variable: str) -> list[tuple[str, float]]:
+        """Sources by a share at the trusted time, largest first."""
+        if variable not in self.data:
+            return []
+        pairs = [(str(s), self.value(variable, source=s)) for s in self.data["source"].values]
+        return sorted((p for p in pairs if np.isfinite(p[1])), key=lambda p: -p[1])
+
+
+def _clock(dataset: xr.Dataset) -> str:
+    return str(dataset["time"].attrs.get("units", dataset.attrs.get("time_unit", "")))
+
+
+def _trust(dataset: xr.Dataset, part: xr.Dataset) -> _Trust:
+    times = np.asarray(dataset["time"].values, float)
+    clock, last = _clock(dataset), times.size - 1
+    paths = float(part["trust_horizon"].item()) if "trust_horizon" in part else np.nan
+    spread = paths
+    if "trust_horizon_distribution" in part:
+        spread = float(part["trust_horizon_distribution"].item())
+        spread = paths if np.isnan(spread) else max(spread, paths)
+    if np.isnan(spread):
+        return _Trust(last, "[not checked against direct runs: no trust horizon]", False)
+    index = int(np.searchsorted(times, spread * (1.0 + 1e-12), side="right")) - 1
+    if index < 0 or spread <= times[0]:
+        return _Trust(0, "[trust horizon: none, direct runs differ from the start on]", False)
+    whole = index == last
+    clause = f"trust horizon {number(spread)} {clock}"
+    clause += ", the whole of it" if whole else f" of {number(float(times[-1]))} {clock}"
+    if paths < spread:
+        clause += f"; for single paths {number(paths)} {clock}"
+    return _Trust(index, f"[{clause}]", True)
+
+
+def _confinement(view: _View) -> str | None:
+    low, high = view.value("box_low"), view.value("box_high")
+    survival = view.triple("survival_probability")
+    if np.isnan(survival[0]):
+        return None
+    box = _box(low, high, view.unit)
+    sure_low = survival[1] if np.isfinite(survival[1]) else survival[0]
+    sure_high = survival[2] if np.isfinite(survival[2]) else survival[0]
+    verb = "may leave" if sure_low < 0.99 else "stays in"
+    verb = "leaves" if sure_high < 0.5 else verb
+    text = (
+        f"{view.name} {verb} its box ({box}): the probability of having stayed in it up to"
+        f" {view.when} is {estimate(*survival)}"
+    )
+    inside = view.triple("inside_probability")
+    if np.isfinite(inside[0]) and inside[0] - survival[0] > 0.005:
+        text += f", that of being in it then {estimate(*inside)}"
+    return f"{text}{_exits(view)}."
+
+
+def _box(low: float, high: float, unit: str) -> str:
+    if np.isfinite(low) and np.isfinite(high):
+        return f"{number(low)} to {number(high)} {unit}".strip()
+    if np.isfinite(low):
+        return f"at least {number(low)} {unit}".strip()
+    return f"at most {number(high)} {unit}".strip()
+
+
+def _exits(view: _View) -> str:
+    """`; 2.5 % have left by 12 d and 50 % by 20 d`, of the levels reached while trusted."""
+    if "exit_time_quantile" not in view.data:
+        return ""
+    until = float(view.times[view.trust.index])
+    said = {}
+    for level in view.data["level"].values:
+        time, low, high = view.triple("exit_time_quantile", level=level)
+        if time <= until:
+            ends = low, high if high <= until else np.nan
+            said[float(level)] = (
+                f"{100 * level:g} % have left by {estimate(time, *ends, view.clock)}"
+            )
+    chosen = dict.fromkeys([*list(said)[:1], *(level for level in said if level == 0.5)])
+    return "".join(f"; {said[level]}" for level in chosen)
+
+
+def _spread(view: _View) -> str | None:
+    std = view.triple("std")
+    if np.isnan(std[0]):
+        return None
+    if std[0] == 0.0:
+        return f"{view.name} has no spread at {view.when}, so that driver shares are undefined."
+    return f"The standard deviation of {view.name} is {estimate(*std, view.unit)} at {view.when}."
+
+
+def _law(view: _View) -> str | None:
+    if "spreading_verdict" not in view.data:
+        return None
+    verdict = str(view.data["spreading_verdict"].item())
+    subject = f"The spreading of {view.name}"
+    if verdict in ("", "nan", "no spread"):
+        return None
+    exponent = view.triple("diffusion_exponent")
+    if verdict == "cannot tell":
+        reason = str(view.data["spreading_verdict"].attrs.get("reason", ""))
+        known = "" if np.isnan(exponent[0]) else f" (the exponent is {estimate(*exponent)})"
+        return f"{subject} cannot be told to follow one law{known}{': ' * bool(reason)}{reason}."
+    text = f"{subject} is {verdict}"
+    coefficient = view.triple("diffusion_coefficient")
+    if np.isfinite(exponent[0]):
+        text += f": its variance grows as 2 D t^a with a = {estimate(*exponent)}"
+    if np.isfinite(coefficient[0]):
+        square = f"{view.unit}^2" if view.unit.isalnum() else f"({view.unit})^2"
+        unit = f"{square}/{view.clock}" if verdict == "diffusive" else f"{square}/{view.clock}^a"
+        text += f" and D = {estimate(*coefficient, unit)}"
+    rate = view.value("spread_rate")
+    if verdict == "exponential" and np.isfinite(rate):
+        text += f": the spread grows at {number(rate, 3)} per {view.clock} at {view.when}"
+    return text + "."
+
+
+def _driver(view: _View) -> str | None:
+    ranked = view.ranked("driver_total")
+    if not ranked:
+        return None
+    first = ranked[0][0]
+    text = (
+        f"What spreads {view.name} most is {view.source(first)}, with"
+        f" {percent(*view.triple('driver_total', source=first))} of its variance at {view.when}"
+    )
+    if len(ranked) > 1:
+        second = ranked[1][0]
+        text += (
+            f"; next is {view.source(second)}, with"
+            f" {percent(*view.triple('driver_total', source=second))}"
+        )
+    leaving = view.ranked("exit_driver_total")
+    if leaving and leaving[0][0] != first:
+        text += f"; whether it leaves by the end is decided most by {view.source(leaving[0][0])}"
+        text += view.unconfirmed
+    return text + "."
+
+
+def _allowance(view: _View) -> str | None:
+    """What to change, by the source that drives the leaving, or else the spread."""
+    boxed = np.isfinite([view.value("box_low"), view.value("box_high")]).any()
+    if "allowance" not in view.data or not boxed:
+        return None
+    variable = view.data["allowance"]
+    target = variable.attrs.get("target")
+    goal = f"P(inside) of {view.name} at "
+    goal += "its target" if target is None else f"{number(float(target))} or above"
+    goal += " at the end of the horizon"
+    order = [s for s, _ in view.ranked("exit_driver_total") or view.ranked("driver_total")]
+    known = [s for s in order if np.isfinite(view.value("allowance", source=s))]
+    if not known:
+        if order:
+            return f"No reduction of any single source keeps {goal}{view.unconfirmed}."
+        return None
+    source = known[0]
+    scale, low, high = view.triple("allowance", source=source)
+    limit = variable.attrs.get("limit")
+    if limit is not None and scale >= float(limit):
+        return (
+            f"Even {view.source(source)} {number(scale)} times as strong keeps {goal}"
+            f"{view.unconfirmed}; beyond that nothing was tried."
+        )
+    change = "must be brought down to" if scale < 1.0 else "may be raised to"
+    text = (
+        f"To keep {goal}, {view.source(source)} {change} {estimate(scale, low, high)} times its"
+        " present strength, all else unchanged"
+    )
+    text += view.unconfirmed
+    if source != order[0]:
+        text += f" ({view.source(order[0])}, the strongest driver, cannot do it alone)"
+    return text + "."
+
+
+def _nonlinear(view: _View) -> str | None:
+    share = view.value("nonlinear_share")
+    if not share > 0.1:
+        return None
+    return (
+        f"{percent(share, np.nan, np.nan)} of the variance of {view.name} at {view.when} lies"
+        " beyond first order: a linear, small-noise picture is not enough."
+    )
+
+
+def _joint(dataset: xr.Dataset) -> list[str]:
+    """On the boxes of several quantities, at the earliest of all trust horizons."""
+    if "joint" not in dataset.coords or "joint_survival_probability" not in dataset:
+        return []
+    views = [_View(dataset, str(name)) for name in dataset["quantity"].values]
+    view = min(views, key=lambda v: v.trust.index)
+    sentences = []
+    for name in dataset["joint"].values:
+        value, low, high = view.triple("joint_survival_probability", joint=name)
+        sentences.append(
+            f"The probability of having stayed in all of the joint box {str(name)!r} up to"
+            f" {view.when} is {estimate(value, low, high)}. {view.trust.clause}"
+        )
+    return sentences
+
+
+def _monitoring(dataset: xr.Dataset) -> list[str]:
+    step = float(dataset.attrs.get("monitoring_interval", np.nan))
+    boxed = "survival_probability" in dataset and bool(
+        np.isfinite(dataset["survival_probability"].values).any()
+    )
+    if not boxed or not np.isfinite(step):
+        return []
+    return [
+        f"Boxes are looked at every {number(step)} {_clock(dataset)}; a shorter excursion is not"
+        " seen, so survival may be overstated."
+    ]
+
+
+def _runs(dataset: xr.Dataset) -> list[str]:
+    runs, failed = dataset.attrs.get("propagator_runs"), int(dataset.attrs.get("failed_runs", 0))
+    if runs is None:
+        return []
+    text = f"These answers took {int(runs)} runs of the propagator"
+    equivalents = dataset.attrs.get("run_equivalents")
+    if equivalents is not None and np.isfinite(float(equivalents)):
+        text += f", as much work as {number(float(equivalents))} over the whole horizon"
+    if failed:
+        text += f"; {failed} of them failed and are missing"
+    return [text + "."]

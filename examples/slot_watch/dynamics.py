@@ -1,37 +1,41 @@
-"""A satellite in a geostationary slot, in the Earth-fixed rotating plane (an invented scenario).
+"""A satellite in a geostationary slot at 19 degrees east (an invented scenario).
 
-Planar motion under the central field, J2 and the J22 tesseral, in polar coordinates that turn with
-the Earth. Constants of the Earth: EGM96 and WGS 84 values, from memory.
+Planar motion in inertial axes, of which x points to the satellite's mean place at t = 0, under the
+central field, J2 and the tesseral J22. State x, y (km), vx, vy (km/s); time in days. The noise is a
+radial and a tangential acceleration (km/s^2), as from a thruster that is never quite shut.
 
-State: r (km), lon (rad, east longitude), vr (km/s), vt (km/s, inertial tangential velocity).
-Noise: radial and tangential acceleration (km/s^2), as from a thruster that is never quite shut.
+The Earth's constants are those of EGM96 and WGS 84 (National Imagery and Mapping Agency, TR8350.2,
+2000), from memory: mu = 398600.4418 km^3/s^2, radius 6378.137 km, J2 = 1.08263e-3, J22 = 1.8154e-6
+about 14.93 degrees west, one turn in a sidereal day.
 """
 
 import numpy as np
 
-MU = 398600.4418  # km^3/s^2
-RE = 6378.137  # km
-J2 = 1.08262668e-3
-J22 = 1.8155e-6
-LON22 = np.deg2rad(-14.929)
-OMEGA = 7.292115e-5  # rad/s
+MU = 398600.4418
+RADIUS = 6378.137
+J2 = 1.08263e-3
+J22 = 1.8154e-6
+AXIS22 = np.deg2rad(-14.93)
+OMEGA = 7.292115e-5
 DAY = 86400.0
+SLOT = np.deg2rad(19.0)
 
 
 def rates(t, x, xi, parameters):
-    """dx/dt per day of states x (n, 4) under accelerations xi (n, 2)."""
-    r, lon, vr, vt = x[:, 0], x[:, 1], x[:, 2], x[:, 3]
-    gravity = MU / r**2
-    ratio = (RE / r) ** 2
-    angle = 2.0 * (lon - LON22)
-    radial = -gravity * (1.0 + 1.5 * J2 * ratio + 9.0 * J22 * ratio * np.cos(angle))
-    tangential = -gravity * 6.0 * J22 * ratio * np.sin(angle)
+    """dx/dt per day of states x (n, 4) under accelerations xi (n, 2) at time t in days."""
+    r2 = x[:, 0] ** 2 + x[:, 1] ** 2
+    r = np.sqrt(r2)
+    ux, uy = x[:, 0] / r, x[:, 1] / r
+    # cosine and sine of twice the angle from the axis of the tesseral to the satellite
+    turn = 2.0 * (SLOT - AXIS22 - OMEGA * DAY * t)
+    c2, s2 = ux * ux - uy * uy, 2.0 * ux * uy
+    cosine = c2 * np.cos(turn) - s2 * np.sin(turn)
+    sine = s2 * np.cos(turn) + c2 * np.sin(turn)
+    gravity, ratio = MU / r2, (RADIUS / r) ** 2
+    radial = xi[:, 0] - gravity * (1.0 + 1.5 * J2 * ratio + 9.0 * J22 * ratio * cosine)
+    tangential = xi[:, 1] - gravity * 6.0 * J22 * ratio * sine
     dx = np.empty_like(x)
-    dx[:, 0] = vr
-    dx[:, 1] = vt / r - OMEGA
-    dx[:, 2] = vt**2 / r + radial
-    dx[:, 3] = -vr * vt / r + tangential
-    # the noise intensity is per square root of a second, the clock runs in days
-    dx[:, 2] += xi[:, 0]
-    dx[:, 3] += xi[:, 1]
+    dx[:, :2] = x[:, 2:]
+    dx[:, 2] = ux * radial - uy * tangential
+    dx[:, 3] = uy * radial + ux * tangential
     return dx * DAY

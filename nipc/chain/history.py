@@ -42,6 +42,10 @@ class NoiseHistory:
         streams = tuple(stream if j == source else s for j, s in enumerate(self.streams))
         return self._replaced(streams, self.scales)
 
+    def restreamed(self, stream: str) -> NoiseHistory:
+        """Independent histories of all sources."""
+        return self._replaced((stream,) * len(self.streams), self.scales)
+
     def scaled(self, scales: FloatArray) -> NoiseHistory:
         """The same histories with each source multiplied by its scale."""
         return self._replaced(self.streams, np.asarray(scales, float))

@@ -7,10 +7,12 @@ from dataclasses import asdict, dataclass
 from typing import Any
 
 from nipc.problem.germ import Germ
-from nipc.problem.noise import BASES
+from nipc.problem.noise import BASES, Legendre
 from nipc.problem.study import Study
 
 DEFAULT_TERMS = 8
+MOST_TERMS = 200
+RESPONSE_LOSS = 1e-5
 
 
 @dataclass(frozen=True)
@@ -54,12 +56,19 @@ class Plan:
 def noise_terms(study: Study, length: float) -> tuple[int, ...]:
     """Number of terms of each source on an arc: the study's, or by rule where it says "auto".
 
-    N = omega h / pi + 3 for a motion of angular frequency omega: by then the response's variance
-    is kept to about 1e-6 (Legendre) or 1e-3 (completed).
+    The rule takes the smallest number of Legendre terms with which an oscillator of the study's
+    period keeps all but 1e-5 of its response's variance over the arc.
     """
     period = study.clock.period
-    rule = DEFAULT_TERMS if period is None else math.ceil(2.0 * length / period) + 3
+    rule = DEFAULT_TERMS if period is None else _terms_for(2.0 * math.pi * length / period)
     return tuple(rule if n.terms == "auto" else n.terms for n in study.noise)
+
+
+def _terms_for(phase: float) -> int:
+    terms = max(2, int(phase / math.pi))
+    while terms < MOST_TERMS and 1.0 - Legendre(terms).response_retained(phase) > RESPONSE_LOSS:
+        terms += 1
+    return terms
 
 
 def basis_losses(study: Study, terms: tuple[int, ...], length: float) -> tuple[BasisLoss, ...]:

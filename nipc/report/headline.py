@@ -8,7 +8,7 @@ import numpy as np
 import xarray as xr
 
 from nipc.report import reading
-from nipc.report.numbers import amount, interval, number, percent, probability, with_spread
+from nipc.report.numbers import amount, beside, interval, number, percent, probability, with_spread
 
 
 @dataclass(frozen=True)
@@ -75,7 +75,8 @@ def _range(dataset: xr.Dataset, quantity: str) -> str:
     low, high = (reading.quantile(dataset, level, quantity) for level in (0.025, 0.975))
     if low is None or high is None or not np.isfinite(low[-1] + high[-1]):
         return ""
-    return f"95 %: {number(low[-1], 6)} to {number(high[-1], 6)}"
+    std = reading.last(dataset, "std", quantity)
+    return f"95 %: {beside(low[-1], std)} to {beside(high[-1], std)}"
 
 
 def _probability(
@@ -96,7 +97,7 @@ def _spreading(dataset: xr.Dataset, quantity: str) -> Cell:
                  for s in ("_low", "_high"))
     if not np.isfinite(exponent):
         return Cell(verdict)
-    note = f"variance as t^{number(exponent, 3)}"
+    note = f"growth exponent {number(exponent, 3)}"
     if np.isfinite(low + high):
         note += f" ({number(low, 3)} to {number(high, 3)})"
     return Cell(verdict, note)

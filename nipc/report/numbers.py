@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 
 import numpy as np
 
@@ -13,6 +14,13 @@ _SUPERSCRIPT = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 def power_of_ten(exponent: int) -> str:
     """10⁻³, as text that needs no typesetting."""
     return "10" + str(exponent).translate(_SUPERSCRIPT)
+
+
+def pretty_unit(unit: str) -> str:
+    """km^2/s^2 as km²/s²; powers that are no whole numbers stay as they are."""
+    return re.sub(
+        r"(?:\^|\*\*)(-?\d+)(?![\d.])", lambda m: m[1].translate(_SUPERSCRIPT), unit
+    )
 
 
 def _fixed(value: float, decimals: int) -> str:
@@ -61,6 +69,14 @@ def with_spread(mean: float, std: float) -> str:
     )
 
 
+def beside(value: float, std: float) -> str:
+    """A value of a quantity with that spread: as many decimals as two digits of std need."""
+    if not (np.isfinite(value) and np.isfinite(std)) or std <= 0 or abs(value) >= 1e6:
+        return number(value, 6)
+    decimals = max(1 - math.floor(math.log10(std)), 0)
+    return _fixed(value, decimals) if decimals <= 9 else number(value, 6)
+
+
 def probability(value: float, digits: int = 3) -> str:
     """A probability; what is not exactly 0 or 1 is never printed as such."""
     if not np.isfinite(value):
@@ -73,9 +89,11 @@ def probability(value: float, digits: int = 3) -> str:
     return f"{value:.{digits}f}"
 
 
-def interval(low: float, high: float) -> str:
-    """Both ends of an interval of probabilities or shares."""
-    return f"{probability(low)} to {probability(high)}"
+def interval(low: float, high: float, digits: int = 3) -> str:
+    """Both ends of an interval of probabilities, rounded outwards."""
+    scale = 10.0**digits
+    ends = math.floor(low * scale + 1e-9) / scale, math.ceil(high * scale - 1e-9) / scale
+    return " to ".join(f"{min(max(end, 0.0), 1.0):.{digits}f}" for end in ends)
 
 
 def percent(share: float) -> str:

@@ -111,20 +111,24 @@ def _sections(dataset: xr.Dataset) -> list[Section]:
     from nipc.report.svg import inline
 
     built = {key: Section(key, title) for key, title, _ in SECTIONS}
-    entries = list(catalogue(dataset))
+    entries, names = list(catalogue(dataset)), reading.quantities(dataset)
     counter = 0
     for key, _, kinds in SECTIONS:
-        for kind in kinds:
-            for entry in (e for e in entries if e.name == kind):
-                counter += 1
-                axes = entry.draw()
-                first = axes[0] if isinstance(axes, tuple) else axes
-                drawing = inline(first.figure, f"f{counter}")
-                lines = hover.lines(dataset, entry.name, entry.quantity) if drawing.frame else []
-                built[key].plates.append(Plate(
-                    f"f{counter}", counter, entry.name, entry.quantity, entry.caption,
-                    Markup(drawing.markup), asdict(drawing.frame) if drawing.frame else None,
-                    hover.block(lines)))
+        chosen = [entry for entry in entries if entry.name in kinds]
+        if key == "drivers":  # a quantity's two figures side by side
+            chosen.sort(key=lambda e: names.index(e.quantity or ""))
+        elif key == "trust":  # all quantities first, then each
+            chosen.sort(key=lambda e: kinds.index(e.name))
+        for entry in chosen:
+            counter += 1
+            axes = entry.draw()
+            first = axes[0] if isinstance(axes, tuple) else axes
+            drawing = inline(first.figure, f"f{counter}")
+            lines = hover.lines(dataset, entry.name, entry.quantity) if drawing.frame else []
+            built[key].plates.append(Plate(
+                f"f{counter}", counter, entry.name, entry.quantity, entry.caption,
+                Markup(drawing.markup), asdict(drawing.frame) if drawing.frame else None,
+                hover.block(lines)))
     for key, maker in (("stays", tables.exits), ("drivers", tables.allowances),
                        ("cost", tables.arcs)):
         table = maker(dataset)

@@ -10,6 +10,7 @@ import numpy as np
 import xarray as xr
 
 from nipc.arrays import FloatArray
+from nipc.report.numbers import pretty_unit
 
 
 def has(dataset: xr.Dataset, name: str) -> bool:
@@ -45,13 +46,13 @@ def unit(dataset: xr.Dataset, quantity: str) -> str:
         found = str(dataset["quantity_unit"].values[index])
     else:
         found = str(dataset["mean"].attrs.get("units", "")) if "mean" in dataset else ""
-    return "" if found in ("1", "-") else found
+    return "" if found in ("1", "-") else pretty_unit(found)
 
 
 def time_unit(dataset: xr.Dataset) -> str:
     """Unit of the clock."""
     found = dataset.attrs.get("time_unit") or dataset["time"].attrs.get("units", "")
-    return str(found)
+    return pretty_unit(str(found))
 
 
 def times(dataset: xr.Dataset) -> FloatArray:

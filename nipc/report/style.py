@@ -72,15 +72,15 @@ class Stroke:
 
 STROKES = (
     Stroke("first", "", "solid", "o"),
-    Stroke("second", "///", (0, (6, 2)), "s"),
-    Stroke("third", "\\\\\\\\", (0, (2, 1.4)), "^"),
-    Stroke("fourth", "|||", (0, (8, 2, 2, 2)), "D"),
-    Stroke("fifth", "xxx", (0, (1, 1)), "v"),
-    Stroke("sixth", "---", (0, (4, 1, 1, 1, 1, 1)), "P"),
+    Stroke("second", "//", (0, (6, 2)), "s"),
+    Stroke("third", "\\\\", (0, (2, 1.4)), "^"),
+    Stroke("fourth", "||", (0, (8, 2, 2, 2)), "D"),
+    Stroke("fifth", "xx", (0, (1, 1)), "v"),
+    Stroke("sixth", "--", (0, (4, 1, 1, 1, 1, 1)), "P"),
     Stroke("seventh", "++", (0, (10, 3)), "X"),
 )
 
-LINE_STROKES = tuple(STROKES[i] for i in (0, 4, 2, 6, 1))
+LINE_STROKES = tuple(STROKES[i] for i in (0, 4, 2, 6))
 """Those dark enough for thin lines, in the order in which quantities take them."""
 
 SETTINGS: Any = {

@@ -8,7 +8,7 @@ import numpy as np
 import xarray as xr
 
 from nipc.report import reading
-from nipc.report.numbers import amount, number, percent, probability
+from nipc.report.numbers import amount, beside, number, percent, probability
 
 MOMENTS = 9
 
@@ -27,14 +27,17 @@ def moments(dataset: xr.Dataset, quantity: str) -> Table:
     times, trust = reading.times(dataset), reading.trust(dataset, quantity)
     picks = np.unique(np.linspace(0, len(times) - 1, min(MOMENTS, len(times))).round().astype(int))
     found: list[tuple[str, list[str]]] = []
-    for name, head in (("mean", "mean"), ("std", "std")):
-        values = reading.series(dataset, name, quantity)
-        if values is not None:
-            found.append((head, [number(values[i], 6 if name == "mean" else 3) for i in picks]))
+    std = reading.series(dataset, "std", quantity)
+    spread = np.full(len(times), np.nan) if std is None else std
+    mean = reading.series(dataset, "mean", quantity)
+    if mean is not None:
+        found.append(("mean", [beside(mean[i], spread[i]) for i in picks]))
+    if std is not None:
+        found.append(("std", [number(std[i], 2) for i in picks]))
     for level in (0.025, 0.975):
         values = reading.quantile(dataset, level, quantity)
         if values is not None:
-            found.append((f"{100 * level:g} %", [number(values[i], 6) for i in picks]))
+            found.append((f"{100 * level:g} %", [beside(values[i], spread[i]) for i in picks]))
     for name, head in (("inside_probability", "inside"), ("survival_probability", "all the time")):
         values = reading.series(dataset, name, quantity)
         if values is not None:

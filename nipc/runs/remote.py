@@ -30,6 +30,7 @@ from nipc.runs.processes import ProcessCrew
 from nipc.runs.propagator import Batch, Propagator
 from nipc.runs.unit import Answer, Problem, Unit
 
+CONNECT_SECONDS = 30.0
 _POLL = 0.2
 _GIVE_UP = 3  # times that a unit may go under together with the machine it was on
 _own = threading.local()
@@ -38,9 +39,7 @@ _own = threading.local()
 class DaskCrew(Crew):
     """Runs on the workers of a Dask cluster, all of them."""
 
-    def __init__(
-        self, propagator: Propagator, limit: float | None, scheduler: str, together: float = 30.0
-    ) -> None:
+    def __init__(self, propagator: Propagator, limit: float | None, scheduler: str) -> None:
         super().__init__(propagator, limit)
         try:
             import distributed
@@ -49,7 +48,9 @@ class DaskCrew(Crew):
                 "the engine `dask` needs the packages of `pip install 'nipc[cluster]'`"
             ) from None
         try:
-            self._client = distributed.Client(scheduler, timeout=together, set_as_default=False)
+            self._client = distributed.Client(
+                scheduler, timeout=CONNECT_SECONDS, set_as_default=False
+            )
         except (OSError, TimeoutError, ValueError) as error:
             raise InputError(
                 f"no Dask scheduler answers at {scheduler!r} ({error}); right is the address that"

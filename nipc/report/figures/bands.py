@@ -45,12 +45,15 @@ def bands(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> Axes:
             labels.append(name)
     members = reading.series(dataset, "member_quantity", quantity)
     if members is not None:
-        ax.plot(times, members[:SHOWN].T, color=LIGHT["soft"], lw=0.5, alpha=0.8)
+        members = members[:SHOWN]
+        ax.plot(times, members.T, color=LIGHT["soft"], lw=0.5, alpha=0.8)
         handles.append(Line2D([], [], color=LIGHT["soft"], lw=0.7))
         labels.append("members")
     handles.insert(0, ax.plot(times, middle, color=LIGHT["main"], lw=1.7)[0])
     labels.insert(0, names[0])
     low, high = (x if x is not None else middle for x in outer)
+    if members is not None:
+        low, high = np.fmin(low, members.min(axis=0)), np.fmax(high, members.max(axis=0))
     cut = _set_view(ax, dataset, quantity, low, high)
     box = reading.box(dataset, quantity)
     if box is not None:
@@ -59,9 +62,8 @@ def bands(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> Axes:
     frame.time_axis(ax, dataset)
     if cut:
         reach = f"{number(np.nanmin(low), 3)} to {number(np.nanmax(high), 3)}"
-        ax.set_xlabel(f"{ax.get_xlabel()}\nview cut: the 95 % band reaches {reach}")
-    ax.set_ylabel(frame.quantity_label(dataset, quantity))
-    frame.offset_in_label(ax)
+        ax.set_xlabel(f"{ax.get_xlabel()}\nview cut: the motion reaches {reach}")
+    frame.value_axis(ax, frame.printable(quantity), reading.unit(dataset, quantity))
     marked = frame.mark_trust(ax, dataset, quantity)
     frame.legend(ax, handles, labels, raised=marked)
     return ax

@@ -7,6 +7,7 @@ from collections.abc import Sequence
 import numpy as np
 import xarray as xr
 from matplotlib.axes import Axes
+from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.ticker import MaxNLocator
 
@@ -52,6 +53,9 @@ def chain(dataset: xr.Dataset, axes: Sequence[Axes] | None = None) -> tuple[Axes
     axes[-1].set_xlim(float(edges[0]), float(edges[-1]))
     for ax in axes[:-1]:
         ax.tick_params(labelbottom=False)
+    figure = axes[0].figure
+    if isinstance(figure, Figure):
+        figure.align_ylabels(list(axes))
     return tuple(axes)
 
 

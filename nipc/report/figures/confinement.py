@@ -32,7 +32,8 @@ def confinement(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> A
         low = reading.series(dataset, name + "_low", quantity)
         high = reading.series(dataset, name + "_high", quantity)
         if low is not None and high is not None:
-            ax.fill_between(times, low, high, color=LIGHT[ink], alpha=0.22, lw=0)
+            ax.fill_between(times, low, high, color=LIGHT[ink], alpha=0.15, lw=0)
+            ax.plot(times, np.stack([low, high], axis=1), color=LIGHT[ink], lw=0.5, alpha=0.7)
             lowest = min(lowest, float(np.nanmin(low)))
         lowest = min(lowest, float(np.nanmin(curve)))
         ax.plot(times, curve, color=LIGHT[ink], lw=1.7, ls=dash)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import textwrap
 from collections.abc import Sequence
 from typing import Any
@@ -14,10 +15,11 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 from matplotlib.layout_engine import ConstrainedLayoutEngine
 from matplotlib.patches import Patch
+from matplotlib.ticker import FuncFormatter
 from matplotlib.transforms import blended_transform_factory
 
 from nipc.report import reading
-from nipc.report.numbers import amount, power_of_ten
+from nipc.report.numbers import amount, number, power_of_ten
 from nipc.report.style import HEIGHT, LIGHT, WIDTH
 
 _CHARACTER = 0.0135  # width of a legend's character over that of the axes, generous
@@ -51,12 +53,6 @@ def with_unit(label: str, unit: str) -> str:
     return f"{label} ({unit})" if unit and unit != "1" else label
 
 
-def quantity_label(dataset: xr.Dataset, quantity: str, form: str = "{}") -> str:
-    """A quantity and its unit for a vertical axis, on as many lines as it needs."""
-    unit = reading.unit(dataset, quantity)
-    return textwrap.fill(with_unit(form.format(printable(quantity)), unit), 30)
-
-
 def time_axis(ax: Axes, dataset: xr.Dataset) -> None:
     """Label and limits of a time axis."""
     times = reading.times(dataset)
@@ -65,29 +61,30 @@ def time_axis(ax: Axes, dataset: xr.Dataset) -> None:
         ax.set_xlim(float(times[0]), float(times[-1]))
 
 
-def offset_in_label(ax: Axes) -> None:
-    """A large offset of the vertical axis goes where it cannot meet the legend."""
-    ax.yaxis.get_offset_text().set_visible(False)
-    formatter = ax.yaxis.get_major_formatter()
-    formatter.set_locs(list(ax.get_yticks()))
-    offset = getattr(formatter, "get_offset", lambda: "")()
+def value_axis(ax: Axes, name: str, unit: str) -> None:
+    """Label and ticks of a vertical axis: an offset or a power of ten goes to the label.
+
+    "energy + 4.7268 (10⁻⁶ km²/s²)": what the ticks count is the value plus 4.7268, in 1e-6 km²/s².
+    """
+    low, high = ax.get_ylim()
+    span, middle = high - low, 0.5 * (low + high)
+    offset, factor = 0.0, 1.0
+    if abs(middle) > 2e4 * span > 0:
+        step = 10.0 ** (math.floor(math.log10(span)) + 1)
+        offset = round(middle / step) * step
+    reach = max(abs(low - offset), abs(high - offset))
+    if reach > 0 and not 2e-3 <= reach < 1e5:
+        factor = 10.0 ** (3 * math.floor(math.log10(reach) / 3))
+    label = name
     if offset:
-        ax.set_ylabel(f"{ax.get_ylabel()}\n{_plain_offset(offset)}", linespacing=1.3)
-
-
-def _plain_offset(offset: str) -> str:
-    """ "1e-6-4.72" in words: x 10^-6, less 4.72."""
-    cleaned = offset.replace("−", "-")
-    factor, rest = "", cleaned
-    if cleaned.startswith("1e"):
-        cut = next((i for i, c in enumerate(cleaned) if c in "+-" and i > 2), len(cleaned))
-        exponent, rest = cleaned[2:cut], cleaned[cut:]
-        factor = f"× {power_of_ten(int(exponent))}"
-    if rest.startswith("+"):
-        rest = "+ " + rest[1:]
-    elif rest.startswith("-"):
-        rest = "− " + rest[1:]
-    return f"{factor} {rest}".strip()
+        digits = max(int(math.log10(abs(offset)) - math.log10(span)) + 2, 3)
+        label += f" {'−' if offset > 0 else '+'} {number(abs(offset), digits)}"
+    if factor != 1.0:
+        unit = f"{power_of_ten(round(math.log10(factor)))} {unit}".rstrip()
+    ax.set_ylabel(textwrap.fill(with_unit(label, unit), 30))
+    if offset or factor != 1.0:
+        plain = FuncFormatter(lambda value, _: number((value - offset) / factor, 4))
+        ax.yaxis.set_major_formatter(plain)
 
 
 def legend(
@@ -96,8 +93,8 @@ def legend(
     """A row of keys above the axes, where no curve can be; as many columns as fit."""
     if not handles:
         return
-    longest = max(len(label) for label in labels)
-    columns = int(np.clip(1.0 / ((longest + 6) * _CHARACTER), 1, len(labels)))
+    widths = [(len(label) + 6) * _CHARACTER for label in labels]
+    columns = len(labels) if sum(widths) < 1.0 else int(np.clip(1.0 / max(widths), 1, len(labels)))
     ax.legend(
         list(handles),
         list(labels),

@@ -12,7 +12,7 @@ from nipc.report.figures import frame
 from nipc.report.figures.spreading import log_labels
 from nipc.report.style import LIGHT, drawn, line_stroke
 
-SHOWN = 5
+SHOWN = 3
 
 
 @drawn
@@ -77,8 +77,7 @@ def direct_against_expansion(
                 marker=hand.marker, mfc=LIGHT["paper"], mec=hand.colour, mew=1.0)
     frame.time_axis(ax, dataset)
     less = " − mean" if mean is not None else ""
-    ax.set_ylabel(frame.quantity_label(dataset, quantity, "{}" + less))
-    frame.offset_in_label(ax)
+    frame.value_axis(ax, frame.printable(quantity) + less, reading.unit(dataset, quantity))
     marked = frame.mark_trust(ax, dataset, quantity)
     keys = [Line2D([], [], color=LIGHT["ink"], lw=1.2),
             Line2D([], [], ls="", marker="o", mfc=LIGHT["paper"], mec=LIGHT["ink"], ms=5)]

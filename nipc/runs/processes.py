@@ -87,14 +87,14 @@ class Worker:
             ]  # fmt: skip
             self.connection.send(("units", number, parts))
 
-    def take(self, task: int, answers: list[Answer], finished: bool) -> list[Answer]:
+    def take(self, task: int, answers: list[Answer]) -> list[Answer]:
         """Strike answered units off the task they belong to."""
         self.heard = time.monotonic()
         number, units = self.tasks[0]
         assert number == task
         for answer in answers:
             del units[answer.unit.rows.tobytes()]
-        if finished:
+        if not units:
             self.tasks.popleft()
         return answers
 
@@ -215,11 +215,11 @@ class ProcessCrew(Crew):
 
     def _heard(self, worker: Worker, message: tuple[object, ...]) -> list[Answer]:
         match message:
-            case ("answers", int(task), list(answers), bool(finished)):
+            case ("answers", int(task), list(answers)):
                 for answer in answers:
                     spent = answer.seconds * len(answer.unit)
                     self._seconds = max(1e-7, 0.8 * self._seconds + 0.2 * spent)
-                return worker.take(task, answers, finished)
+                return worker.take(task, answers)
             case ("broken", text):
                 raise RunsError(f"the propagator cannot be set up in a worker process: {text}")
             case _:

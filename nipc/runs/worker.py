@@ -40,13 +40,13 @@ class Outbox:
             self._task = task
             self._answers.append(answer)
             if time.monotonic() - self._sent > TOGETHER:
-                self._flush(False)
+                self._flush()
 
-    def end(self, task: int) -> None:
+    def end(self) -> None:
         """The task is finished."""
         with self._lock:
-            self._task = task
-            self._flush(True)
+            if self._answers:
+                self._flush()
 
     def tend(self) -> None:
         """Send what has waited for long; in a thread of its own."""
@@ -54,15 +54,15 @@ class Outbox:
             time.sleep(LATEST)
             with self._lock:
                 if self._answers and time.monotonic() - self._sent > LATEST:
-                    self._flush(False)
+                    self._flush()
 
     def say(self, kind: str, text: str) -> None:
         with self._lock:
             self._connection.send((kind, text))
 
-    def _flush(self, finished: bool) -> None:
+    def _flush(self) -> None:
         answers, self._answers = self._answers, []
-        self._connection.send(("answers", self._task, answers, finished))
+        self._connection.send(("answers", self._task, answers))
         self._sent = time.monotonic()
 
 
@@ -113,7 +113,7 @@ def main(file: int) -> None:
                 for unit, states, coefficients, parameters in units:
                     part = Batch(states, times, model.realise(coefficients), parameters)
                     out.add(task, call(propagator, part, unit, limit, host))
-                out.end(task)
+                out.end()
                 _trim_log()
 
 

@@ -238,6 +238,17 @@ def test_workers_use_one_thread_each(tmp_path):
     assert run(tmp_path, Threads(), sample_batch(2), n_jobs=1).ok.all()
 
 
+def test_workers_stay_from_batch_to_batch(tmp_path):
+    log = tmp_path / "log"
+    with (
+        Ledger.open(tmp_path / "work") as ledger,
+        Engine(Sample(log=log), ledger, n_jobs=1) as engine,
+    ):
+        for seed in range(3):
+            engine.run(sample_batch(40, seed=seed), f"arc {seed}")
+    assert len({line.split()[0] for line in log.read_text().splitlines()}) == 1
+
+
 def test_a_full_disk_is_said_and_a_ledger_without_room_keeps_what_it_has(tmp_path):
     """SQLite itself limits the file: the same error code as of a full disk."""
     batch = sample_batch(200, times=500)

@@ -6,6 +6,7 @@ import json
 import platform
 import time
 from collections import Counter
+from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
@@ -22,6 +23,9 @@ from nipc.problem.study_file import settings_findings
 
 if TYPE_CHECKING:
     from nipc.answers.result import Result
+    from nipc.answers.table import ResultTable
+    from nipc.chain.horizon import Horizon
+    from nipc.runs.engine import Engine
     from nipc.runs.outcomes import Outcomes
     from nipc.runs.progress import Progress
     from nipc.runs.propagator import AdapterContext, Propagator
@@ -116,6 +120,8 @@ def plan(study: Study) -> Plan:
     """Germ, terms, runs and what each basis loses; the propagator's code is not run."""
     from nipc.chain.single_arc import design_of, germ_of
 
+    if study.chain.arcs != 1:
+        return _chain_plan(study)
     germ = germ_of(study)
     design = design_of(study, germ)
     terms = noise_terms(study, study.clock.length)
@@ -141,6 +147,40 @@ def plan(study: Study) -> Plan:
     )
 
 
+def _chain_plan(study: Study) -> Plan:
+    """A chain's runs are only known arc by arc; the plan tells the least, all arcs being linear."""
+    import math
+
+    from nipc.chain.horizon import cell_count
+    from nipc.problem.germ import Germ
+
+    arcs = cell_count(study)
+    length = study.clock.length / arcs
+    terms = noise_terms(study, length)
+    germ = Germ.of(study, terms, study.clock.start, study.clock.start + length)
+    carried = sum(s.carried for s in germ.noise.sources)
+    linear = 1 + len(study.state) + carried + len(germ.parameter_names) + sum(terms)
+    design = max(math.ceil(study.chain.oversampling * linear), linear + 4) * arcs
+    check = study.check.runs * arcs
+    return Plan(
+        study.title,
+        group_sizes(germ),
+        arcs,
+        linear,
+        "near D-optimal subset of the ensemble, arc by arc",
+        design,
+        check,
+        design + check,
+        study.budget,
+        basis_losses(study, terms, length),
+        (
+            f"Runs are of one arc each, a {arcs}th part of the horizon: "
+            f"{(design + check) / arcs:.0f} run-equivalents if every arc is nearly linear; where "
+            "held-out runs disagree the degree is raised and more runs are made.",
+        ),
+    )
+
+
 def run(
     study: Study,
     *,
@@ -155,9 +195,7 @@ def run(
     there and returned. `backend` "inline" runs the propagator in this process.
     """
     from nipc.answers.result import Result
-    from nipc.answers.single import single_arc_table
     from nipc.answers.verdict import findings
-    from nipc.chain.single_arc import solve
     from nipc.runs.engine import Engine, FailurePolicy
     from nipc.runs.ledger import Ledger
     from nipc.runs.progress import Silent
@@ -180,18 +218,72 @@ def run(
         ) as engine,
     ):
         ledger.expect(forecast.total_runs)
-        arc = solve(study, engine, quantities)
-        notes = [*ledger.notes, *engine.notes, *arc.notes]
-    table = single_arc_table(arc)
-    attributes = _provenance(study, arc.outcomes, began, n_jobs) | {
-        "run_equivalents": float(forecast.total_runs),
-        "notes": json.dumps(notes + list(forecast.notes)),
+        solved = (_one_arc if study.chain.arcs == 1 else _many_arcs)(study, engine, quantities)
+        notes = [*ledger.notes, *engine.notes, *solved.notes, *forecast.notes]
+    attributes = _provenance(study, solved.outcomes, began, n_jobs) | {
+        "run_equivalents": solved.cost,
+        "notes": json.dumps(notes),
     }
-    dataset = table.dataset(attributes)
+    dataset = solved.table.dataset(attributes)
     dataset.attrs["findings"] = json.dumps(findings(dataset))
     result = Result(dataset, place)
     result.save()
     return result
+
+
+@dataclass(frozen=True)
+class _Solved:
+    """What a way of solving hands on."""
+
+    table: ResultTable
+    outcomes: tuple[Outcomes, ...]
+    cost: float
+    notes: tuple[str, ...]
+
+
+def _one_arc(study: Study, engine: Engine, quantities: QuantitySet) -> _Solved:
+    from nipc.answers.single import single_arc_table
+    from nipc.chain.single_arc import solve
+
+    arc = solve(study, engine, quantities)
+    cost = float(sum(len(o) for o in arc.outcomes))
+    return _Solved(single_arc_table(arc), arc.outcomes, cost, arc.notes)
+
+
+def _many_arcs(study: Study, engine: Engine, quantities: QuantitySet) -> _Solved:
+    from nipc.answers.chained import ChainAnswers
+    from nipc.chain.chain import ChainBuilder
+
+    horizon = build_horizon(study, engine)
+    chain = ChainBuilder(horizon).build()
+    answers = ChainAnswers(horizon, chain, quantities)
+    table = answers.table()
+    notes = list(chain.notes)
+    if answers.far:
+        notes.append(
+            f"{answers.far} passages of members through an arc lay far outside the arc's design; "
+            "there only the linear part of its expansion was used."
+        )
+    return _Solved(table, tuple(horizon.outcomes), chain.cost, tuple(notes))
+
+
+def build_horizon(study: Study, engine: Engine) -> Horizon:
+    """The cells, chart and noise histories of a study's chain; ChartError where a chart fails."""
+    from nipc.chain.horizon import Horizon, cell_count
+    from nipc.chain.single_arc import generator
+    from nipc.problem.charts import build_chart
+    from nipc.problem.germ import Germ
+
+    terms = noise_terms(study, study.clock.length / cell_count(study))
+    germ = Germ.of(study, terms, study.clock.start, study.clock.end)
+    units = tuple(c.unit for c in study.state)
+    chart = build_chart(
+        study.chart, study.state_names, units, germ.start.mean, study.clock.start, study.folder
+    )
+    horizon = Horizon(study, engine, germ, chart, terms)
+    some = germ.states(germ.sample(generator(study, "chart"), 200))
+    chart.check(some, study.clock.start * horizon.chart_time)
+    return horizon
 
 
 def _provenance(

@@ -6,22 +6,24 @@ confirmed, and says up to when that is.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import Any
-
 import numpy as np
 import xarray as xr
 
+from nipc.answers.reading import View, clock_of
 from nipc.answers.wording import estimate, number, percent
-
-KIND_WORDS = {"noise": "the noise source", "start": "the uncertain", "parameter": "the parameter"}
 
 
 def findings(dataset: xr.Dataset) -> list[str]:
     """Sentences on each quantity of a result, then on the joint boxes and on the runs."""
     sentences: list[str] = []
     for name in dataset["quantity"].values:
-        view = _View(dataset, str(name))
+        view = View(dataset, str(name))
+        if view.trust.index == 0:
+            sentences.append(
+                f"Nothing can be said of {name} beyond the start: held-out direct runs differ from"
+                f" the expansion there. {view.trust.clause}"
+            )
+            continue
         parts = (_confinement, _spread, _law, _driver, _allowance, _nonlinear)
         said = [part(view) for part in parts]
         sentences += [f"{s} {view.trust.clause}" for s in said if s]
@@ -30,96 +32,7 @@ def findings(dataset: xr.Dataset) -> list[str]:
     return sentences
 
 
-@dataclass(frozen=True)
-class _Trust:
-    """Up to which output time figures are stated, and how that is said."""
-
-    index: int
-    clause: str
-    confirmed: bool
-
-
-class _View:
-    """One quantity's part of a dataset; what is not there reads as NaN."""
-
-    def __init__(self, dataset: xr.Dataset, name: str) -> None:
-        self.data = dataset.sel(quantity=name)
-        self.name = name
-        self.unit = str(self.data["quantity_unit"].item()) if "quantity_unit" in self.data else ""
-        self.clock = _clock(dataset)
-        self.times = np.asarray(dataset["time"].values, float)
-        self.trust = _trust(dataset, self.data)
-
-    @property
-    def unconfirmed(self) -> str:
-        """A mark for what is said of the end of the horizon, where that is not trusted."""
-        whole = self.trust.confirmed and self.trust.index == self.times.size - 1
-        return "" if whole else " (this is of the end of the horizon, and not confirmed)"
-
-    @property
-    def when(self) -> str:
-        return f"{number(float(self.times[self.trust.index]))} {self.clock}".strip()
-
-    def value(self, variable: str, **labels: Any) -> float:
-        """A number at the trusted time, at labels; NaN where the result has none."""
-        if variable not in self.data:
-            return float("nan")
-        array = self.data[variable]
-        if "time" in array.dims:
-            array = array.isel(time=self.trust.index)
-        return float(array.sel(**labels).item()) if labels else float(array.item())
-
-    def triple(self, variable: str, **labels: Any) -> tuple[float, float, float]:
-        """(value, low, high)."""
-        return (
-            self.value(variable, **labels),
-            self.value(f"{variable}_low", **labels),
-            self.value(f"{variable}_high", **labels),
-        )
-
-    def source(self, name: str) -> str:
-        """`the noise source 'thrust'`."""
-        kind = "noise"
-        if "source_kind" in self.data.coords:
-            kind = str(self.data["source_kind"].sel(source=name).item())
-        if kind == "start":
-            return "the uncertain start"
-        return f"{KIND_WORDS.get(kind, 'the source')} {name!r}"
-
-    def ranked(self, variable: str) -> list[tuple[str, float]]:
-        """Sources by a share at the trusted time, largest first."""
-        if variable not in self.data:
-            return []
-        pairs = [(str(s), self.value(variable, source=s)) for s in self.data["source"].values]
-        return sorted((p for p in pairs if np.isfinite(p[1])), key=lambda p: -p[1])
-
-
-def _clock(dataset: xr.Dataset) -> str:
-    return str(dataset["time"].attrs.get("units", dataset.attrs.get("time_unit", "")))
-
-
-def _trust(dataset: xr.Dataset, part: xr.Dataset) -> _Trust:
-    times = np.asarray(dataset["time"].values, float)
-    clock, last = _clock(dataset), times.size - 1
-    paths = float(part["trust_horizon"].item()) if "trust_horizon" in part else np.nan
-    spread = paths
-    if "trust_horizon_distribution" in part:
-        spread = float(part["trust_horizon_distribution"].item())
-        spread = paths if np.isnan(spread) else max(spread, paths)
-    if np.isnan(spread):
-        return _Trust(last, "[not checked against direct runs: no trust horizon]", False)
-    index = int(np.searchsorted(times, spread * (1.0 + 1e-12), side="right")) - 1
-    if index < 0 or spread <= times[0]:
-        return _Trust(0, "[trust horizon: none, direct runs differ from the start on]", False)
-    whole = index == last
-    clause = f"trust horizon {number(spread)} {clock}"
-    clause += ", the whole of it" if whole else f" of {number(float(times[-1]))} {clock}"
-    if paths < spread:
-        clause += f"; for single paths {number(paths)} {clock}"
-    return _Trust(index, f"[{clause}]", True)
-
-
-def _confinement(view: _View) -> str | None:
+def _confinement(view: View) -> str | None:
     low, high = view.value("box_low"), view.value("box_high")
     survival = view.triple("survival_probability")
     if np.isnan(survival[0]):
@@ -147,7 +60,7 @@ def _box(low: float, high: float, unit: str) -> str:
     return f"at most {number(high)} {unit}".strip()
 
 
-def _exits(view: _View) -> str:
+def _exits(view: View) -> str:
     """`; 2.5 % have left by 12 d and 50 % by 20 d`, of the levels reached while trusted."""
     if "exit_time_quantile" not in view.data:
         return ""
@@ -164,7 +77,7 @@ def _exits(view: _View) -> str:
     return "".join(f"; {said[level]}" for level in chosen)
 
 
-def _spread(view: _View) -> str | None:
+def _spread(view: View) -> str | None:
     std = view.triple("std")
     if np.isnan(std[0]):
         return None
@@ -173,7 +86,7 @@ def _spread(view: _View) -> str | None:
     return f"The standard deviation of {view.name} is {estimate(*std, view.unit)} at {view.when}."
 
 
-def _law(view: _View) -> str | None:
+def _law(view: View) -> str | None:
     if "spreading_verdict" not in view.data:
         return None
     verdict = str(view.data["spreading_verdict"].item())
@@ -199,7 +112,7 @@ def _law(view: _View) -> str | None:
     return text + "."
 
 
-def _driver(view: _View) -> str | None:
+def _driver(view: View) -> str | None:
     ranked = view.ranked("driver_total")
     if not ranked:
         return None
@@ -221,7 +134,7 @@ def _driver(view: _View) -> str | None:
     return text + "."
 
 
-def _allowance(view: _View) -> str | None:
+def _allowance(view: View) -> str | None:
     """What to change, by the source that drives the leaving, or else the spread."""
     boxed = np.isfinite([view.value("box_low"), view.value("box_high")]).any()
     if "allowance" not in view.data or not boxed:
@@ -256,7 +169,7 @@ def _allowance(view: _View) -> str | None:
     return text + "."
 
 
-def _nonlinear(view: _View) -> str | None:
+def _nonlinear(view: View) -> str | None:
     share = view.value("nonlinear_share")
     if not share > 0.1:
         return None
@@ -270,8 +183,10 @@ def _joint(dataset: xr.Dataset) -> list[str]:
     """On the boxes of several quantities, at the earliest of all trust horizons."""
     if "joint" not in dataset.coords or "joint_survival_probability" not in dataset:
         return []
-    views = [_View(dataset, str(name)) for name in dataset["quantity"].values]
+    views = [View(dataset, str(name)) for name in dataset["quantity"].values]
     view = min(views, key=lambda v: v.trust.index)
+    if view.trust.index == 0:
+        return []  # said of the quantity already
     sentences = []
     for name in dataset["joint"].values:
         value, low, high = view.triple("joint_survival_probability", joint=name)
@@ -290,7 +205,7 @@ def _monitoring(dataset: xr.Dataset) -> list[str]:
     if not boxed or not np.isfinite(step):
         return []
     return [
-        f"Boxes are looked at every {number(step)} {_clock(dataset)}; a shorter excursion is not"
+        f"Boxes are looked at every {number(step)} {clock_of(dataset)}; a shorter excursion is not"
         " seen, so survival may be overstated."
     ]
 

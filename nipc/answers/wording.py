@@ -26,7 +26,7 @@ def estimate(value: float, low: float, high: float, unit: str = "") -> str:
         return f"{number(value, 3)}{tail} ({number(low, 3)} to {number(high, 3)})"
     half = 0.5 * (high - low)
     places = -math.floor(math.log10(half))
-    places += int(half * 10.0**places < 2.0)  # a leading 1 is too coarse a step
+    places += int(half * 10.0**places < 1.95)  # a leading 1 is too coarse a step
     shown = [_rounded(v, places) for v in (value, low, high)]
     return f"{shown[0]}{tail} ({shown[1]} to {shown[2]})"
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -16,6 +16,7 @@ from nipc.problem.noise import NoiseModel
 from nipc.problem.study import Study
 from nipc.problem.units import chart_time_scale
 from nipc.runs.engine import Engine
+from nipc.runs.outcomes import Outcomes
 from nipc.runs.propagator import Batch
 
 
@@ -52,8 +53,8 @@ class Horizon:
         units = [c.unit for c in study.state]
         self.chart_time = chart_time_scale(study.clock.unit, units)
         self.outputs = study.clock.times
-        arcs = study.chain.arcs
-        self.cells = arcs if isinstance(arcs, int) else default_cells(study)
+        self.cells = cell_count(study)
+        self.outcomes: list[Outcomes] = []
         self.edges = np.linspace(study.clock.start, study.clock.end, self.cells + 1)
         sources = germ.noise.sources
         self.richness = study.check.richness
@@ -61,7 +62,6 @@ class Horizon:
         self.history = NoiseHistory(
             study.seed, ("a",) * len(sources), sources, self.edges, most, np.ones(len(sources))
         )
-        self.start_variables = germ.start.rank
         self.gauss_markov = [j for j, s in enumerate(sources) if s.carried]
 
     # -- members ---------------------------------------------------------------------------------
@@ -158,6 +158,7 @@ class Horizon:
         states = self.chart.to_state(members.values, start * self.chart_time)
         forcing = model.realise(self.forcing_columns(model, members.carried, white))
         outcomes = self.engine.run(Batch(states, grid, forcing, members.parameters), label)
+        self.outcomes.append(replace(outcomes, states=outcomes.states[:, :0]))
         with np.errstate(invalid="ignore"):
             values = self.chart.from_state(outcomes.states, grid * self.chart_time)
         good = np.isfinite(values).all(axis=(1, 2))
@@ -182,8 +183,10 @@ class Horizon:
         return values, after, int(far.sum())
 
 
-def default_cells(study: Study) -> int:
-    """Half a period an arc where a period is known, else 32 arcs."""
+def cell_count(study: Study) -> int:
+    """The study's number of arcs; "auto" is half a period an arc, or 32 without a period."""
+    if isinstance(study.chain.arcs, int):
+        return study.chain.arcs
     if study.clock.period is None:
         return 32
     return max(1, math.ceil(2.0 * study.clock.length / study.clock.period))

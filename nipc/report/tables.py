@@ -64,6 +64,12 @@ def _leader(shares: np.ndarray, names: list[str]) -> str:
     return f"{names[index]} {percent(float(shares[index]))}"
 
 
+def _marked(dataset: xr.Dataset, quantity: str) -> str:
+    """A quantity, marked when what is said of the end lies past its trust horizon."""
+    trust = reading.trust(dataset, quantity)
+    return f"{quantity}\u202f{trust.mark(trust.end)}".rstrip()
+
+
 def exits(dataset: xr.Dataset) -> Table | None:
     """When members leave: quantiles of the exit time, and who drives the leaving."""
     boxed = [q for q in reading.quantities(dataset) if reading.box(dataset, q) is not None]
@@ -78,7 +84,7 @@ def exits(dataset: xr.Dataset) -> Table | None:
         cells = [amount(t, unit, 3) if np.isfinite(t) else "not within the horizon" for t in times]
         driver = reading.series(dataset, "exit_driver_total", quantity)
         cells.append("–" if driver is None else _leader(driver, reading.sources(dataset)))
-        rows.append((quantity, *cells))
+        rows.append((_marked(dataset, quantity), *cells))
     heads = ("quantity", *(f"{100 * level:g} % have left by" for level in levels),
              "leaving is driven by")
     return Table("When members leave their box", heads, tuple(rows)) if rows else None
@@ -98,7 +104,7 @@ def allowances(dataset: xr.Dataset) -> Table | None:
             cells.append("no limit found" if np.isinf(value) else number(value, 3))
         rows.append((source, *cells))
     return Table("Largest intensity (of the start and parameters: scale) that keeps the box, the "
-                 "others as they are", ("source", *boxed), tuple(rows))
+                 "others as they are", ("source", *(_marked(dataset, q) for q in boxed)), tuple(rows))
 
 
 def arcs(dataset: xr.Dataset) -> Table | None:

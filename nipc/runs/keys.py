@@ -18,7 +18,7 @@ _VERSION = b"nipc run key 1"
 
 def little(array: FloatArray) -> bytes:
     """The numbers as raw little-endian float64, in C order."""
-    return np.ascontiguousarray(array, dtype="<f8").tobytes()
+    return array.astype("<f8", copy=False).tobytes()
 
 
 def arc_digest(batch: Batch, fingerprint: str) -> bytes:

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import enum
 import hashlib
-from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import Any
 
@@ -51,51 +50,49 @@ class Record:
         return (0, 0) if self.states is None else (self.states.shape[0], self.states.shape[1])
 
 
-def checksum(values: Iterable[object]) -> bytes:
-    """16 bytes that change when any bit of a row does."""
-    digest = hashlib.blake2b(digest_size=16)
-    for value in values:
-        part = value if isinstance(value, bytes) else repr(value).encode("utf-8", "replace")
-        digest.update(len(part).to_bytes(8, "little"))
-        digest.update(part)
-    return digest.digest()
+SCALARS = (
+    "status", "kind", "reason", "seconds", "attempt", "block_size", "host", "elapsed", "finished",
+    "arc", "batch", "ended", "n_times", "n_states",
+)  # fmt: skip
+BLOBS = ("key", "block", "start", "coefficients", "parameters", "states")
+COLUMNS = (*SCALARS, *BLOBS, "checksum")
+_SPLIT = len(SCALARS)
 
 
-def to_row(record: Record, arc: int, batch: int, finished: float) -> tuple[object, ...]:
+def checksum(values: tuple[Any, ...]) -> bytes:
+    """16 bytes that change when any bit of a row does; values in the order of `COLUMNS`."""
+    blobs = values[_SPLIT:]
+    head = repr((values[:_SPLIT], [len(blob) for blob in blobs]))
+    return hashlib.blake2b(b"".join((head.encode(), *blobs)), digest_size=16).digest()
+
+
+def to_row(record: Record, arc: int, batch: int, finished: float) -> tuple[Any, ...]:
     """The record in the order of `COLUMNS`."""
     # SQLite has no NaN: it would read back as NULL, so "did not end" is NULL from the start
+    ended = None if record.ended != record.ended else float(record.ended)
     values = (
-        record.key, int(record.status), record.kind, _storable(record.reason),
-        float(record.seconds), int(record.attempt), record.block, int(record.block_size),
-        record.host, float(record.elapsed), float(finished), arc, batch,
-        None if np.isnan(record.ended) else float(record.ended), *record.shape(),
-        little(record.start), little(record.coefficients), little(record.parameters),
-        b"" if record.states is None else little(record.states),
+        int(record.status), record.kind, record.reason.encode("utf-8", "replace").decode(),
+        float(record.seconds), int(record.attempt), int(record.block_size), record.host,
+        float(record.elapsed), float(finished), arc, batch, ended, *record.shape(),
+        record.key, record.block, little(record.start), little(record.coefficients),
+        little(record.parameters), b"" if record.states is None else little(record.states),
     )  # fmt: skip
     return (*values, checksum(values))
 
 
-def _storable(text: str) -> str:
-    return text.encode("utf-8", "replace").decode()
-
-
-COLUMNS = (
-    "key", "status", "kind", "reason", "seconds", "attempt", "block", "block_size", "host",
-    "elapsed", "finished", "arc", "batch", "ended", "n_times", "n_states",
-    "start", "coefficients", "parameters", "states", "checksum",
-)  # fmt: skip
-
-
 def from_row(row: tuple[Any, ...]) -> Record | None:
     """The record of a row in the order of `COLUMNS`; None when its checksum does not fit it."""
-    if row[-1] != checksum(row[:-1]):
+    try:
+        if row[-1] != checksum(row[:-1]):
+            return None
+    except TypeError:  # a blob became something else
         return None
     (
-        key, status, kind, reason, seconds, attempt, block, block_size, host,
-        elapsed, _, _, _, ended, n_times, n_states, *blobs, _,
+        status, kind, reason, seconds, attempt, block_size, host, elapsed, _, _, _, ended,
+        n_times, n_states, key, block, *blobs, _,
     ) = row  # fmt: skip
     start, coefficients, parameters, states = (np.frombuffer(blob, dtype="<f8") for blob in blobs)
-    done = Status(status) is Status.DONE
+    done = status == Status.DONE
     return Record(
         key=key, status=Status(status), start=start, coefficients=coefficients,
         parameters=parameters, states=states.reshape(n_times, n_states) if done else None,

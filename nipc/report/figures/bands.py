@@ -7,7 +7,6 @@ import xarray as xr
 from matplotlib.axes import Axes
 from matplotlib.lines import Line2D
 
-from nipc.arrays import FloatArray
 from nipc.report import reading
 from nipc.report.figures import frame
 from nipc.report.numbers import number
@@ -54,44 +53,17 @@ def bands(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> Axes:
     low, high = (x if x is not None else middle for x in outer)
     if members is not None:
         low, high = np.fmin(low, members.min(axis=0)), np.fmax(high, members.max(axis=0))
-    cut = _set_view(ax, dataset, quantity, low, high)
     box = reading.box(dataset, quantity)
+    cut = frame.set_view(ax, dataset, quantity, low, high, box.edges if box is not None else [])
     if box is not None:
         handles.append(_draw_box(ax, box))
         labels.append(_box_label(ax, box))
     frame.time_axis(ax, dataset)
-    if cut:
-        reach = f"{number(np.nanmin(low), 3)} to {number(np.nanmax(high), 3)}"
-        ax.set_xlabel(f"{ax.get_xlabel()}\nview cut: the motion reaches {reach}")
+    frame.say_cut(ax, cut)
     frame.value_axis(ax, frame.printable(quantity), reading.unit(dataset, quantity))
     marked = frame.mark_trust(ax, dataset, quantity)
     frame.legend(ax, handles, labels, raised=marked)
     return ax
-
-
-def _set_view(
-    ax: Axes, dataset: xr.Dataset, quantity: str, low: FloatArray, high: FloatArray
-) -> bool:
-    """Vertical limits; whether the band had to be cut past the trust horizon."""
-    bottom, top = float(np.nanmin(low)), float(np.nanmax(high))
-    trust, times = reading.trust(dataset, quantity), reading.times(dataset)
-    trusted = times <= np.nan_to_num(trust.distribution, nan=-np.inf)
-    cut = False
-    if trusted.any() and not trusted.all():
-        kept = float(np.nanmin(low[trusted])), float(np.nanmax(high[trusted]))
-        span = kept[1] - kept[0]
-        if span > 0 and top - bottom > 12 * span:
-            bottom, top, cut = kept[0] - 2 * span, kept[1] + 2 * span, True
-    if not np.isfinite(bottom) or not np.isfinite(top):
-        return False
-    span = top - bottom
-    box = reading.box(dataset, quantity)
-    for edge in box.edges if box is not None else []:
-        if bottom - 1.5 * span <= edge <= top + 1.5 * span:
-            bottom, top = min(bottom, edge), max(top, edge)
-    margin = 0.06 * (top - bottom) or 0.5 * (abs(top) * 1e-3 or 1.0)
-    ax.set_ylim(bottom - margin, top + margin)
-    return cut
 
 
 def _draw_box(ax: Axes, box: reading.Box) -> Line2D:

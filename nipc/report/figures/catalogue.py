@@ -29,7 +29,7 @@ class Entry:
 
 
 PER_QUANTITY: dict[str, tuple[Callable[..., Any], str]] = {
-    "bands": (bands, "{q} over time: its distribution, and some members of the ensemble."),
+    "bands": (bands, "Distribution of {q} over time, and some members of the ensemble."),
     "confinement": (confinement, "Probability that {q} is in its box, with 95 % intervals."),
     "driver_shares": (
         driver_shares, "Who drives the spread of {q}: shares of its variance over time."),
@@ -37,7 +37,7 @@ PER_QUANTITY: dict[str, tuple[Callable[..., Any], str]] = {
     "diffusion": (diffusion, "How the variance of {q} grows."),
     "direct_against_expansion": (
         direct_against_expansion,
-        "{q} of members that the fit never saw: direct runs against the expansion."),
+        "Members that the fit never saw: {q} by direct runs and by the expansion."),
 }
 OVERALL: dict[str, tuple[Callable[..., Any], str]] = {
     "spread_rate": (
@@ -88,12 +88,8 @@ def catalogue(dataset: xr.Dataset) -> Iterator[Entry]:
     for name, (function, caption) in PER_QUANTITY.items():
         for quantity in reading.quantities(dataset):
             if _fills(dataset, name, quantity):
-                yield Entry(name, quantity, _sentence(caption.replace("{q}", quantity)),
+                yield Entry(name, quantity, caption.replace("{q}", quantity),
                             lambda f=function, q=quantity: f(dataset, q))  # type: ignore[misc]
     for name, (function, caption) in OVERALL.items():
         if _fills(dataset, name, None):
             yield Entry(name, None, caption, lambda f=function: f(dataset))  # type: ignore[misc]
-
-
-def _sentence(text: str) -> str:
-    return text[:1].upper() + text[1:]

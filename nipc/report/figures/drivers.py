@@ -90,7 +90,12 @@ def driver_ranking(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -
     ax.set_xlim(0.0, max(1.12, 1.15 * float(at_end.max())))
     ax.set_xticks(np.arange(0.0, 1.01, 0.2))
     ax.grid(False, axis="y")
-    ax.set_xlabel(f"share of the variance of {frame.printable(quantity)} at the end")
+    trust = reading.trust(dataset, quantity)
+    late = {"": "", "†": "\n† past the trust horizon of its paths, within that of its distribution",
+            "‡": "\n‡ past its trust horizon" if trust.checked else "\n‡ not checked"}
+    mark = trust.mark(trust.end)
+    words = f"share of the variance of {frame.printable(quantity)} at the end"
+    ax.set_xlabel(f"{words}{mark}{late[mark]}")
     keys = [Patch(fill=False, edgecolor=LIGHT["ink"], lw=0.9), Patch(facecolor=LIGHT["soft"]),
             Line2D([], [], color=LIGHT["edge"], lw=1.5)]
     names_of_keys = ["total", "by itself", "95 % interval of the total"]

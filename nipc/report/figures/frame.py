@@ -18,6 +18,7 @@ from matplotlib.patches import Patch
 from matplotlib.ticker import FuncFormatter
 from matplotlib.transforms import blended_transform_factory
 
+from nipc.arrays import FloatArray
 from nipc.report import reading
 from nipc.report.numbers import amount, number, power_of_ten
 from nipc.report.style import HEIGHT, LIGHT, WIDTH
@@ -59,6 +60,42 @@ def time_axis(ax: Axes, dataset: xr.Dataset) -> None:
     ax.set_xlabel(with_unit("time", reading.time_unit(dataset)))
     if times[-1] > times[0]:
         ax.set_xlim(float(times[0]), float(times[-1]))
+
+
+def set_view(
+    ax: Axes, dataset: xr.Dataset, quantity: str, low: FloatArray, high: FloatArray,
+    edges: Sequence[float] = (),
+) -> tuple[float, float] | None:
+    """Vertical limits from curves low ... high (time,) and the edges of a box that lie near.
+
+    What happens within the trust horizon is not dwarfed by what comes later: then the view is cut,
+    and the range that was cut is returned.
+    """
+    reach = bottom, top = float(np.nanmin(low)), float(np.nanmax(high))
+    if not (np.isfinite(bottom) and np.isfinite(top)):
+        return None
+    trusted = reading.times(dataset) <= np.nan_to_num(
+        reading.trust(dataset, quantity).distribution, nan=-np.inf
+    )
+    cut = False
+    if trusted.any() and not trusted.all():
+        kept = float(np.nanmin(low[trusted])), float(np.nanmax(high[trusted]))
+        span = kept[1] - kept[0]
+        if span > 0 and top - bottom > 12 * span:
+            bottom, top, cut = kept[0] - 2 * span, kept[1] + 2 * span, True
+    span = top - bottom
+    near = [edge for edge in edges if bottom - 1.5 * span <= edge <= top + 1.5 * span]
+    bottom, top = min([bottom, *near]), max([top, *near])
+    margin = 0.06 * (top - bottom) or 0.5 * (abs(top) * 1e-3 or 1.0)
+    ax.set_ylim(bottom - margin, top + margin)
+    return reach if cut else None
+
+
+def say_cut(ax: Axes, cut: tuple[float, float] | None) -> None:
+    """Below the time axis: how far what was cut reaches."""
+    if cut is not None:
+        words = f"view cut: the motion reaches {number(cut[0], 3)} to {number(cut[1], 3)}"
+        ax.set_xlabel(f"{ax.get_xlabel()}\n{words}")
 
 
 def value_axis(ax: Axes, name: str, unit: str) -> None:

@@ -133,16 +133,20 @@ def _squared(unit: str) -> str:
 
 
 def log_labels(ax: Axes, which: str) -> None:
-    """Powers of ten as text, without the typesetting that figures with any name cannot use."""
+    """Ticks of log axes as text, without the typesetting that figures with any name cannot use."""
     def label(value: float, _: int) -> str:
         exponent = round(float(np.log10(value)))
         whole = abs(np.log10(value) - exponent) < 1e-6
         return power_of_ten(exponent) if whole else number(value, 2)
+
+    def simple(value: float, _: int) -> str:
+        return number(value, 2)
 
     for name in which:
         axis, limits = (ax.xaxis, ax.get_xlim()) if name == "x" else (ax.yaxis, ax.get_ylim())
         decades = np.log10(limits[1] / limits[0])
         subs: tuple[float, ...] = (1.0,) if decades > 1.5 else (1.0, 2.0, 5.0)
         axis.set_major_locator(LogLocator(subs=subs, numticks=7))
-        axis.set_major_formatter(FuncFormatter(label))
+        plain = limits[0] > 8e-4 and limits[1] < 2e4
+        axis.set_major_formatter(FuncFormatter(simple if plain else label))
         axis.set_minor_formatter(NullFormatter())

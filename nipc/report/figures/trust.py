@@ -76,6 +76,9 @@ def direct_against_expansion(
         ax.plot(times[offset::step], (expansion[row] - middle)[offset::step], ls="", ms=4.5,
                 marker=hand.marker, mfc=LIGHT["paper"], mec=hand.colour, mew=1.0)
     frame.time_axis(ax, dataset)
+    paths = np.concatenate([direct[:SHOWN], expansion[:SHOWN]]) - middle
+    cut = frame.set_view(ax, dataset, quantity, paths.min(axis=0), paths.max(axis=0))
+    frame.say_cut(ax, cut)
     less = " − mean" if mean is not None else ""
     frame.value_axis(ax, frame.printable(quantity) + less, reading.unit(dataset, quantity))
     marked = frame.mark_trust(ax, dataset, quantity)

@@ -1,0 +1,188 @@
+"""The answers of a chain of arcs, all from ensembles pushed through its composed expansions."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+import numpy as np
+
+from nipc.answers.drivers import PickFreezeAccumulator
+from nipc.answers.ensemble import add_ensemble
+from nipc.answers.intervals import Interval, normal_factor
+from nipc.answers.single import add_check
+from nipc.answers.spreading import spread_rate
+from nipc.answers.table import ResultTable
+from nipc.arrays import FloatArray
+from nipc.chain.chain import Chain
+from nipc.chain.check import HeldOut
+from nipc.chain.history import NoiseHistory, blocks_of
+from nipc.chain.horizon import Horizon
+from nipc.problem.quantities import QuantitySet
+
+LINEAR_MEMBERS = 3  # members a germ variable, at the least, to tell the linear part of a quantity
+
+
+class ChainAnswers:
+    """Members of a solved chain as quantities, and everything that follows from them."""
+
+    def __init__(self, horizon: Horizon, chain: Chain, quantities: QuantitySet) -> None:
+        self.horizon, self.chain, self.quantities = horizon, chain, quantities
+        self.times = horizon.outputs
+        self.groups = horizon.germ.groups()
+        self.far = 0
+
+    def of_values(self, values: FloatArray, parameters: FloatArray) -> FloatArray:
+        """Quantities (n, T, Q) of chart values (n, T, d)."""
+        states = self.horizon.chart.to_state(values, self.times * self.horizon.chart_time)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            return self.quantities(self.times, states, parameters)
+
+    def members(
+        self, history: NoiseHistory, streams: tuple[str, ...], block: int, count: int
+    ) -> FloatArray:
+        """Quantities (n, T, Q) of a block of members; NaN beyond what the chain reached."""
+        horizon = self.horizon
+        nodes = horizon.nodes(streams, block, count)
+        members = horizon.members_of(nodes, history, block)
+        values = np.full((count, self.times.size, members.values.shape[1]), np.nan)
+        values[:, self.times <= horizon.edges[0]] = members.values[:, None]
+        for arc in self.chain.maps:
+            steps, members, far = horizon.advance(arc, members, history, block)
+            values[:, horizon.output_rows(arc)] = steps[:, horizon.inner_times(arc)]
+            self.far += far
+        return self.of_values(values, members.parameters)
+
+    def plain(self) -> Iterator[tuple[FloatArray, None]]:
+        """The ensemble, block by block."""
+        streams = self.horizon.streams("a")
+        for block, count in blocks_of(self.horizon.study.ensemble.members):
+            yield self.members(self.horizon.history, streams, block, count), None
+
+    def table(self) -> ResultTable:
+        """All answers of the chain."""
+        study, chain = self.horizon.study, self.chain
+        table = ResultTable(study, tuple((g.name, g.kind) for g in self.groups))
+        parameters = self.horizon.germ.parameters(chain.check_nodes)
+        direct = self.of_values(chain.direct, parameters)
+        predicted = self.of_values(chain.predicted, parameters)
+        gap = direct - predicted
+        known = np.maximum(np.isfinite(gap).sum(axis=0), 1)
+        rms = np.sqrt(np.nansum(gap**2, axis=0) / known)
+        moments = add_ensemble(table, self.plain(), normal_factor() * rms)
+        std = moments.std
+        check = HeldOut(self.times, direct, predicted, std)
+        add_check(table, check, study.tolerance)
+        unit = "as the quantity"
+        mean, std_ends = moments.mean_interval(), moments.std_interval()
+        # a path error e that is independent of the path adds e^2 to the variance; one that is not
+        # moves the standard deviation by up to its mean over the check's members
+        shift = rms / np.sqrt(known)
+        table.over_time(
+            "mean", moments.mean, unit, "mean", Interval(mean.low - shift, mean.high + shift)
+        )
+        upper = np.sqrt(std_ends.high**2 + rms**2) + shift
+        table.over_time(
+            "std", std, unit, "standard deviation",
+            Interval(np.maximum(std_ends.low - shift, 0.0), upper),
+        )  # fmt: skip
+        table.over_time(
+            "spread_rate",
+            spread_rate(moments.variance, self.times),
+            f"1/{study.clock.unit}",
+            "half the log growth rate of the variance",
+        )
+        self._drivers(table)
+        self._nonlinear(table)
+        self._arcs(table)
+        return table
+
+    def _drivers(self, table: ResultTable) -> None:
+        """Pick and freeze: each group in turn drawn from an independent ensemble."""
+        horizon = self.horizon
+        history, other = horizon.history, horizon.history.restreamed("b")
+        own, foreign = horizon.streams("a"), horizon.streams("b")
+        shares = PickFreezeAccumulator([g.name for g in self.groups])
+        names = ("start", *horizon.germ.parameter_names)
+        sources = [s.name for s in horizon.germ.noise.sources]
+
+        def mixed(block: int, count: int) -> Iterator[FloatArray]:
+            for group in self.groups:
+                if group.kind == "noise":
+                    swapped = history.with_stream(sources.index(group.name), "b")
+                    yield self.members(swapped, own, block, count)
+                else:
+                    streams = tuple("b" if name == group.name else "a" for name in names)
+                    yield self.members(history, streams, block, count)
+
+        for block, count in blocks_of(min(horizon.study.ensemble.members, 40_000)):
+            shares.update(
+                self.members(history, own, block, count),
+                self.members(other, foreign, block, count),
+                mixed(block, count),
+            )
+        result = shares.result()
+        table.by_driver(
+            "driver_first", result.first, "first-order share of the variance", result.first_interval
+        )
+        table.by_driver(
+            "driver_total", result.total, "total share of the variance", result.total_interval
+        )
+
+    def _nonlinear(self, table: ResultTable) -> None:
+        """Share of variance that no linear function of start, parameters and noise explains."""
+        horizon, chain = self.horizon, self.chain
+        width = horizon.germ.first_noise + sum(arc.noise.size for arc in chain.maps)
+        shape = (self.times.size, len(self.quantities.names))
+        members = horizon.study.ensemble.members
+        share = np.full(shape, np.nan)
+        if LINEAR_MEMBERS * width < members:
+            share = self._unexplained(width, min(members, max(4096, 6 * width)))
+        table.over_time("nonlinear_share", share, "1", "share of variance beyond degree one")
+
+    def _unexplained(self, width: int, count: int) -> FloatArray:
+        horizon = self.horizon
+        germ, values = np.zeros((count, width + 1 + len(horizon.gauss_markov))), []
+        row = 0
+        for block, part in blocks_of(count):
+            nodes = horizon.nodes(horizon.streams("a"), block, part)
+            columns = [np.ones((part, 1)), nodes[:, : horizon.germ.first_noise]]
+            columns += [
+                horizon.history.initial(j, block, part)[:, None] for j in horizon.gauss_markov
+            ]
+            for arc in self.chain.maps:
+                columns.append(
+                    horizon.fresh(arc.noise, horizon.history, arc.first, arc.last, block, part)
+                )
+            joined = np.hstack(columns)
+            germ[row : row + part, : joined.shape[1]] = joined
+            values.append(self.members(horizon.history, horizon.streams("a"), block, part))
+            row += part
+        outputs = np.concatenate(values)
+        flat = outputs.reshape(count, -1)
+        usable = np.isfinite(flat).all(axis=0)
+        result = np.full(flat.shape[1], np.nan)
+        live = germ[:, np.any(germ != 0.0, axis=0)]
+        q, _ = np.linalg.qr(live)
+        centred = flat[:, usable] - flat[:, usable].mean(axis=0)
+        rest = centred - q @ (q.T @ centred)
+        total = np.sum(centred**2, axis=0) / (count - 1)
+        left = np.sum(rest**2, axis=0) / (count - live.shape[1])
+        with np.errstate(invalid="ignore", divide="ignore"):
+            part_left = np.where(total > 0, np.clip(left / total, 0.0, 1.0), np.nan)
+        result[usable] = part_left
+        return result.reshape(outputs.shape[1:])
+
+    def _arcs(self, table: ResultTable) -> None:
+        records = self.chain.records
+        unit = table.study.clock.unit
+        for name, units, words in (
+            ("start", unit, "start of the arc"),
+            ("end", unit, "end of the arc"),
+            ("degree", "1", "degree of the arc's expansion"),
+            ("terms", "1", "terms of the arc's expansion"),
+            ("runs", "1", "runs of the arc's design"),
+            ("error", "1", "held-out error at the arc's end over the spread there"),
+            ("note", "", "why the arc is as it is"),
+        ):
+            values = [getattr(r, name) for r in records]
+            table.add(f"arc_{name}", ("arc",), values, units, words)

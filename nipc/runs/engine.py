@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from types import TracebackType
 from typing import Self
@@ -14,11 +14,11 @@ from nipc.errors import InputError, Interrupted, RunsError
 from nipc.runs.crew import Crew, InlineCrew, Work
 from nipc.runs.keys import run_keys
 from nipc.runs.ledger import Ledger
-from nipc.runs.outcomes import Outcomes, gather
+from nipc.runs.outcomes import Gathering, Outcomes
 from nipc.runs.processes import ProcessCrew
 from nipc.runs.progress import Progress, Silent
 from nipc.runs.propagator import Batch, Propagator
-from nipc.runs.record import Status
+from nipc.runs.record import Record, Status
 from nipc.runs.unit import Answer, Problem, Unit
 from nipc.runs.writer import Writer
 
@@ -87,26 +87,39 @@ class Engine:
         Raises Interrupted on Ctrl-C and RunsError when more fail than the policy tolerates; what
         was finished is kept in both cases. LedgerError when it cannot be.
         """
-        fresh = self.ensure(batch, label)
-        found = self.collect(batch, fresh)
-        if "missing" in found.kinds:  # struck out as damaged while they were read
-            fresh |= self.ensure(batch, label)
-            found = self.collect(batch, fresh)
+        keys = run_keys(batch, self._fingerprint)
+        gathering = Gathering(batch, keys)
+        fresh = self._complete(batch, keys, label, lambda done: gathering.add(done, False))
+        kept = [key for key in dict.fromkeys(keys) if key not in fresh]
+        gathering.add(self.ledger.read(kept), True)
+        found = gathering.outcomes()
+        if "missing" in found.kinds:  # found damaged while they were read
+            self.ensure(batch, label)
+            found = self.collect(batch)
         return found
 
-    # -- running ---------------------------------------------------------------------------------
-
-    def ensure(self, batch: Batch, label: str) -> frozenset[bytes]:
-        """Run and keep what is missing; the keys of those. Memory does not grow with their number.
+    def ensure(self, batch: Batch, label: str) -> None:
+        """Run and keep what is missing. Memory does not grow with the number of runs.
 
         Raises as `run`.
         """
+        self._complete(batch, run_keys(batch, self._fingerprint), label, lambda done: None)
+
+    # -- running ---------------------------------------------------------------------------------
+
+    def _complete(
+        self,
+        batch: Batch,
+        keys: list[bytes],
+        label: str,
+        tell: Callable[[list[Record]], None],
+    ) -> frozenset[bytes]:
+        """Run and keep what is missing, telling of what is kept; the keys of those."""
         if self.propagator.fingerprint() != self._fingerprint:
             raise RunsError(
                 "the propagator's files changed while the study was running; start again: runs of"
                 " the old files will not be used"
             )
-        keys = run_keys(batch, self._fingerprint)
         known = self.ledger.find(keys)
         unique = {key: row for row, key in reversed(list(enumerate(keys)))}
         rows = sorted(row for key, row in unique.items() if not self._settled(known.get(key)))
@@ -115,7 +128,7 @@ class Engine:
         if not rows:
             return frozenset()
         number = self.ledger.begin(batch, self._fingerprint, label, len(batch), reused)
-        writer = Writer(self.ledger, number, keys, batch, self._progress)
+        writer = Writer(self.ledger, number, keys, batch, self._progress, tell)
         tally = _Tally(len(batch), sum(
             known[key][0] is Status.FAILED for key in unique if self._settled(known.get(key))
         ))  # fmt: skip
@@ -222,9 +235,12 @@ class Engine:
 
     # -- collecting ------------------------------------------------------------------------------
 
-    def collect(self, batch: Batch, fresh: frozenset[bytes] = frozenset()) -> Outcomes:
+    def collect(self, batch: Batch) -> Outcomes:
         """What the ledger holds of a batch, without running anything."""
-        return gather(self.ledger, batch, self._fingerprint, fresh)
+        keys = run_keys(batch, self._fingerprint)
+        gathering = Gathering(batch, keys)
+        gathering.add(self.ledger.read(list(dict.fromkeys(keys))), True)
+        return gathering.outcomes()
 
     def pieces(self, batch: Batch, size: int = 1024) -> Iterator[tuple[slice, Outcomes]]:
         """The same, so many runs at a time, for batches that do not fit into memory."""

@@ -25,7 +25,7 @@ from nipc.runs.record import COLUMNS, Record, Status, from_row, to_row
 FILE_NAME = "ledger.sqlite"
 LOCK_NAME = "ledger.lock"
 _KEYS_AT_ONCE = 400
-_RUNS_AT_ONCE = 32
+_BYTES_AT_ONCE = 1 << 22
 _T = TypeVar("_T")
 
 
@@ -101,13 +101,17 @@ class Ledger:
         When a record's checksum does not fit it, the file is rescued, and `notes` says so.
         """
         damaged = False
-        for part in _parts(keys, _RUNS_AT_ONCE):
+        first, size = 0, 1
+        while first < len(keys):
+            part = keys[first : first + size]
+            first += size
             for row in self._recovering(lambda part=part: self._rows(part)):  # type: ignore[misc]
                 record = from_row(row)
                 if record is None:
                     damaged = True
                 else:
                     yield record
+                    size = max(1, min(_KEYS_AT_ONCE, _BYTES_AT_ONCE // (8 * record.numbers + 1)))
         if damaged:
             self._rescue()
 

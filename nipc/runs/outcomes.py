@@ -2,15 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from nipc.arrays import BoolArray, FloatArray
 from nipc.runs.failures import FailureReport, report
-from nipc.runs.keys import run_keys
-from nipc.runs.ledger import Ledger
 from nipc.runs.propagator import Batch
+from nipc.runs.record import Record
 
 
 @dataclass(frozen=True, eq=False)
@@ -35,35 +35,45 @@ class Outcomes:
         return int(self.ok.size)
 
 
-def gather(
-    ledger: Ledger, batch: Batch, fingerprint: str, fresh: frozenset[bytes] = frozenset()
-) -> Outcomes:
-    """What the ledger holds of a batch; runs that it lacks are failures of kind `missing`.
+class Gathering:
+    """Collects records of a batch's runs, in any order, into `Outcomes`."""
 
-    `fresh` are the keys of runs that count as new rather than reused.
-    """
-    n, m, d = len(batch), batch.times.size, batch.states.shape[1]
-    rows: dict[bytes, list[int]] = {}
-    for row, key in enumerate(run_keys(batch, fingerprint)):
-        rows.setdefault(key, []).append(row)
-    states, ended, seconds = np.full((n, m, d), np.nan), np.full(n, np.nan), np.zeros(n)
-    ok, reused = np.zeros(n, bool), np.zeros(n, bool)
-    kinds: list[str | None] = ["missing"] * n
-    reasons: list[str | None] = ["not run"] * n
-    for record in ledger.read(list(rows)):
-        for row in rows[record.key]:
-            seconds[row] = record.seconds
-            reused[row] = record.key not in fresh
-            if record.states is not None:
-                states[row], ended[row], ok[row] = record.states, record.ended, True
-                kinds[row] = reasons[row] = None
-            else:
-                kinds[row], reasons[row] = record.kind, record.reason
-    germ = np.concatenate([batch.states, batch.forcing.coefficients, batch.parameters], axis=1)
-    names = (
-        *(f"start[{k}]" for k in range(1, d + 1)),
-        *batch.forcing.labels,
-        *(f"parameter[{k}]" for k in range(1, batch.parameters.shape[1] + 1)),
-    )
-    found = report(ok, kinds, reasons, germ, names)
-    return Outcomes(states, ok, ended, tuple(reasons), tuple(kinds), reused, seconds, found)
+    def __init__(self, batch: Batch, keys: Sequence[bytes]) -> None:
+        n, m, d = len(batch), batch.times.size, batch.states.shape[1]
+        self._batch = batch
+        self._rows: dict[bytes, list[int]] = {}
+        for row, key in enumerate(keys):
+            self._rows.setdefault(key, []).append(row)
+        self._states = np.full((n, m, d), np.nan)
+        self._ended, self._seconds = np.full(n, np.nan), np.zeros(n)
+        self._ok, self._reused = np.zeros(n, bool), np.zeros(n, bool)
+        self._kinds: list[str | None] = ["missing"] * n
+        self._reasons: list[str | None] = ["not run"] * n
+
+    def add(self, records: Iterable[Record], reused: bool) -> None:
+        """Enter what became of some runs."""
+        for record in records:
+            rows = self._rows.get(record.key, [])
+            for row in rows:
+                self._seconds[row], self._reused[row] = record.seconds, reused
+                if record.states is not None:
+                    self._states[row], self._ended[row] = record.states, record.ended
+                    self._ok[row] = True
+                    self._kinds[row] = self._reasons[row] = None
+                else:
+                    self._kinds[row], self._reasons[row] = record.kind, record.reason
+
+    def outcomes(self) -> Outcomes:
+        """What was entered; runs of which nothing is known are failures of kind `missing`."""
+        batch = self._batch
+        germ = np.concatenate([batch.states, batch.forcing.coefficients, batch.parameters], axis=1)
+        names = (
+            *(f"start[{k}]" for k in range(1, batch.states.shape[1] + 1)),
+            *batch.forcing.labels,
+            *(f"parameter[{k}]" for k in range(1, batch.parameters.shape[1] + 1)),
+        )
+        kinds, reasons = tuple(self._kinds), tuple(self._reasons)
+        return Outcomes(
+            self._states, self._ok, self._ended, reasons, kinds, self._reused, self._seconds,
+            report(self._ok, kinds, reasons, germ, names),
+        )  # fmt: skip

@@ -45,6 +45,11 @@ class Record:
     host: str = ""
     elapsed: float = 0.0
 
+    @property
+    def numbers(self) -> int:
+        """How many float64 the states are."""
+        return 0 if self.states is None else self.states.size
+
     def shape(self) -> tuple[int, int]:
         """(m, d), or (0, 0) for a run without states."""
         return (0, 0) if self.states is None else (self.states.shape[0], self.states.shape[1])

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 
 import numpy as np
 
@@ -22,16 +22,22 @@ COMMIT_BYTES = 1 << 25
 class Writer:
     """Keeps the runs of one batch, at the latest `COMMIT_SECONDS` after they are finished.
 
-    Runs that came from one call are kept together or not at all. Progress hears of a run once it
-    is on the disk.
+    Runs that came from one call are kept together or not at all. Progress, and `tell`, hear of a
+    run once it is on the disk.
     """
 
     def __init__(
-        self, ledger: Ledger, number: int, keys: Sequence[bytes], batch: Batch, progress: Progress
+        self,
+        ledger: Ledger,
+        number: int,
+        keys: Sequence[bytes],
+        batch: Batch,
+        progress: Progress,
+        tell: Callable[[list[Record]], None],
     ) -> None:
         self.kept = 0
         self._ledger, self._number, self._keys, self._batch = ledger, number, keys, batch
-        self._progress = progress
+        self._progress, self._tell = progress, tell
         self._records: list[Record] = []
         self._bytes = 0
         self._began = self._last = time.monotonic()
@@ -87,4 +93,5 @@ class Writer:
         failed = sum(1 for record in final if record.status is Status.FAILED)
         self._records, self._bytes = [], 0
         self.kept += len(final)
+        self._tell(final)
         self._progress.advance(len(final), failed)

@@ -62,7 +62,10 @@ class Box:
 
     def present(self, values: FloatArray) -> BoolArray:
         """(..., Q) to (...): are all of the box's quantities known?"""
-        return np.asarray(np.isfinite(values[..., list(self.columns)]).all(axis=-1))
+        known = np.isfinite(values[..., self.columns[0]])
+        for column in self.columns[1:]:
+            known &= np.isfinite(values[..., column])
+        return np.asarray(known)
 
 
 @dataclass(frozen=True)
@@ -104,6 +107,16 @@ def survival_indicator(
     left = np.maximum.accumulate(there.seen & ~there.inside, axis=1)
     lost = np.maximum.accumulate(~there.seen, axis=1)
     return np.where(left & ~_lost_first(left, lost), 0.0, np.where(lost, np.nan, 1.0))
+
+
+def survived(
+    values: FloatArray, times: FloatArray, box: Box, ended: FloatArray | None = None
+) -> FloatArray:
+    """`survival_indicator` at the last time, (n,)."""
+    there = presence(values, times, box, ended)
+    if there.seen.all():
+        return np.asarray(there.inside.all(axis=1), float)
+    return survival_indicator(values, times, box, ended)[:, -1]
 
 
 def _lost_first(left: BoolArray, lost: BoolArray) -> BoolArray:

@@ -11,7 +11,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from nipc.answers.batches import batch_sums, jackknife_error, leave_one_out
+from nipc.answers.batches import (
+    batch_products,
+    batch_sums,
+    centre_of,
+    jackknife_error,
+    leave_one_out,
+)
 from nipc.answers.intervals import LEVEL, Interval, normal_factor
 from nipc.arrays import BoolArray, FloatArray
 
@@ -57,37 +63,39 @@ class PickFreezeAccumulator:
     def update(self, a: FloatArray, b: FloatArray, mixed: Iterable[FloatArray]) -> None:
         """Add q_A and q_B (n, T, Q), and q_Ag for each group in order; a generator saves memory."""
         if self._centre is None:
-            both = np.concatenate([a, b])
-            present = np.isfinite(both)
-            total = np.where(present, both, 0.0).sum(axis=0)
-            self._centre = total / np.maximum(present.sum(axis=0), 1)
+            self._centre = centre_of(np.concatenate([a, b]))
             self._sums = [np.zeros((10, self.batches, *a.shape[1:])) for _ in self.groups]
         a, b = a - self._centre, b - self._centre
         own = np.isfinite(a) & np.isfinite(b)
-        plain = self._pair_sums(a, b, np.ones_like(a)) if own.all() else None
+        plain = self._pair_sums(a, b, np.ones((len(a), 1, 1))) if own.all() else None
         for sums, run in zip(self._sums, mixed, strict=True):
             run = run - self._centre
-            present = np.isfinite(run)
+            present = own & np.isfinite(run)
             if plain is not None and present.all():
                 sums[:5] += plain
                 self._add_group(sums, a, b, run)
             else:
-                present &= own
                 kept = [np.where(present, q, 0.0) for q in (a, b, run)]
                 sums[:5] += self._pair_sums(kept[0], kept[1], present.astype(float))
                 self._add_group(sums, *kept)
-        self.members += a.shape[0]
+        self.members += len(a)
 
-    def _deal(self, values: FloatArray) -> FloatArray:
-        return batch_sums(values, self.batches, self.members)
+    def _deal(self, values: FloatArray, by: FloatArray | None = None) -> FloatArray:
+        if by is None:
+            return batch_sums(values, self.batches, self.members)
+        return batch_products(values, by, self.batches, self.members)
 
     def _pair_sums(self, a: FloatArray, b: FloatArray, present: FloatArray) -> FloatArray:
-        return np.stack([self._deal(q) for q in (present, a, b, a * a, b * b)])
+        count = np.broadcast_to(self._deal(present), (self.batches, *a.shape[1:]))
+        return np.stack([count, self._deal(a), self._deal(b), self._deal(a, a), self._deal(b, b)])
 
     def _add_group(self, sums: FloatArray, a: FloatArray, b: FloatArray, run: FloatArray) -> None:
         step = run - a
-        for place, q in enumerate((step * step, b * step, run, run * run, b * run), start=5):
-            sums[place] += self._deal(q)
+        sums[5] += self._deal(step, step)
+        sums[6] += self._deal(b, step)
+        sums[7] += self._deal(run)
+        sums[8] += self._deal(run, run)
+        sums[9] += self._deal(b, run)
 
     def result(self, level: float = LEVEL) -> DriverShares:
         """The shares; intervals are asymptotically normal."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from nipc.answers.batches import batch_sums
+from nipc.answers.batches import batch_products, batch_sums, centre_of
 from nipc.answers.intervals import LEVEL, Interval, mean_interval, std_interval
 from nipc.arrays import FloatArray
 
@@ -26,22 +26,21 @@ class MomentAccumulator:
     def update(self, values: FloatArray) -> None:
         """Add a block of members, (n, T, Q)."""
         values = np.asarray(values, float)
-        present = np.isfinite(values)
-        whole = bool(present.all())
-        count = np.ones_like(values) if whole else present.astype(float)
         if self._centre is None or self._sums is None:
-            total = np.where(present, values, 0.0).sum(axis=0)
-            self._centre = total / np.maximum(count.sum(axis=0), 1.0)
+            self._centre = centre_of(values)
             self._sums = np.zeros((5, self.batches, *values.shape[1:]))
         away = values - self._centre
-        if not whole:
+        present = np.isfinite(away)
+        if present.all():
+            self._sums[0] += batch_sums(np.ones((len(away), 1, 1)), self.batches, self.members)
+        else:
             away[~present] = 0.0
-        power = count
-        for order in range(5):
-            self._sums[order] += batch_sums(power, self.batches, self.members)
-            if order < 4:
-                power = away if order == 0 else power * away
-        self.members += values.shape[0]
+            self._sums[0] += batch_sums(present.astype(float), self.batches, self.members)
+        square = away * away
+        self._sums[1] += batch_sums(away, self.batches, self.members)
+        for order, (left, right) in enumerate(((away, away), (away, square), (square, square)), 2):
+            self._sums[order] += batch_products(left, right, self.batches, self.members)
+        self.members += len(away)
 
     def _central(self, sums: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
         """(count, mean, variance, fourth moment) of sums of powers (5, ...)."""

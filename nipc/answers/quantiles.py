@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from nipc.answers.batches import centre_of
 from nipc.answers.intervals import LEVEL, Interval, quantile_ranks
 from nipc.arrays import FloatArray
 
@@ -27,9 +28,7 @@ class QuantileAccumulator:
         if values.shape[0] == 0:
             return
         if self._centre is None:
-            present = np.isfinite(values)
-            total = np.where(present, values, 0.0).sum(axis=0)
-            self._centre = total / np.maximum(present.sum(axis=0), 1)
+            self._centre = centre_of(values)
         away = np.moveaxis(values - self._centre, 0, -1)
         self._blocks.append(np.ascontiguousarray(away, dtype=np.float32))
         self.members += values.shape[0]

@@ -10,19 +10,22 @@ from typing import Any
 import numpy as np
 import xarray as xr
 
-from nipc.report import headline, hover, reading, tables
+from nipc.report import headline, hover, panel, reading, tables
 from nipc.report.numbers import amount, number, seconds
-from nipc.report.style import DARK, LIGHT
+from nipc.report.style import DARK, LIGHT, STROKES
 
 POINTS = 600
 """Times kept in the page; figures a few inches wide show no more."""
 
+SCRIPTS = ("clock.js", "chart.js", "panel.js")
+
 SECTIONS = (
-    ("spread", "Where it goes", ("bands",)),
+    ("spread", "Where it goes", ("bands", "density")),
     ("stays", "Stays or leaves", ("confinement",)),
     ("drivers", "What drives it", ("driver_shares", "driver_ranking")),
     ("kind", "Kind of spreading", ("diffusion", "spread_rate", "nonlinear_share")),
-    ("trust", "How far to trust it", ("check_error", "direct_against_expansion")),
+    ("trust", "How far to trust it",
+     ("check_error", "coefficient_decay", "direct_against_expansion", "noise_kept")),
     ("cost", "What it cost", ("chain", "failures")),
 )
 
@@ -85,13 +88,16 @@ def render(dataset: xr.Dataset) -> str:
         horizon=_horizon(dataset),
         sections=sections,
         values=[tables.moments(dataset, q) for q in reading.quantities(dataset)],
+        whatif_after="drivers" if any(s.key == "drivers" for s in sections) else sections[0].key,
         study=str(dataset.attrs.get("study", "")),
         provenance=_provenance(dataset),
         cautions=_cautions(dataset),
-        clock={"times": hover.compact(reading.times(small)), "unit": reading.time_unit(small)},
+        clock={"times": hover.compact(reading.times(small), "digits:9"),
+               "unit": reading.time_unit(small)},
         css=Markup((templates / "page.css").read_text("utf-8")),
-        script=Markup((templates / "page.js").read_text("utf-8")),
-        light=LIGHT, dark=DARK,
+        script=Markup("\n".join((templates / name).read_text("utf-8") for name in SCRIPTS)),
+        whatif=panel.stored(small), remarks=panel.remarks(small),
+        light=LIGHT, dark=DARK, inks=[stroke.ink for stroke in STROKES],
     )
 
 
@@ -202,13 +208,15 @@ def save_figures(
 
     folder = Path(folder)
     folder.mkdir(parents=True, exist_ok=True)
-    names, written = reading.quantities(dataset), []
+    written: list[Path] = []
+    stems: set[str] = set()
     for entry in catalogue(dataset):
         axes = entry.draw()
         first = axes[0] if isinstance(axes, tuple) else axes
-        stem = entry.name
-        if entry.quantity is not None:
-            stem += f"-{_file_name(entry.quantity, names)}"
+        stem = _file_name(entry.name, entry.of)
+        while stem in stems:  # names that differ only in what a file name cannot hold
+            stem += "_"
+        stems.add(stem)
         for form in formats:
             target = folder / f"{stem}.{form}"
             with styled():
@@ -217,9 +225,7 @@ def save_figures(
     return written
 
 
-def _file_name(quantity: str, names: list[str]) -> str:
-    """A quantity's name as part of a file name: letters and digits only, and unambiguous."""
-    plain = "".join(c if c.isascii() and c.isalnum() else "_" for c in quantity)[:40]
-    same = [n for n in names if "".join(
-        c if c.isascii() and c.isalnum() else "_" for c in n)[:40] == plain]
-    return plain if len(same) == 1 and plain.strip("_") else f"{plain}_{names.index(quantity) + 1}"
+def _file_name(name: str, subjects: tuple[str, ...]) -> str:
+    """A figure and what it is of as a file name: ASCII letters and digits only."""
+    plain = ("".join(c if c.isascii() and c.isalnum() else "_" for c in s)[:40] for s in subjects)
+    return "-".join([name, *plain])

@@ -53,7 +53,7 @@ DARK = {
 }
 
 WIDTH, HEIGHT = 6.4, 3.7
-"""Inches: 461 x 266 points, so that 10.5 pt stay legible when a page is 400 pixels wide."""
+"""Inches: 461 x 266 points, so that 11 pt stay legible when a page is 400 pixels wide."""
 
 
 @dataclass(frozen=True)
@@ -86,7 +86,7 @@ LINE_STROKES = tuple(STROKES[i] for i in (0, 4, 2, 6))
 SETTINGS: Any = {
     "font.family": "sans-serif",
     "font.sans-serif": ["DejaVu Sans"],
-    "font.size": 10.5,
+    "font.size": 11.5,
     "text.color": LIGHT["ink"],
     "text.parse_math": False,
     "axes.edgecolor": LIGHT["soft"],
@@ -106,11 +106,11 @@ SETTINGS: Any = {
     "ytick.color": LIGHT["soft"],
     "xtick.labelcolor": LIGHT["ink"],
     "ytick.labelcolor": LIGHT["ink"],
-    "xtick.labelsize": 10,
-    "ytick.labelsize": 10,
+    "xtick.labelsize": 11,
+    "ytick.labelsize": 11,
     "hatch.linewidth": 0.6,
     "legend.frameon": False,
-    "legend.fontsize": 9.5,
+    "legend.fontsize": 10.5,
     "legend.handlelength": 2.2,
     "legend.borderaxespad": 0.0,
     "legend.borderpad": 0.0,

@@ -34,6 +34,7 @@ class TimeFrame:
     start: float
     end: float
     logarithmic: bool
+    elapsed: bool
 
 
 @dataclass(frozen=True)
@@ -53,6 +54,10 @@ def inline(figure: Figure, key: str) -> Drawing:
     target = io.StringIO()
     blank = {"Date": None, "Creator": None, "Format": None, "Type": None}
     with styled(), rc_context({"svg.hashsalt": key, "savefig.facecolor": "none"}):
+        engine = figure.get_layout_engine()
+        if engine is not None:  # once, rather than in a drawing pass of its own
+            engine.execute(figure)
+            figure.set_layout_engine("none")
         figure.savefig(target, format="svg", metadata=blank)
     width, height = (72.0 * float(side) for side in figure.get_size_inches())
     return Drawing(_compact(target.getvalue(), key, width, height), width, height,
@@ -101,4 +106,4 @@ def _time_frame(figure: Figure, width: float, height: float) -> TimeFrame | None
              (1 - max(b.y1 for b in boxes)) * height, (1 - min(b.y0 for b in boxes)) * height)
     left, right, top, bottom = (round(float(side), 2) for side in sides)
     return TimeFrame(left, right, top, bottom, float(start), float(end),
-                     axes[-1].get_xscale() == "log")
+                     axes[-1].get_xscale() == "log", "since" in axes[-1].get_xlabel())

@@ -103,8 +103,8 @@ def allowances(dataset: xr.Dataset) -> Table | None:
             value = float(part.isel(quantity=reading.position(dataset, quantity)))
             cells.append("no limit found" if np.isinf(value) else number(value, 3))
         rows.append((source, *cells))
-    return Table("Largest intensity (of the start and parameters: scale) that keeps the box, the "
-                 "others as they are", ("source", *(_marked(dataset, q) for q in boxed)), tuple(rows))
+    caption = "Largest intensity that keeps the box (of start and parameters: scale), others fixed"
+    return Table(caption, ("source", *(_marked(dataset, q) for q in boxed)), tuple(rows))
 
 
 def arcs(dataset: xr.Dataset) -> Table | None:

@@ -171,6 +171,10 @@ def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
             np.array(["degree raised" if d == 2 else "" for d in degree]), ("arc",), "", "note"),
         "arc_failed": _variable(
             np.where(np.arange(arcs) == 31, 3, 0), ("arc",), "1", "failed runs"),
+        "degree_norm": _variable(
+            np.stack([0.99 + 0 * start[:-1], 10 ** rng.normal(-2, 0.2, arcs),
+                      np.where(degree == 2, 10 ** rng.normal(-3.6, 0.2, arcs), np.nan)], axis=1),
+            ("arc", "degree"), "1", "norm of the coefficients of a degree"),
         "member_quantity": _variable(values[:40], ("member", *qt), "", "some members"),
         "direct_quantity": _variable(
             values[40:48] + std * growth * rng.standard_normal((8, 3, 1)),
@@ -201,6 +205,7 @@ def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
             "source_kind": ("source", ["noise", "noise", "start"]),
             "level": LEVELS,
             "panel_time": times[near],
+            "degree": [1, 2, 3],
         },
         attrs={
             "title": "Slot watch over 28 days", "seed": 20260, "time_unit": "d",
@@ -213,6 +218,10 @@ def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
                 "(0.83 to 0.89), past the trust horizon of its paths at day 9.2.",
                 "The tangential noise drives 66 % of the spread of longitude at day 28.",
                 "Radius stays in its box for the whole 28 days with probability above 0.99.",
+            ]),
+            "noise_bases": json.dumps([
+                {"source": name, "basis": "legendre", "terms": 5}
+                for name in ("radial", "tangential")
             ]),
             "study": STUDY, "versions": json.dumps({"nipc": "0.1.0", "numpy": np.__version__}),
             "created": "2026-12-01T07:00:00+00:00", "monitoring_interval": 2.0 / 24,

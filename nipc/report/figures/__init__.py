@@ -8,8 +8,11 @@ from nipc.report.figures.bands import bands
 from nipc.report.figures.catalogue import Entry, catalogue
 from nipc.report.figures.chain import chain
 from nipc.report.figures.confinement import confinement
+from nipc.report.figures.decay import coefficient_decay
+from nipc.report.figures.density import density
 from nipc.report.figures.drivers import driver_ranking, driver_shares
 from nipc.report.figures.failures import failures
+from nipc.report.figures.noise import noise_kept
 from nipc.report.figures.spreading import diffusion, nonlinear_share, spread_rate
 from nipc.report.figures.trust import check_error, direct_against_expansion
 
@@ -19,12 +22,15 @@ __all__ = [
     "catalogue",
     "chain",
     "check_error",
+    "coefficient_decay",
     "confinement",
+    "density",
     "diffusion",
     "direct_against_expansion",
     "driver_ranking",
     "driver_shares",
     "failures",
+    "noise_kept",
     "nonlinear_share",
     "spread_rate",
 ]

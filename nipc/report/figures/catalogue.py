@@ -4,28 +4,38 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any
 
 import xarray as xr
 
+from nipc.problem.noise import BASES
 from nipc.report import reading
 from nipc.report.figures.bands import bands
 from nipc.report.figures.chain import chain
 from nipc.report.figures.confinement import confinement
+from nipc.report.figures.decay import coefficient_decay
+from nipc.report.figures.density import density, ensemble
 from nipc.report.figures.drivers import driver_ranking, driver_shares
 from nipc.report.figures.failures import failures
+from nipc.report.figures.noise import noise_kept
 from nipc.report.figures.spreading import diffusion, nonlinear_share, spread_rate
 from nipc.report.figures.trust import check_error, direct_against_expansion
 
 
 @dataclass(frozen=True)
 class Entry:
-    """One figure that can be drawn: its function's name, and the quantity it is of."""
+    """One figure that can be drawn: its function's name, and what it is of (quantities, mostly)."""
 
     name: str
-    quantity: str | None
+    of: tuple[str, ...]
     caption: str
     draw: Callable[[], Any]
+
+    @property
+    def quantity(self) -> str | None:
+        """The quantity of a figure of one quantity."""
+        return self.of[0] if self.name in PER_QUANTITY else None
 
 
 PER_QUANTITY: dict[str, tuple[Callable[..., Any], str]] = {
@@ -50,6 +60,9 @@ OVERALL: dict[str, tuple[Callable[..., Any], str]] = {
         check_error, "Error of held-out paths against direct runs, over the spread; a marker where "
         "it passes the tolerance for good."),
     "chain": (chain, "The arcs of the chain: degree, runs, and error at their held-out runs."),
+    "coefficient_decay": (
+        coefficient_decay, "How the coefficients fall off with their degree: flat would mean that "
+        "the degree is too low."),
     "failures": (failures, "Why runs of the propagator failed."),
 }
 NEEDS = {
@@ -59,7 +72,9 @@ NEEDS = {
     "spread_rate": ("spread_rate",),
     "nonlinear_share": ("nonlinear_share",),
     "check_error": ("check_error",),
+    "coefficient_decay": ("degree_norm",),
 }
+PAIRS = 3
 
 
 def _fills(dataset: xr.Dataset, name: str, quantity: str | None) -> bool:
@@ -88,8 +103,33 @@ def catalogue(dataset: xr.Dataset) -> Iterator[Entry]:
     for name, (function, caption) in PER_QUANTITY.items():
         for quantity in reading.quantities(dataset):
             if _fills(dataset, name, quantity):
-                yield Entry(name, quantity, caption.replace("{q}", quantity),
+                yield Entry(name, (quantity,), caption.replace("{q}", quantity),
                             lambda f=function, q=quantity: f(dataset, q))  # type: ignore[misc]
+    yield from _pairs(dataset)
+    yield from _bases(dataset)
     for name, (function, caption) in OVERALL.items():
         if _fills(dataset, name, None):
-            yield Entry(name, None, caption, lambda f=function: f(dataset))  # type: ignore[misc]
+            yield Entry(name, (), caption, lambda f=function: f(dataset))  # type: ignore[misc]
+
+
+def _pairs(dataset: xr.Dataset) -> Iterator[Entry]:
+    """Neighbouring quantities against each other; those that do not spread have no picture."""
+    names = [q for q in reading.quantities(dataset) if _fills(dataset, "diffusion", q)]
+    if ensemble(dataset) is None:
+        return
+    for x, y in list(pairwise(names))[:PAIRS]:
+        caption = f"Members in the plane of {x} and {y}; the lines hold the densest 90 %."
+        yield Entry("density", (x, y), caption,
+                    lambda x=x, y=y: density(dataset, x, y))  # type: ignore[misc]
+
+
+def _bases(dataset: xr.Dataset) -> Iterator[Entry]:
+    """What the basis of each noise source keeps, if the result tells its bases."""
+    told: dict[tuple[str, int], list[str]] = {}
+    for each in reading.listed(dataset, "noise_bases") or []:
+        told.setdefault((str(each["basis"]), int(each["terms"])), []).append(str(each["source"]))
+    for (basis, terms), names in told.items():
+        if basis in BASES:
+            caption = f"What the basis of {', '.join(names)} keeps of one path of the noise."
+            yield Entry("noise_kept", (basis, str(terms)), caption,
+                        lambda b=basis, n=terms: noise_kept(BASES[b](n)))  # type: ignore[misc]

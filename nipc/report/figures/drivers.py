@@ -84,18 +84,18 @@ def driver_ranking(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -
         end = _interval(ax, dataset, quantity, "driver_total" if total is not None else
                         "driver_first", int(index), row)
         ax.annotate(percent(float(leading[index, -1])), (max(end, leading[index, -1]), row),
-                    xytext=(6, 0), textcoords="offset points", va="center", fontsize=10)
+                    xytext=(6, 0), textcoords="offset points", va="center")
     ax.set_yticks(range(len(order)), [frame.printable(names[i]) for i in order])
     ax.set_ylim(len(order) - 0.4, -0.6)
     ax.set_xlim(0.0, max(1.12, 1.15 * float(at_end.max())))
     ax.set_xticks(np.arange(0.0, 1.01, 0.2))
     ax.grid(False, axis="y")
     trust = reading.trust(dataset, quantity)
-    late = {"": "", "†": "\n† past the trust horizon of its paths, within that of its distribution",
+    late = {"": "", "†": "\n† past the trust horizon of its paths",
             "‡": "\n‡ past its trust horizon" if trust.checked else "\n‡ not checked"}
     mark = trust.mark(trust.end)
-    words = f"share of the variance of {frame.printable(quantity)} at the end"
-    ax.set_xlabel(f"{words}{mark}{late[mark]}")
+    words = f"share of the variance of {frame.printable(quantity)} at the end{mark}"
+    ax.set_xlabel(textwrap.fill(words, 46) + late[mark])
     keys = [Patch(fill=False, edgecolor=LIGHT["ink"], lw=0.9), Patch(facecolor=LIGHT["soft"]),
             Line2D([], [], color=LIGHT["edge"], lw=1.5)]
     names_of_keys = ["total", "by itself", "95 % interval of the total"]

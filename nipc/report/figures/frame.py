@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 import textwrap
 from collections.abc import Sequence
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 import xarray as xr
@@ -23,7 +23,7 @@ from nipc.report import reading
 from nipc.report.numbers import amount, number, power_of_ten
 from nipc.report.style import HEIGHT, LIGHT, WIDTH
 
-_CHARACTER = 0.0135  # width of a legend's character over that of the axes, generous
+_CHARACTER = 0.0148  # width of a legend's character over that of the axes, generous
 
 
 def new_axes(ax: Axes | None, height: float = HEIGHT) -> Axes:
@@ -98,12 +98,13 @@ def say_cut(ax: Axes, cut: tuple[float, float] | None) -> None:
         ax.set_xlabel(f"{ax.get_xlabel()}\n{words}")
 
 
-def value_axis(ax: Axes, name: str, unit: str) -> None:
-    """Label and ticks of a vertical axis: an offset or a power of ten goes to the label.
+def value_axis(ax: Axes, name: str, unit: str, side: Literal["x", "y"] = "y") -> None:
+    """Label and ticks of an axis of values: an offset or a power of ten goes to the label.
 
     "energy + 4.7268 (10⁻⁶ km²/s²)": what the ticks count is the value plus 4.7268, in 1e-6 km²/s².
     """
-    low, high = ax.get_ylim()
+    axis = ax.yaxis if side == "y" else ax.xaxis
+    low, high = axis.get_view_interval()
     span, middle = high - low, 0.5 * (low + high)
     offset, factor = 0.0, 1.0
     if abs(middle) > 2e4 * span > 0:
@@ -118,10 +119,12 @@ def value_axis(ax: Axes, name: str, unit: str) -> None:
         label += f" {'−' if offset > 0 else '+'} {number(abs(offset), digits)}"
     if factor != 1.0:
         unit = f"{power_of_ten(round(math.log10(factor)))} {unit}".rstrip()
-    ax.set_ylabel(textwrap.fill(with_unit(label, unit), 30))
+    axis.set_label_text(textwrap.fill(with_unit(label, unit), 30 if side == "y" else 60))
     if offset or factor != 1.0:
-        plain = FuncFormatter(lambda value, _: number((value - offset) / factor, 4))
-        ax.yaxis.set_major_formatter(plain)
+        def tick(value: float, _: int) -> str:
+            return number(round((value - offset) / span, 9) * span / factor, 4)
+
+        axis.set_major_formatter(FuncFormatter(tick))
 
 
 def legend(
@@ -188,7 +191,7 @@ def _trust_label(ax: Axes, fraction: float, words: str) -> None:
         side, at = ("right", fraction) if fraction > width else ("right", 1.0)
         text = f"{words} ▾" if fraction > width else words
     ax.text(
-        at, 1.015, text, transform=ax.transAxes, ha=side, va="bottom", fontsize=9,
+        at, 1.015, text, transform=ax.transAxes, ha=side, va="bottom", fontsize=10,
         color=LIGHT["soft"],
     )
 

@@ -58,6 +58,7 @@ class Ledger:
         try:
             path = folder / FILE_NAME
             notes = []
+            rescue.finish(path)
             if path.exists() and path.stat().st_size == 0:
                 notes.append(f"{path}: the ledger is an empty file; nothing is kept in it")
             try:

@@ -1,8 +1,14 @@
-"""What is whole in a damaged ledger is taken over into a new one."""
+"""What is whole in a damaged ledger is taken over into a new one.
+
+The new file is complete before it takes the old one's place, so that a rescue which is itself
+interrupted loses nothing: it is begun again, or ended by the next start.
+"""
 
 from __future__ import annotations
 
 import itertools
+import os
+import shutil
 import sqlite3
 from collections import Counter
 from collections.abc import Iterator
@@ -22,33 +28,65 @@ def replace(path: Path) -> tuple[sqlite3.Connection, str]:
     Runs that were propagated together are taken over only together, so that those that must be
     run again are run as they were, and give the same numbers.
     """
-    aside = next(
-        name
-        for number in itertools.count(1)
-        if not (name := path.with_name(f"{path.stem}.damaged-{number}{path.suffix}")).exists()
-    )
-    path.rename(aside)
-    for suffix in ("-wal", "-shm"):
-        companion = path.with_name(path.name + suffix)
-        if companion.exists():
-            companion.rename(aside.with_name(aside.name + suffix))
-    connection = schema.connect(path)
-    lost, kept = 0, 0
+    aside = _set_aside(path)
+    draft = path.with_name(f"{path.name}.draft")
+    for name in _with_companions(draft):
+        name.unlink(missing_ok=True)
+    new = schema.connect(draft)
+    kept, lost = 0, 0
     try:
         old = _reader(aside)
         try:
-            lost, kept = _copy(old, connection, aside.stat().st_size)
+            kept, lost = _copy(old, new, aside.stat().st_size)
         finally:
             old.close()
     except sqlite3.DatabaseError as error:
         if not schema.is_damage(error):
             raise
+    finally:
+        new.close()
+    os.replace(draft, _finished(path))
+    finish(path)
     note = (
         f"{path}: the ledger was damaged; {kept} whole runs were rescued"
         + (f", {lost} could be read but not trusted" if lost else "")
         + f". What is missing will be run again. The damaged file is kept as {aside.name}"
     )
-    return connection, note
+    return schema.connect(path), note
+
+
+def finish(path: Path) -> None:
+    """Put a finished rescue in the damaged file's place, if there is one."""
+    finished = _finished(path)
+    if finished.exists():
+        for name in _with_companions(path)[1:]:
+            name.unlink(missing_ok=True)  # they belong to the damaged file
+        os.replace(finished, path)
+
+
+def _finished(path: Path) -> Path:
+    return path.with_name(f"{path.name}.rescued")
+
+
+def _with_companions(path: Path) -> list[Path]:
+    """A database file, its log and its index of the log."""
+    return [path, *(path.with_name(path.name + suffix) for suffix in ("-wal", "-shm"))]
+
+
+def _set_aside(path: Path) -> Path:
+    """A second name for the damaged file and its log."""
+    aside = next(
+        name
+        for number in itertools.count(1)
+        if not (name := path.with_name(f"{path.stem}.damaged-{number}{path.suffix}")).exists()
+    )
+    for source, target in zip(_with_companions(path)[:2], _with_companions(aside), strict=False):
+        if source.exists():
+            try:
+                os.link(source, target)
+            except OSError:  # not every file system has links
+                shutil.copyfile(source, target)
+    return aside
 
 
 def _reader(path: Path) -> sqlite3.Connection:
@@ -76,25 +114,25 @@ def _mend_first_page(path: Path) -> None:
         pass
     finally:
         probe.close()
-    model = path.with_name(path.name + ".model")
+    model = path.with_name(f"{path.name}.model")
     model.unlink(missing_ok=True)
     schema.connect(model).close()
-    page = bytearray(model.read_bytes()[:8192])
+    page = bytearray(model.read_bytes()[: schema.PAGE])
     model.unlink()
-    size = path.stat().st_size
-    page[28:32] = (size // len(page)).to_bytes(4, "big")
+    page[28:32] = (path.stat().st_size // schema.PAGE).to_bytes(4, "big")
     page[32:40] = bytes(8)  # no free pages are known
     with path.open("r+b") as file:
         file.write(page)
 
 
 def _copy(old: sqlite3.Connection, new: sqlite3.Connection, size: int) -> tuple[int, int]:
+    """How many runs were taken over, and how many were not though something was read of them."""
     new.execute("BEGIN IMMEDIATE")
     for table in ("arcs", "batches", "facts"):
         _copy_table(old, new, table)
     blocks: Counter[tuple[bytes, int]] = Counter()
     seen: set[bytes] = set()
-    lost = kept = 0
+    kept = lost = 0
     for row in _rows(old, size // _SMALLEST_ROW + 1):
         record = from_row(row)
         if record is None:
@@ -107,8 +145,8 @@ def _copy(old: sqlite3.Connection, new: sqlite3.Connection, size: int) -> tuple[
         if record.block_size > 1:
             blocks[record.block, record.block_size] += 1
         kept += 1
-    for (block, size), count in blocks.items():
-        if count < size:
+    for (block, whole), count in blocks.items():
+        if count < whole:
             new.execute("DELETE FROM runs WHERE block = ? AND block_size > 1", (block,))
             lost, kept = lost + count, kept - count
     new.execute(
@@ -116,25 +154,24 @@ def _copy(old: sqlite3.Connection, new: sqlite3.Connection, size: int) -> tuple[
         " WHERE arc NOT IN (SELECT id FROM arcs)"
     )
     new.execute("COMMIT")
-    return lost, kept
+    return kept, lost
 
 
 def _rows(old: sqlite3.Connection, bound: int) -> Iterator[tuple[Any, ...]]:
     """Every row that can be read; ranges of ids that cannot are halved down to single rows."""
     ranges = [(0, bound)]
-    query = f"SELECT {', '.join(COLUMNS)} FROM runs WHERE id BETWEEN ? AND ? ORDER BY id LIMIT ?"
+    query = f"SELECT id, {', '.join(COLUMNS)} FROM runs WHERE id BETWEEN ? AND ? ORDER BY id"
     while ranges:
         first, last = ranges.pop()
         try:
-            rows = old.execute(query.replace("SELECT ", "SELECT id, "), (first, last, _STEP))
-            found = rows.fetchall()
+            found = old.execute(f"{query} LIMIT {_STEP}", (first, last)).fetchall()
         except sqlite3.DatabaseError:
             if first < last:
                 middle = (first + last) // 2
                 ranges += [(middle + 1, last), (first, middle)]
             continue
         yield from (row[1:] for row in found)
-        if len(found) == _STEP:
+        if len(found) == _STEP and found[-1][0] < last:
             ranges.append((found[-1][0] + 1, last))
 
 

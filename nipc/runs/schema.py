@@ -10,6 +10,7 @@ from nipc.runs.record import COLUMNS, from_row
 
 VERSION = 1
 APPLICATION = 0x6E697063  # "nipc"; SQLite keeps it in the file's header
+PAGE = 8192  # bytes
 _SMALL = 1 << 26  # bytes; larger files are examined where they are read
 
 TABLES = """
@@ -46,7 +47,7 @@ def connect(path: Path) -> sqlite3.Connection:
     connection = sqlite3.connect(path, timeout=10.0, isolation_level=None)
     try:
         if path.stat().st_size == 0:
-            connection.execute("PRAGMA page_size = 8192")
+            connection.execute(f"PRAGMA page_size = {PAGE}")
         connection.execute("PRAGMA journal_mode = WAL")
         connection.execute("PRAGMA synchronous = FULL")
         if connection.execute("PRAGMA user_version").fetchone()[0] == 0:

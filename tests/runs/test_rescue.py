@@ -1,9 +1,13 @@
 """Damaged ledgers: said, set aside, and every whole run taken over."""
 
+from types import SimpleNamespace
+
 import numpy as np
 import pytest
 from runs_samples import Sample, sample_batch
 
+from nipc.runs import ledger as ledger_module
+from nipc.runs import rescue
 from nipc.runs.engine import Engine
 from nipc.runs.ledger import Ledger
 from nipc.runs.record import Status
@@ -34,6 +38,7 @@ def whole(request, tmp_path_factory):
 def damaged(folder, data, whole):
     """Open a damaged file, run what is missing; the share that was rescued, and what was said."""
     _, propagator, batch, states = whole
+    folder.mkdir(exist_ok=True)
     (folder / "ledger.sqlite").write_bytes(data)
     with Ledger.open(folder) as ledger:
         rescued = ledger.count(Status.DONE)
@@ -90,3 +95,50 @@ def test_the_damaged_file_is_kept(whole, tmp_path):
     cut = whole[0][:50_000]
     damaged(tmp_path, cut, whole)
     assert (tmp_path / "ledger.damaged-1.sqlite").stat().st_size == len(cut)
+
+
+@pytest.mark.parametrize("moment", ["_copy", "finish"])
+def test_a_rescue_that_is_interrupted_is_begun_again_or_ended(moment, whole, tmp_path, monkeypatch):
+    def stop(*arguments):
+        raise KeyboardInterrupt
+
+    cut = whole[0][: int(0.9 * len(whole[0]))]
+    rescued, _ = damaged(tmp_path / "undisturbed", cut, whole)
+    (tmp_path / "work").mkdir()
+    (tmp_path / "work" / "ledger.sqlite").write_bytes(cut)
+    with monkeypatch.context() as patch:
+        # `finish` is also called before there is anything to finish
+        patch.setattr(rescue, moment, stop)
+        if moment == "finish":
+            patch.setattr(ledger_module, "rescue", SimpleNamespace(
+                finish=lambda path: None, replace=rescue.replace
+            ))  # fmt: skip
+        with pytest.raises(KeyboardInterrupt):
+            Ledger.open(tmp_path / "work")
+    with Ledger.open(tmp_path / "work") as ledger:
+        assert ledger.count(Status.DONE) == round(rescued * N)
+    outcomes, _ = kept_run(tmp_path / "work", whole[1], whole[2])
+    assert outcomes.states.tobytes() == whole[3].tobytes()
+
+
+@pytest.mark.parametrize("seed", range(5))
+@pytest.mark.parametrize("vectorised", [False, True])
+def test_a_log_damaged_after_a_kill(vectorised, seed, tmp_path):
+    """SQLite's log, before its content has gone to the main file: cut short, and bits flipped."""
+    propagator = Sample(vectorised=vectorised, mixing=vectorised)
+    batch = sample_batch(N, times=TIMES)
+    (tmp_path / "killed").mkdir()
+    with Ledger.open(tmp_path / "work") as ledger:
+        with Engine(propagator, ledger, backend="inline") as engine:
+            for count in [N] if vectorised else [40, 80, N]:
+                states = engine.run(batch.take(slice(0, count)), "arc 1").states
+        for name in ("ledger.sqlite", "ledger.sqlite-wal"):
+            data = bytearray((tmp_path / "work" / name).read_bytes())
+            if name.endswith("-wal"):
+                rng = np.random.default_rng(seed)
+                data = data[: int(len(data) * rng.uniform(0.5, 1.0))]
+                for bit in rng.integers(0, 8 * len(data), seed):
+                    data[bit // 8] ^= 1 << bit % 8
+            (tmp_path / "killed" / name).write_bytes(data)
+    outcomes, _ = kept_run(tmp_path / "killed", propagator, batch)
+    assert outcomes.states.tobytes() == states.tobytes()

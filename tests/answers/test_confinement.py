@@ -5,7 +5,13 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from nipc.answers.boxes import Box, check_start, inside_indicator, survival_indicator
+from nipc.answers.boxes import (
+    Box,
+    check_start,
+    inside_indicator,
+    survival_indicator,
+    survived,
+)
 from nipc.answers.confinement import ConfinementAccumulator, product_limit
 from nipc.answers.intervals import wilson
 from nipc.errors import InputError
@@ -44,17 +50,23 @@ def test_inside_and_survival_by_hand():
 
 def test_indicators_agree_with_the_counts():
     inside = inside_indicator(PATHS, TIMES, BOX, ENDED)
-    survived = survival_indicator(PATHS, TIMES, BOX, ENDED)
+    never_left = survival_indicator(PATHS, TIMES, BOX, ENDED)
     expected_inside = [[1, 1, 1, 1], [1, 1, 0, 1], [1, 1, NAN, NAN], [1, 0, NAN, NAN], [1, 1, 0, 0]]
     expected_survived = [[1, 1, 1, 1], [1, 1, 0, 0], [1, 1, NAN, NAN], [1, 0, 0, 0], [1, 1, 0, 0]]
     np.testing.assert_array_equal(inside, expected_inside)
-    np.testing.assert_array_equal(survived, expected_survived)
+    np.testing.assert_array_equal(never_left, expected_survived)
+    at_end = np.array(expected_survived)[:, -1]
+    np.testing.assert_array_equal(survived(PATHS, TIMES, BOX, ENDED), at_end)
+    np.testing.assert_array_equal(survived(PATHS[:2], TIMES, BOX), at_end[:2])
     np.testing.assert_allclose(np.nanmean(inside, axis=0), gathered([BOX]).inside[0])
 
 
 def test_who_goes_missing_and_is_then_seen_outside_stays_missing():
     path = np.array([[0.0, NAN, 2.0, 2.0]])[:, :, None]
     np.testing.assert_array_equal(survival_indicator(path, TIMES, BOX)[0], [1, NAN, NAN, NAN])
+    result = gathered([BOX], np.concatenate([path, PATHS[:1]]), np.full(2, NAN))
+    np.testing.assert_array_equal(result.survival[0], 1.0)
+    np.testing.assert_array_equal(result.inside[0], [1.0, 1.0, 0.5, 0.5])
 
 
 def test_without_missing_members_survival_is_a_share():

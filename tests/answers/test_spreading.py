@@ -56,6 +56,14 @@ def test_exponents_of_a_saddle_and_a_centre():
     assert np.abs(exponents.sum(axis=2)).max() < 1e-12
 
 
+def test_scale_makes_components_comparable():
+    """One map that swaps two axes: in z = x / scale it is [[0, a s2/s1], [b s1/s2, 0]]."""
+    swap = np.array([[[0.0, 2.0], [3.0, 0.0]]])
+    product = TangentProduct(1, 2, np.array([10.0, 1.0]))
+    product.advance(swap, 0.5)
+    np.testing.assert_allclose(product.exponents[0], 2 * np.log([3.0 * 10.0, 2.0 / 10.0]))
+
+
 def test_lost_members_stay_lost():
     product = TangentProduct(2, 2)
     maps = np.stack([np.eye(2) * np.e, np.full((2, 2), np.nan)])

@@ -46,6 +46,17 @@ def test_keplers_flow_is_linear_in_mean_equinoctial_elements(names):
     np.testing.assert_allclose(advance, (values[0, 0] - 1e-4) * times, rtol=1e-9, atol=1e-9)
 
 
+def test_a_frame_that_turns_with_a_retrograde_orbit_freezes_it():
+    start = ECCENTRIC * [1, 1, 1, -1, -1, 1]  # clockwise seen from above
+    a = 1.0 / (2 / np.linalg.norm(start[:3]) - start[3:] @ start[3:] / MU)
+    rate = -np.sqrt(MU / a**3)
+    times = np.linspace(0.0, 20000.0, 9)
+    made = chart(SPATIAL, name="equinoctial", mu=MU, retrograde=True, rotation_rate=rate)
+    made.check(start[None])
+    values = made.unwrap(made.from_state(kepler_flow(start, times), times), times)[0]
+    assert np.ptp(values, axis=0).max() < 1e-9
+
+
 def test_keplers_flow_in_relative_elements_is_a_drift_of_the_latitude_alone():
     times = np.linspace(0.0, 40000.0, 9)
     flow = kepler_flow(ECCENTRIC * 1.01, times)

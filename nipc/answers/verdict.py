@@ -95,7 +95,8 @@ def _law(view: View) -> str | None:
         return None
     exponent = view.triple("diffusion_exponent")
     if verdict == "cannot tell":
-        reason = str(view.data["spreading_verdict"].attrs.get("reason", ""))
+        told = "spreading_evidence" in view.data
+        reason = str(view.data["spreading_evidence"].item()) if told else ""
         known = "" if np.isnan(exponent[0]) else f" (the exponent is {estimate(*exponent)})"
         return f"{subject} cannot be told to follow one law{known}{': ' * bool(reason)}{reason}."
     text = f"{subject} is {verdict}"

@@ -165,7 +165,9 @@ def test_no_spread_is_said():
 def test_cannot_tell_and_the_reason():
     made = dataset()
     made["spreading_verdict"] = ("quantity", ["cannot tell", "exponential"])
+    made["spreading_evidence"] = ("quantity", ["two laws fit alike", ""])
     sentence = said(made, "spreading of longitude cannot be told to follow one law")
+    assert "two laws fit alike" in sentence
     assert "(the exponent is 1.00 (0.97 to 1.03))" in sentence
     made["spread_rate"] = (("quantity", "time"), np.full((2, TIMES.size), 0.31))
     assert "grows at 0.31 per d at 20 d" in said(made, "spreading of radius is exponential")

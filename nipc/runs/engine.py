@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
 from types import TracebackType
 from typing import Self
 
@@ -15,29 +14,18 @@ from nipc.runs.crew import Crew, InlineCrew, Work
 from nipc.runs.keys import run_keys
 from nipc.runs.ledger import Ledger
 from nipc.runs.outcomes import Gathering, Outcomes
+from nipc.runs.policy import FIRST, FailurePolicy, Tally
 from nipc.runs.processes import ProcessCrew
 from nipc.runs.progress import Progress, Silent
 from nipc.runs.propagator import Batch, Propagator
 from nipc.runs.record import Record, Status
-from nipc.runs.unit import Answer, Problem, Unit
+from nipc.runs.unit import Answer, Unit
 from nipc.runs.writer import Writer
 
+__all__ = ["BLOCK", "Engine", "FailurePolicy", "block_size"]
+
 BLOCK = 64  # runs in one call of a vectorised propagator, whatever the number of workers
-FIRST = 16  # runs that must all fail before the propagator itself is doubted
 BLOCK_NUMBERS = 1 << 21  # and at most so many float64 in its answer
-
-
-@dataclass(frozen=True)
-class FailurePolicy:
-    """What is done about runs that fail.
-
-    A failed run is tried again alone `retries` times. When more than the share `tolerated` of a
-    batch has failed, the rest is not run. `again`: failures kept from before are tried anew.
-    """
-
-    retries: int = 1
-    tolerated: float = 1.0
-    again: bool = False
 
 
 class Engine:
@@ -60,14 +48,14 @@ class Engine:
         *,
         n_jobs: int = 1,
         time_limit: float | None = None,
-        policy: FailurePolicy = FailurePolicy(),
+        policy: FailurePolicy | None = None,
         progress: Progress | None = None,
         backend: str = "processes",
         scheduler: str | None = None,
     ) -> None:
         self.propagator = propagator
         self.ledger = ledger
-        self.policy = policy
+        self.policy = FailurePolicy() if policy is None else policy
         self.notes: list[str] = []
         self.runs_done = 0
         self.runs_reused = 0
@@ -129,7 +117,7 @@ class Engine:
             return frozenset()
         number = self.ledger.begin(batch, self._fingerprint, label, len(batch), reused)
         writer = Writer(self.ledger, number, keys, batch, self._progress, tell)
-        tally = _Tally(len(batch), sum(
+        tally = Tally(len(batch), sum(
             known[key][0] is Status.FAILED for key in unique if self._settled(known.get(key))
         ))  # fmt: skip
         units = self._first_units(batch, rows, keys, known)
@@ -186,7 +174,7 @@ class Engine:
             blocks.setdefault(row // size, []).append(row)
         return [Unit(np.array(block)) for block in blocks.values()] + singles
 
-    def _round(self, work: Work, writer: Writer, tally: _Tally) -> list[Unit]:
+    def _round(self, work: Work, writer: Writer, tally: Tally) -> list[Unit]:
         """Carry units out; those that are to be tried again come back.
 
         When the first `FIRST` runs all fail, they are tried again before any other is begun: a
@@ -208,7 +196,7 @@ class Engine:
                 return again
         return again
 
-    def _judge(self, answer: Answer, writer: Writer, tally: _Tally) -> list[Unit]:
+    def _judge(self, answer: Answer, writer: Writer, tally: Tally) -> list[Unit]:
         """Keep what is final, all at once; the rest as units of one run."""
         unit = answer.unit
         verdicts: list[tuple[int, Status, int]] = []  # place, status, attempts
@@ -294,38 +282,3 @@ def _crew(
 
         return DaskCrew(propagator, limit, scheduler)
     raise ValueError(f"no backend is called {backend!r}; there are processes, inline and dask")
-
-
-class _Tally:
-    """How many runs of a batch have failed, and what was put off meanwhile."""
-
-    def __init__(self, total: int, failed: int) -> None:
-        self.total, self.failed, self.good, self.last = total, failed, 0, ""
-        self._held: list[Unit] = []
-
-    def fail(self, problem: Problem) -> None:
-        self.failed += 1
-        self.last = problem.reason
-
-    def hold(self, units: list[Unit]) -> None:
-        """These wait until it is known whether the propagator can run at all."""
-        self._held = units
-
-    def release(self) -> list[Unit]:
-        """What waited."""
-        held, self._held = self._held, []
-        return held
-
-    def check(self, policy: FailurePolicy) -> None:
-        """Raise when more has failed than is tolerated."""
-        if self.failed > policy.tolerated * self.total:
-            raise RunsError(
-                f"{self.failed} of {self.total} runs have failed, more than the"
-                f" {policy.tolerated:.0%} that is tolerated; the rest is not run. Last reason:"
-                f" {self.last}"
-            )
-        if self._held and not self.good and self.failed >= FIRST:
-            raise RunsError(
-                f"the first {self.failed} runs have all failed; the rest of {self.total} is not"
-                f" run. Last reason: {self.last}"
-            )

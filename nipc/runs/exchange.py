@@ -3,13 +3,15 @@
 `export_runs` writes what is missing: `runs.csv`, one line a run; `times.csv`; and a folder for each
 run with `card.toml` (everything that determines it, and its key) and `forcing.csv` (t, xi_1 ...).
 Whoever runs them puts `result.csv` beside each card: t and the state, one line a time, separated by
-commas or blanks, with or without a heading. `import_runs` takes back what fits its key.
+commas or blanks, with or without a heading; where the motion ended for a physical reason, the lines
+up to then and a line `# ended T`. `import_runs` takes back what fits its key.
 """
 
 from __future__ import annotations
 
 import csv
 import json
+import re
 import tomllib
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
@@ -192,13 +194,14 @@ def _taken_in(home: Path, batch: Batch, keys: dict[bytes, int]) -> Record:
     if not np.array_equal(values, np.concatenate([start, coefficients, parameters])):
         raise TableError("the numbers on its card are not those that its key stands for")
     m, d = batch.times.size, start.size
-    table = read_numbers(home / RESULT)
-    if table.shape != (m, d + 1):
+    table, ended = read_numbers(home / RESULT), _ending(home / RESULT)
+    wanted = m if np.isnan(ended) else int(np.sum(batch.times <= ended))
+    if table.shape != (wanted, d + 1):
         raise TableError(
-            f"{RESULT} has {table.shape[0]} lines of {table.shape[1]} numbers; right is {m} lines"
-            f" of {d + 1}: t and the {d} state components"
+            f"{RESULT} has {table.shape[0]} lines of {table.shape[1]} numbers; right is {wanted}"
+            f" lines of {d + 1}: t and the {d} state components"
         )
-    late = np.abs(table[:, 0] - batch.times).max()
+    late = np.abs(table[:, 0] - batch.times[:wanted]).max()
     if not late <= _TIME_TOLERANCE * max(1.0, float(np.abs(batch.times).max())):
         raise TableError(f"{RESULT} has other times than the card (by up to {late:.3g})")
     if not np.isfinite(table).all():
@@ -206,10 +209,21 @@ def _taken_in(home: Path, batch: Batch, keys: dict[bytes, int]) -> Record:
     off = np.abs(table[0, 1:] - start).max(initial=0.0)
     if off > _START_TOLERANCE * max(np.abs(start).max(initial=0.0), 1e-300):
         raise TableError(f"{RESULT} starts elsewhere than the card (by up to {off:.3g})")
+    states = np.full((m, d), np.nan)
+    states[:wanted] = table[:, 1:]
     return Record(
         key=key, status=Status.DONE, start=start, coefficients=coefficients, parameters=parameters,
-        states=table[:, 1:], ended=np.nan, host="imported",
+        states=states, ended=ended, host="imported",
     )  # fmt: skip
+
+
+def _ending(path: Path) -> float:
+    """The time in a line `# ended T`, NaN where there is none."""
+    found = re.findall(r"^#\s*ended\s+(\S+)\s*$", path.read_text(encoding="utf-8"), re.MULTILINE)
+    try:
+        return float(found[-1]) if found else float("nan")
+    except ValueError:
+        raise TableError(f"{RESULT}: `# ended {found[-1]}` gives no time") from None
 
 
 def _read_card(path: Path) -> tuple[bytes, FloatArray]:

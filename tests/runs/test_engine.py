@@ -21,9 +21,10 @@ from runs_samples import (
 )
 
 from nipc.errors import LedgerError, RunsError
-from nipc.runs.engine import BLOCK, Engine, FailurePolicy, block_size
+from nipc.runs.engine import BLOCK, Engine, block_size
 from nipc.runs.keys import block_digest, run_keys
 from nipc.runs.ledger import Ledger
+from nipc.runs.policy import FailurePolicy
 from nipc.runs.record import Status
 
 

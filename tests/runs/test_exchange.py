@@ -120,6 +120,24 @@ def test_values_that_are_not_finite_are_refused(exported):
         assert "not finite" in import_runs(ledger, batch, "sample", folder).refused[0][1]
 
 
+def test_a_physical_ending_comes_back(exported):
+    batch, folder, work = exported
+    home = folder / "run-000001"
+    elsewhere(home)
+    lines = (home / "result.csv").read_text().splitlines()
+    (home / "result.csv").write_text("\n".join([*lines[:4], "# ended 0.5"]))  # times 0, 0.2, 0.4
+    with Ledger.open(work) as ledger:
+        assert import_runs(ledger, batch, "sample", folder).accepted == 1
+        with Engine(Sample(), ledger, backend="inline") as engine:
+            outcomes = engine.collect(batch)
+    assert outcomes.ended[2] == 0.5
+    assert np.isfinite(outcomes.states[2, :3]).all()
+    assert np.isnan(outcomes.states[2, 3:]).all()
+    (home / "result.csv").write_text("\n".join([*lines[:4], "# ended soon"]))
+    with Ledger.open(work) as ledger:
+        assert "gives no time" in str(import_runs(ledger, batch, "sample", folder))
+
+
 def test_results_for_other_code_are_refused(exported):
     batch, folder, work = exported
     elsewhere(folder / "run-000001")

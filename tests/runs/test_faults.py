@@ -14,8 +14,9 @@ import numpy as np
 import pytest
 from runs_samples import DEAF, RAISES, SLEEPS, Sample, alive, eventually, sample_batch
 
-from nipc.runs.engine import Engine, FailurePolicy
+from nipc.runs.engine import Engine
 from nipc.runs.ledger import Ledger
+from nipc.runs.policy import FailurePolicy
 from nipc.runs.record import Status
 
 SCRIPT = Path(__file__).with_name("runs_process.py")

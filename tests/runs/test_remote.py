@@ -13,8 +13,9 @@ import pytest
 from runs_samples import EXITS, RAISES, SLEEPS, Sample, eventually, sample_batch
 
 from nipc.errors import InputError
-from nipc.runs.engine import Engine, FailurePolicy
+from nipc.runs.engine import Engine
 from nipc.runs.ledger import Ledger
+from nipc.runs.policy import FailurePolicy
 
 HERE = Path(__file__).parent
 

@@ -10,7 +10,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from runs_samples import EXITS, RAISES, SLEEPS, Sample, eventually, sample_batch
+from runs_samples import EXITS, NAN, RAISES, SLEEPS, Sample, eventually, sample_batch
 
 from nipc.errors import InputError
 from nipc.runs.engine import Engine
@@ -56,13 +56,14 @@ def run(folder, propagator, batch, **settings):
 @pytest.mark.parametrize("vectorised", [False, True])
 def test_a_cluster_that_loses_a_worker_gives_the_same_numbers(vectorised, cluster, tmp_path):
     address, workers = cluster
-    kinds = {3: RAISES, 11: EXITS}
+    # a row that is not finite leaves its block whole; one that raises sends all 64 out alone
+    kinds = {3: NAN, 11: NAN} if vectorised else {3: RAISES, 11: EXITS}
     batch = sample_batch(200, kinds=kinds)
     propagator = Sample(vectorised=vectorised, mixing=True, pause=1.0 if vectorised else 0.05)
     here = run(tmp_path / "here", propagator, batch, n_jobs=2)
 
     def shoot():
-        time.sleep(3.0)
+        time.sleep(1.5)
         workers[0].send_signal(signal.SIGKILL)
 
     gun = threading.Thread(target=shoot)

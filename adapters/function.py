@@ -23,7 +23,7 @@ class FunctionSettings(AdapterSettings):
 
     function: Reference
     batch: bool = False
-    depends: list[str] = []
+    depends: tuple[str, ...] = ()
 
 
 class OnePath:

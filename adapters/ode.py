@@ -36,7 +36,7 @@ class OdeSettings(AdapterSettings):
     max_step: Annotated[float, Field(gt=0)] | None = None
     step: Annotated[float, Field(gt=0)] | None = None
     stop: Reference | None = None
-    depends: list[str] = []
+    depends: tuple[str, ...] = ()
 
     @property
     def fixed(self) -> bool:

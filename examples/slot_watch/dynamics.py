@@ -1,4 +1,4 @@
-"""A satellite in a geostationary slot at 19 degrees east (an invented scenario).
+"""A satellite in a geostationary slot about 19 degrees east (an invented scenario).
 
 Planar motion in inertial axes, of which x points to the satellite's mean place at t = 0, under the
 central field, J2 and the tesseral J22. State x, y (km), vx, vy (km/s); time in days. The noise is a
@@ -18,7 +18,7 @@ J22 = 1.8154e-6
 AXIS22 = np.deg2rad(-14.93)
 OMEGA = 7.292115e-5
 DAY = 86400.0
-SLOT = np.deg2rad(19.0)
+START = np.deg2rad(19.07)  # longitude at t = 0
 
 
 def rates(t, x, xi, parameters):
@@ -27,7 +27,7 @@ def rates(t, x, xi, parameters):
     r = np.sqrt(r2)
     ux, uy = x[:, 0] / r, x[:, 1] / r
     # cosine and sine of twice the angle from the axis of the tesseral to the satellite
-    turn = 2.0 * (SLOT - AXIS22 - OMEGA * DAY * t)
+    turn = 2.0 * (START - AXIS22 - OMEGA * DAY * t)
     c2, s2 = ux * ux - uy * uy, 2.0 * ux * uy
     cosine = c2 * np.cos(turn) - s2 * np.sin(turn)
     sine = s2 * np.cos(turn) + c2 * np.sin(turn)

@@ -93,8 +93,9 @@ class OdePropagator(Propagator):
                 return float(stop(t, x, parameters))
 
             events.terminal = True  # type: ignore[attr-defined]
+        method: Any = settings.method
         solution = solve_ivp(
-            right, (times[0], times[-1]), start, settings.method, t_eval=times, events=events,
+            right, (times[0], times[-1]), start, method, t_eval=times, events=events,
             rtol=settings.rtol, atol=settings.atol, max_step=settings.max_step or np.inf,
         )  # fmt: skip
         if solution.status == -1:
@@ -102,7 +103,7 @@ class OdePropagator(Propagator):
         states = np.full((1, times.size, start.size), np.nan)
         states[0, : solution.y.shape[1]] = solution.y.T
         ended = np.full(1, np.nan)
-        if solution.status == 1:
+        if solution.status == 1 and solution.t_events is not None:
             ended[0] = float(solution.t_events[0][0])
         return Trajectories(states, ended)
 

@@ -59,7 +59,7 @@ def load_function(folder: Path, reference: str) -> Callable[..., Any]:
         raise InputError(
             f"{path or module_name} has no function {name!r}; it has: {', '.join(known) or 'none'}"
         )
-    return function  # type: ignore[no-any-return]
+    return function
 
 
 def _module(path: Path, folder: Path) -> ModuleType:

@@ -6,9 +6,11 @@ is a basis matrix, which is (terms, samples): each polynomial's values lie toget
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 import numpy.typing as npt
 
-FloatArray = npt.NDArray[np.float64]
-IntArray = npt.NDArray[np.int64]
+FloatArray = npt.NDArray[np.floating[Any]]
+IntArray = npt.NDArray[np.integer[Any]]
 BoolArray = npt.NDArray[np.bool_]

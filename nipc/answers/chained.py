@@ -8,6 +8,7 @@ import numpy as np
 
 from nipc.answers.drivers import PickFreezeAccumulator
 from nipc.answers.ensemble import add_ensemble
+from nipc.answers.exits import ExitDrivers
 from nipc.answers.intervals import Interval, normal_factor
 from nipc.answers.single import add_check
 from nipc.answers.spreading import spread_rate
@@ -15,7 +16,7 @@ from nipc.answers.table import ResultTable
 from nipc.arrays import FloatArray
 from nipc.chain.chain import Chain
 from nipc.chain.check import HeldOut
-from nipc.chain.history import NoiseHistory, blocks_of
+from nipc.chain.history import BLOCK, NoiseHistory, blocks_of
 from nipc.chain.horizon import Horizon
 from nipc.problem.quantities import QuantitySet
 
@@ -68,9 +69,11 @@ class ChainAnswers:
         gap = direct - predicted
         known = np.maximum(np.isfinite(gap).sum(axis=0), 1)
         rms = np.sqrt(np.nansum(gap**2, axis=0) / known)
-        moments = add_ensemble(table, self.plain(), normal_factor() * rms)
-        std = moments.std
+        std = self._spread()
         check = HeldOut(self.times, direct, predicted, std)
+        trust = check.trust_horizon(study.tolerance)
+        moments = add_ensemble(table, self.plain(), normal_factor() * rms, trust)
+        std = moments.std
         add_check(table, check, study.tolerance)
         unit = "as the quantity"
         mean, std_ends = moments.mean_interval(), moments.std_interval()
@@ -96,6 +99,12 @@ class ChainAnswers:
         self._arcs(table)
         return table
 
+    def _spread(self) -> FloatArray:
+        """(T, Q) standard deviations of the first block, to read the trust horizon from."""
+        count = min(self.horizon.study.ensemble.members, BLOCK)
+        values = self.members(self.horizon.history, self.horizon.streams("a"), 0, count)
+        return np.asarray(np.std(values, axis=0))
+
     def _drivers(self, table: ResultTable) -> None:
         """Pick and freeze: each group in turn drawn from an independent ensemble."""
         horizon = self.horizon
@@ -114,12 +123,16 @@ class ChainAnswers:
                     streams = tuple("b" if name == group.name else "a" for name in names)
                     yield self.members(history, streams, block, count)
 
+        exits = ExitDrivers(horizon.study, [g.name for g in self.groups])
         for block, count in blocks_of(min(horizon.study.ensemble.members, 40_000)):
-            shares.update(
-                self.members(history, own, block, count),
-                self.members(other, foreign, block, count),
-                mixed(block, count),
-            )
+            a = self.members(history, own, block, count)
+            b = self.members(other, foreign, block, count)
+            swapped = list(mixed(block, count))
+            shares.update(a, b, swapped)
+            if exits.boxes:
+                exits.update(a, b, swapped)
+        if exits.boxes:
+            exits.add_to(table)
         result = shares.result()
         table.by_driver(
             "driver_first", result.first, "first-order share of the variance", result.first_interval

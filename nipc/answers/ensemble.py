@@ -6,10 +6,12 @@ from collections.abc import Iterable
 
 import numpy as np
 
-from nipc.answers.boxes import Box
+from nipc.answers.boxes import Box, check_start
 from nipc.answers.confinement import Confinement, ConfinementAccumulator
+from nipc.answers.intervals import Interval
 from nipc.answers.moments import MomentAccumulator
 from nipc.answers.quantiles import QuantileAccumulator
+from nipc.answers.slow import SlowSpreading
 from nipc.answers.table import LEVELS, ResultTable
 from nipc.arrays import FloatArray
 from nipc.problem.study import Study
@@ -29,24 +31,31 @@ def boxes_of(study: Study) -> tuple[list[Box], list[Box]]:
 
 
 def add_ensemble(
-    table: ResultTable, blocks: Iterable[tuple[FloatArray, FloatArray | None]], margin: FloatArray
+    table: ResultTable,
+    blocks: Iterable[tuple[FloatArray, FloatArray | None]],
+    margin: FloatArray,
+    trust: FloatArray,
 ) -> MomentAccumulator:
     """Gather the answers of members given in blocks of (values (n, T, Q), ended (n,) or None).
 
     `margin` (T, Q) is the 95 % half-width of the path error, which widens the intervals of
-    probabilities. Returns the moments, which the diffusion law is read from.
+    probabilities; `trust` (Q,) is each quantity's trust horizon, up to which the law of its
+    spreading is read. Returns the moments.
     """
     study = table.study
     single, joint = boxes_of(study)
     times = study.clock.times
     confinement = ConfinementAccumulator(times, [*single, *joint], np.nan_to_num(margin))
     quantiles, moments = QuantileAccumulator(), MomentAccumulator()
+    slow = SlowSpreading(times, [study.clock.period if q.slow else None for q in study.quantity])
     shown: FloatArray | None = None
     for values, ended in blocks:
         confinement.update(values, ended)
         quantiles.update(values)
         moments.update(values)
+        slow.update(values)
         if shown is None:
+            _refuse_empty_boxes(single, values[:, 0])
             shown = values[:SHOWN].copy()
     assert shown is not None
     names = "quantile of the quantity"
@@ -68,6 +77,7 @@ def add_ensemble(
     _add_boxes(table, result, [b.columns[0] for b in single])
     if joint:
         _add_joint(table, result, len(single))
+    _add_laws(table, slow, trust)
     return moments
 
 
@@ -123,3 +133,23 @@ def _add_joint(table: ResultTable, result: Confinement, first: int) -> None:
     ):
         ends = type(interval)(interval.low[first:].T, interval.high[first:].T)
         table.over_time(name, value[first:].T, "1", words, ends, dim="joint")
+
+
+def _refuse_empty_boxes(boxes: list[Box], start: FloatArray) -> None:
+    if np.isfinite(start).any():
+        check_start(boxes, start)
+
+
+def _add_laws(table: ResultTable, slow: SlowSpreading, trust: FloatArray) -> None:
+    """How each slow quantity spreads: verdict, evidence, coefficient and exponent."""
+    laws = slow.laws(until=trust)
+    table.by_quantity("spreading_verdict", [law.verdict for law in laws], "", "kind of spreading")
+    table.by_quantity("spreading_evidence", [law.reason for law in laws], "", "why")
+    unit = f"as the quantity squared per {table.study.clock.unit}^exponent"
+    for name, units, words in (
+        ("coefficient", unit, "D in Var = A + 2 D t^exponent"),
+        ("exponent", "1", "exponent in Var = A + 2 D t^exponent"),
+    ):
+        estimates = [getattr(law, name) for law in laws]
+        ends = Interval(np.array([e.low for e in estimates]), np.array([e.high for e in estimates]))
+        table.by_quantity(f"diffusion_{name}", [e.value for e in estimates], units, words, ends)

@@ -7,6 +7,7 @@ from collections.abc import Iterator
 import numpy as np
 
 from nipc.answers.ensemble import add_ensemble
+from nipc.answers.exits import EXIT_MEMBERS, ExitDrivers
 from nipc.answers.intervals import Interval, normal_factor
 from nipc.answers.spreading import spread_rate
 from nipc.answers.table import ResultTable
@@ -25,7 +26,8 @@ def single_arc_table(arc: SingleArc) -> ResultTable:
     add_check(table, arc.check, arc.study.tolerance)
     rms = np.nan_to_num(arc.check.rms)
     margin = normal_factor() * np.maximum(rms, np.nan_to_num(_residual(arc)))
-    add_ensemble(table, _blocks(arc), margin)
+    add_ensemble(table, _blocks(arc), margin, arc.check.trust_horizon(arc.study.tolerance))
+    _add_exit_drivers(table, arc)
     return table
 
 
@@ -36,6 +38,28 @@ def _blocks(arc: SingleArc) -> Iterator[tuple[FloatArray, None]]:
         count = min(BLOCK, left)
         yield arc.quantities(arc.germ.sample(rng, count)), None
         left -= count
+
+
+def _add_exit_drivers(table: ResultTable, arc: SingleArc) -> None:
+    groups = arc.germ.groups()
+    rng = generator(arc.study, "pick and freeze")
+    exits = ExitDrivers(arc.study, [g.name for g in groups])
+    if not exits.boxes:
+        return
+    left = min(arc.study.ensemble.members, EXIT_MEMBERS)
+    while left > 0:
+        count = min(BLOCK, left)
+        a, b = arc.germ.sample(rng, count), arc.germ.sample(rng, count)
+
+        def mixed(a: FloatArray = a, b: FloatArray = b) -> Iterator[FloatArray]:
+            for group in groups:
+                nodes = a.copy()
+                nodes[:, group.columns] = b[:, group.columns]
+                yield arc.quantities(nodes)
+
+        exits.update(arc.quantities(a), arc.quantities(b), mixed())
+        left -= count
+    exits.add_to(table)
 
 
 def _residual(arc: SingleArc) -> FloatArray:

@@ -46,11 +46,11 @@ class ArcBasis:
         right = ProductBasis([hermite(degree)] * sizes.size, indices)
         order = indices.sum(axis=1)
         right_cost = np.where(order <= 1, np.minimum(indices @ weights, 1e9), indices @ weights)
-        cost = left.degrees[:, None] + right_cost
+        cost: FloatArray = np.asarray(left.degrees[:, None] + right_cost, dtype=float)
         linear = (left.degrees[:, None] + order) <= 1
         cost = np.where(linear, left.degrees[:, None] + order, cost)
         pairs = np.argwhere(cost <= degree + 1e-9)
-        rank = cost[pairs[:, 0], pairs[:, 1]]
+        rank = np.asarray(cost[pairs[:, 0], pairs[:, 1]], dtype=float)
         ordering = np.lexsort([pairs[:, 1], pairs[:, 0], rank])
         return cls(TensorBasis(left, right, pairs[ordering]), rank[ordering])
 

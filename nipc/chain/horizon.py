@@ -161,7 +161,7 @@ class Horizon:
         self.outcomes.append(replace(outcomes, states=outcomes.states[:, :0]))
         with np.errstate(invalid="ignore"):
             values = self.chart.from_state(outcomes.states, grid * self.chart_time)
-        good = np.isfinite(values).all(axis=(1, 2))
+        good: BoolArray = np.asarray(np.isfinite(values).all(axis=(1, 2)))
         values[good] = self.chart.unwrap(values[good], grid * self.chart_time, members.values[good])
         return values[:, 1:], good
 

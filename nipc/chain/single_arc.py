@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 
-from nipc.arrays import BoolArray, FloatArray
+from nipc.arrays import BoolArray, FloatArray, IntArray
 from nipc.chain.check import HeldOut
 from nipc.chain.plan import noise_terms
 from nipc.errors import FitError, InputError
@@ -230,7 +230,7 @@ def _fit(
 
 def _fit_group(
     study: Study, design: Design, pattern: BoolArray, outputs: FloatArray
-) -> tuple[Any, FloatArray]:
+) -> tuple[Any, IntArray]:
     matrix = design.basis.evaluate(design.nodes[pattern])
     everything = np.arange(design.basis.n_terms)
     if study.expansion.fit == "least-angle":
@@ -246,7 +246,7 @@ def _fit_group(
     if study.expansion.degree != "auto":
         return least_squares(matrix, outputs, weights), everything
     # the degree with the least leave-one-out error, all on the same runs
-    best: tuple[float, Any, FloatArray] | None = None
+    best: tuple[float, Any, IntArray] | None = None
     degrees = design.basis.degrees
     for degree in range(int(degrees.max()) + 1):
         part = np.flatnonzero(degrees <= degree)

@@ -67,7 +67,7 @@ def covariance_fault(matrix: FloatArray, size: int) -> str | None:
     bound = np.outer(std, std)
     gap = np.abs(matrix - matrix.T)
     if np.any(gap > 1e-9 * bound):
-        i, j = np.unravel_index(int(np.argmax(gap)), gap.shape)
+        i, j = (int(k) for k in np.unravel_index(int(np.argmax(gap)), gap.shape))
         return (
             f"the covariance is not symmetric: entry ({i + 1}, {j + 1}) is {matrix[i, j]:g} "
             f"and ({j + 1}, {i + 1}) is {matrix[j, i]:g}; they must be equal"
@@ -75,7 +75,8 @@ def covariance_fault(matrix: FloatArray, size: int) -> str | None:
     scale = np.where(std > 0, std, 1.0)
     correlation = matrix / np.outer(scale, scale)
     if np.any(np.abs(matrix) > bound * (1 + 1e-9)):
-        i, j = np.unravel_index(int(np.argmax(np.abs(correlation) * (bound >= 0))), gap.shape)
+        flat = int(np.argmax(np.abs(correlation)))
+        i, j = (int(k) for k in np.unravel_index(flat, gap.shape))
         if i != j:
             return (
                 f"entry ({i + 1}, {j + 1}) gives a correlation of {correlation[i, j]:.3g}; "
@@ -92,7 +93,7 @@ def covariance_fault(matrix: FloatArray, size: int) -> str | None:
 
 def read_matrix(path: Path) -> FloatArray:
     """A square table of numbers, separated by commas or blanks; '#' starts a comment."""
-    rows = []
+    rows: list[list[float]] = []
     for number, line in enumerate(path.read_text(encoding="utf-8").splitlines(), start=1):
         text = line.split("#")[0].replace(",", " ").replace(";", " ").split()
         try:

@@ -113,4 +113,4 @@ def _load(name: str, folder: Path | None) -> Map:
     function = getattr(module, function_name, None)
     if not callable(function):
         raise ChartError(f"chart 'functions': {module_name!r} has no function {function_name!r}")
-    return function  # type: ignore[no-any-return]
+    return function

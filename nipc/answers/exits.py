@@ -1,0 +1,58 @@
+"""Which source decides who leaves: total Sobol indices of the survival indicator."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Iterator
+
+import numpy as np
+
+from nipc.answers.boxes import survived
+from nipc.answers.drivers import PickFreezeAccumulator
+from nipc.answers.ensemble import boxes_of
+from nipc.answers.table import ResultTable
+from nipc.arrays import FloatArray
+from nipc.problem.study import Study
+
+EXIT_MEMBERS = 20_000
+
+
+class ExitDrivers:
+    """Pick and freeze on "stayed in the box at all output times", for each boxed quantity."""
+
+    def __init__(self, study: Study, groups: list[str]) -> None:
+        self.boxes, _ = boxes_of(study)
+        self.times = study.clock.times
+        self._shares = PickFreezeAccumulator(groups)
+
+    def update(self, a: FloatArray, b: FloatArray, mixed: Iterable[FloatArray]) -> None:
+        """Quantities (n, T, Q) of two independent blocks and of the mixed ones, in group order."""
+
+        def indicators(values: FloatArray) -> FloatArray:
+            held = [survived(values, self.times, box) for box in self.boxes]
+            return np.stack(held, axis=1)[:, None, :]
+
+        def each() -> Iterator[FloatArray]:
+            for values in mixed:
+                yield indicators(values)
+
+        self._shares.update(indicators(a), indicators(b), each())
+
+    def add_to(self, table: ResultTable) -> None:
+        """exit_driver_total (source, quantity) and its interval; NaN where nobody or all leave."""
+        result = self._shares.result()
+        count = len(table.study.quantity)
+        columns = [box.columns[0] for box in self.boxes]
+        for suffix, values in (
+            ("", result.total),
+            ("_low", result.total_interval.low),
+            ("_high", result.total_interval.high),
+        ):
+            full = np.full((values.shape[0], count), np.nan)
+            full[:, columns] = values[:, 0]
+            table.add(
+                f"exit_driver_total{suffix}",
+                ("source", "quantity"),
+                full,
+                "1",
+                "total share of who leaves the box",
+            )

@@ -1,0 +1,113 @@
+"""A commented study and a small propagator that run as they are: what one starts from."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from nipc.errors import InputError
+
+STUDY = """\
+# A study of nipc. Everything here is invented: change it into your own.
+title = "Oscillator under a noisy force"
+seed = 1                       # the same study gives the same numbers
+tolerance = 0.02               # how far held-out direct runs may differ, over the spread
+
+[propagator]                   # the black box
+{propagator}
+[clock]
+end = 12.0
+unit = "s"
+outputs = 61                   # how many evenly spaced times, or a list of them
+period = 6.283                 # a characteristic period: tells how many noise terms are needed
+
+[[state]]                      # one table a state component, in the propagator's order
+name = "x"
+unit = "m"
+mean = 0.1
+std = 0.01                     # standard deviation of the start
+
+[[state]]
+name = "v"
+unit = "m/s"
+mean = 0.0
+std = 0.0                      # known exactly
+
+[[parameter]]                  # also fixed, truncated-normal, lognormal, triangular, beta, normal
+name = "stiffness"
+unit = "1/s^2"
+law = "uniform"
+lower = 0.98
+upper = 1.02
+
+[[noise]]                      # white: a velocity driven by it has variance intensity^2 t
+name = "force"
+unit = "m/s^1.5"
+intensity = 0.005
+
+[[quantity]]                   # what you want to know
+name = "x"
+unit = "m"
+box = [-0.15, 0.15]            # what it should stay in
+
+[[quantity]]
+name = "energy"
+unit = "m^2/s^2"
+expression = "0.5 * v**2 + 0.5 * stiffness * x**2"
+"""
+
+FUNCTION = '''\
+"""The propagator: replace the integration by a call of your own code."""
+
+import numpy as np
+from scipy.integrate import solve_ivp
+
+
+def propagate(x0, times, forcing, parameters):
+    """States (len(times), 2) from x0 at times[0]; forcing(t) holds one value a noise source."""
+
+    def rates(t, x):
+        return [x[1], -parameters[0] * x[0] + forcing(t)[0]]
+
+    span = (times[0], times[-1])
+    return solve_ivp(rates, span, x0, t_eval=times, rtol=1e-8, atol=1e-10).y.T
+'''
+
+ODE = '''\
+"""The right-hand side: replace it by your own equations of motion."""
+
+
+def rates(t, x, xi, parameters):
+    """dx/dt of the state x under the noise xi, one value a source."""
+    return [x[1], -parameters[0] * x[0] + xi[0]]
+'''
+
+FLAVOURS = {
+    "function": (
+        'adapter = "function"\nfunction = "motion:propagate"  # in motion.py beside this file\n',
+        FUNCTION,
+    ),
+    "ode": (
+        'adapter = "ode"\nrhs = "motion:rates"           # in motion.py beside this file\n',
+        ODE,
+    ),
+}
+
+
+def write_starter(folder: Path, flavour: str) -> Path:
+    """Write study.toml and motion.py to a new folder; the study file's path.
+
+    InputError when the flavour is unknown or something is there already.
+    """
+    if flavour not in FLAVOURS:
+        raise InputError(f"no flavour {flavour!r}; there are: {', '.join(FLAVOURS)}")
+    if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
+        raise InputError(f"{folder} is there already and not empty; name a new folder")
+    settings, code = FLAVOURS[flavour]
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        (folder / "motion.py").write_text(code, encoding="utf-8")
+        study = folder / "study.toml"
+        study.write_text(STUDY.format(propagator=settings), encoding="utf-8")
+    except OSError as error:
+        raise InputError(f"cannot write to {folder}: {error.strerror}") from None
+    return study

@@ -234,7 +234,7 @@ def _fit_group(
     matrix = design.basis.evaluate(design.nodes[pattern])
     everything = np.arange(design.basis.n_terms)
     if study.expansion.fit == "least-angle":
-        from nipc.expansion import least_angle
+        from nipc.expansion.fits.least_angle import least_angle
 
         return least_angle(matrix, outputs), everything
     weights = design.weights[pattern]

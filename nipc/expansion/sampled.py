@@ -142,7 +142,7 @@ class SampledBasis(Basis):
     def take(self, terms: IntArray) -> SampledBasis:
         """The basis of some terms. They are rows of the factor; leading terms stay triangular."""
         terms = np.asarray(terms, dtype=np.int64)
-        needed = np.flatnonzero(np.any(self.factor[terms] != 0.0, axis=0))
+        needed: IntArray = np.flatnonzero(np.any(self.factor[terms] != 0.0, axis=0))
         if np.array_equal(terms, np.arange(terms.size)):
             needed = terms
         factor = self.factor[np.ix_(terms, needed)]

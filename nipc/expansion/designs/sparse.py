@@ -1,6 +1,7 @@
 """Smolyak's sparse grid of Gauss rules that match each variable's distribution.
 
-The one-dimensional rules are chaospy's. Nested rules are left out: Genz-Keister nodes at level 2 overestimate a standard
+The one-dimensional rules are chaospy's. Nested rules are left out: Genz-Keister nodes at level 2
+overestimate a standard
 deviation by tens of percent, and nothing is gained by nesting when the fit is a regression.
 """
 
@@ -28,7 +29,7 @@ class SparseGrid:
 def sparse_grid(distributions: Sequence[Any], level: int) -> SparseGrid:
     """Sparse grid of a level for independent chaospy distributions, one a variable.
 
-    Level 2 in d variables has 2 d^2 + 3 d + 1 nodes for symmetric ones. Smolyak (1963), Doklady
+    Level 2 in d variables has 2 d^2 + 2 d + 1 nodes for symmetric ones. Smolyak (1963), Doklady
     Akademii Nauk SSSR 148.
     """
     rules = [_rules(d, level) for d in _distinct(distributions)]

@@ -99,7 +99,7 @@ class ArcMap:
     def sizes(self, spread: FloatArray) -> FloatArray:
         """(K,) largest linear effect of each noise variable over the spread (d,) at the end."""
         indices = self.basis.indices
-        count = self.noise.size
+        count = sum(family.terms for family in self.noise.bases)
         result = np.zeros(count)
         last = self.coefficients.reshape(indices.shape[0], self.times.size, -1)[:, -1]
         with np.errstate(invalid="ignore", divide="ignore"):

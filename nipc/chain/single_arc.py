@@ -91,6 +91,8 @@ def design_of(study: Study, germ: Germ) -> Design:
     rng = generator(study, "design")
     degree, basis = _degree(study, germ)
     count = settings.runs or math.ceil(settings.oversampling * basis.n_terms)
+    nodes: FloatArray
+    weights: FloatArray
     if settings.kind == "sparse-grid":
         from nipc.expansion.designs import sparse_grid
 

@@ -32,6 +32,8 @@ class Products:
     @classmethod
     def plan(cls, indices: IntArray) -> Products:
         """Plan for an index set (terms, variables) whose first row is the constant."""
+        if indices.shape[1] == 0:
+            return cls(1, (), (), None)
         worked, parents, select = _closure(indices)
         n_variables = worked.shape[1]
         places = np.arange(n_variables) + 1
@@ -57,7 +59,7 @@ class Products:
 
     def multiply(self, table: FloatArray, out: FloatArray) -> None:
         """Fill `out` (terms, n) from the univariate values `table` (degree + 1, variables, n)."""
-        rows = table[1:].reshape(-1, table.shape[2])
+        rows = table[1:].reshape((table.shape[0] - 1) * table.shape[1], table.shape[2])
         worked = out if self.select is None else np.empty((self.n_worked, out.shape[1]))
         worked[0] = 1.0
         for start, end, row in self.copies:

@@ -58,7 +58,8 @@ def sparse_grid(distributions: Sequence[Any], level: int) -> SparseGrid:
     _, first, inverse = np.unique(
         np.round(nodes / scale, 11) + 0.0, axis=0, return_index=True, return_inverse=True
     )
-    summed = np.bincount(inverse.ravel(), weights=weights, minlength=first.size)
+    summed = np.zeros(first.size)
+    np.add.at(summed, inverse.ravel(), weights)
     order = np.argsort(first)
     return SparseGrid(nodes[first[order]], summed[order])
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -11,14 +11,12 @@ import numpy as np
 from nipc.arrays import FloatArray
 from nipc.errors import FitError
 from nipc.expansion.basis import ProductBasis
-from nipc.expansion.fits.fit import Fit
+from nipc.expansion.fits.fit import Fit, Fitter
 from nipc.expansion.indices import hyperbolic
 from nipc.expansion.recurrence import Recurrence, recurrence_of
 
-Fitter = Callable[[FloatArray, FloatArray], Fit]
-
 _PATIENCE = 2  # further degrees tried after one that does not better the error
-_MOST_TERMS = 20_000  # of a truncation that is tried
+_MOST_TERMS = 3_000  # of a truncation that is tried
 
 
 @dataclass(frozen=True)

@@ -1,6 +1,6 @@
 """Many outputs as few: the leading singular vectors of the standardised outputs.
 
-    (Y − centre) / spread = U S Vᵀ,   components U √n,   mixing S Vᵀ · spread / √n
+(Y − centre) / spread = U S Vᵀ,   components U √n,   mixing S Vᵀ · spread / √n
 """
 
 from __future__ import annotations
@@ -9,7 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from nipc.arrays import FloatArray
+from nipc.arrays import FloatArray, IntArray
 
 
 @dataclass(frozen=True)
@@ -49,7 +49,7 @@ def compress(outputs: FloatArray, spread: FloatArray, loss: float) -> Compressed
     return Compressed(scaled, _spread_out(inner, alive, spread), centre, np.zeros(n_outputs))
 
 
-def _spread_out(inner: FloatArray, alive: np.ndarray, spread: FloatArray) -> FloatArray:
+def _spread_out(inner: FloatArray, alive: IntArray, spread: FloatArray) -> FloatArray:
     mixing = np.zeros((inner.shape[0], spread.size))
     mixing[:, alive] = inner * spread[alive]
     return mixing

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -46,6 +47,9 @@ class Fit:
         """The expansion with these coefficients, outputs folded back to their shape."""
         shape = self.loo.shape if output_shape is None else output_shape
         return Expansion(basis, self.coefficients.reshape(-1, *shape), self.loo.reshape(shape))
+
+
+Fitter = Callable[[FloatArray, FloatArray], Fit]  # (basis matrix, outputs (runs, outputs))
 
 
 def _relative(error: FloatArray, spread: FloatArray) -> FloatArray:

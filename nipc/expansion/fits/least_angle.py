@@ -21,6 +21,9 @@ from nipc.expansion.fits.fit import Fit, checked, spread_of
 _FEWEST_RUNS = 4
 _FIRST_STRETCH = 40  # steps of the path looked at first; as many again while the error still falls
 _FULL_LEVERAGE = 1e-6
+_MOST_PATHS = 6
+_WORTHWHILE = 0.5  # of the squared error; less of a fall may be chance
+_EXACT = 1e-24  # of the output's square: rounding
 
 
 def least_angle(
@@ -31,6 +34,9 @@ def least_angle(
     Many outputs are standardised and compressed by a singular value decomposition that loses at
     most the share `loss` of their variance (counted in the error), where that saves work; terms are
     then selected per component. `max_terms` bounds every active set.
+
+    The error is of the selected terms: having been selected by it, it is too low by a factor of up
+    to two where no sparse expansion exists; `cross_validated` selects anew in every fold.
 
     FitError with fewer than four runs or outputs that are not finite.
     """
@@ -52,7 +58,7 @@ def least_angle(
     leverage = np.zeros(n_runs)
     for k in range(n_parts):
         model = _select(matrix, columns, parts.components[:, k], most)
-        coefficients[model.active, k] = model.coefficients
+        coefficients[model.order, k] = model.coefficients
         left_out[:, k] = model.left_out
         corrected[:, k] = model.left_out * np.sqrt(model.correction)
         leverage += model.leverage / n_parts
@@ -88,28 +94,71 @@ class _Columns:
         unit = np.asfortranarray((centred[usable] / length[usable, None]).T)
         return cls(unit, unit.T @ unit, usable + 1)
 
+    def beyond(self, held: FloatArray) -> _Columns:
+        """What is left of the columns beside the held terms (held, runs)."""
+        q, _ = qr(held.T, mode="economic", check_finite=False)
+        rest = self.unit - q @ (q.T @ self.unit)
+        length = np.sqrt(np.einsum("nt,nt->t", rest, rest))
+        usable = np.flatnonzero(length > 1e-6)
+        unit = np.asfortranarray(rest[:, usable] / length[usable])
+        return _Columns(unit, unit.T @ unit, self.usable[usable])
+
 
 @dataclass(frozen=True)
 class _Model:
     """The refit on one active set; left_out, leverage (runs,)."""
 
-    active: IntArray
+    order: IntArray
     coefficients: FloatArray
     left_out: FloatArray
     correction: float
     leverage: FloatArray
 
+    @property
+    def score(self) -> float:
+        """Corrected mean square of the leave-one-out residuals."""
+        return float(self.correction * np.mean(self.left_out**2))
+
 
 def _select(matrix: FloatArray, columns: _Columns, output: FloatArray, most: int) -> _Model:
-    """The best stretch of the path for one output; the path is lengthened while that helps."""
-    steps = min(_FIRST_STRETCH, most)
+    """The best active set for one output.
+
+    A path takes up terms by their correlation with what is left, and chance correlations with large
+    terms crowd out small true ones. So its terms are sorted by their refitted coefficients and cut
+    anew; then a further path is walked in what the kept terms leave over, as long as that halves
+    the squared error.
+    """
+    best = _walk(matrix, columns, output, np.zeros(1, dtype=np.int64), most)
+    for _ in range(_MOST_PATHS - 1):
+        if best.order.size > most or best.score <= _EXACT * float(np.mean(output * output)):
+            break
+        further = _walk(matrix, columns.beyond(matrix[best.order]), output, best.order, most)
+        if not further.score < _WORTHWHILE * best.score:
+            break
+        best = further
+    return best
+
+
+def _walk(
+    matrix: FloatArray, columns: _Columns, output: FloatArray, held: IntArray, most: int
+) -> _Model:
+    """The best refit along a path that starts from the held terms, lengthened while that helps."""
+    steps = min(_FIRST_STRETCH, most + 1 - held.size)
     while True:
-        order = _path(columns, output, steps)
-        refits = _Refits.along(matrix, np.concatenate([[0], order]), output)
-        best = refits.best()
-        if best < 0.6 * steps or steps >= most or order.size < steps:
-            return refits.model(best)
-        steps = min(2 * steps, most)
+        q, _ = qr(matrix[held].T, mode="economic", check_finite=False)
+        path = _path(columns, output - q @ (q.T @ output), steps)
+        refits = _Refits.along(matrix, np.concatenate([held, path]), output)
+        found = refits.best()
+        if found < held.size + 0.6 * steps or steps >= most + 1 - held.size or path.size < steps:
+            break
+        steps = min(2 * steps, most + 1 - held.size)
+    # the constant stays first; the others by what they contribute
+    stretch = refits.model(min(found + 10, refits.order.size - 1))
+    by_size = 1 + np.argsort(-np.abs(stretch.coefficients[1:]), kind="stable")
+    resorted = _Refits.along(matrix, stretch.order[np.concatenate([[0], by_size])], output)
+    return min(
+        (refits.model(found), resorted.model(resorted.best())), key=lambda model: model.score
+    )
 
 
 def entry_order(matrix: FloatArray, output: FloatArray, steps: int) -> IntArray:
@@ -167,9 +216,7 @@ class _Refits:
         return cls(order, r, projected, residuals, leverages, corrections)
 
     def left_out(self, k: int | slice) -> FloatArray:
-        return np.asarray(
-            self.residuals[k] / np.maximum(1.0 - self.leverages[k], _FULL_LEVERAGE)
-        )
+        return np.asarray(self.residuals[k] / np.maximum(1.0 - self.leverages[k], _FULL_LEVERAGE))
 
     def best(self) -> int:
         """Position of the last term of the best refit."""

@@ -1,8 +1,8 @@
 """Smolyak sparse grids: Σ_{|l|<=L} (−1)^{L−|l|} C(d−1, L−|l|) ⊗_v Q_{l_v}.
 
 Smolyak (1963); in the combination form of Wasilkowski & Woźniakowski (1995). With univariate rules
-exact to degree 2l (or 2l + 1) the grid of level L is exact to total degree 2L (or 2L + 1), so that
-the variance of a polynomial of degree L is not biased.
+exact to degree 2l + 1 at level l the grid of level L is exact to total degree 2L + 1, so that the
+variance of a polynomial of degree L is not biased; a rule short of that biases it.
 """
 
 from __future__ import annotations
@@ -28,10 +28,13 @@ def gauss(distribution: Any, level: int) -> tuple[FloatArray, FloatArray]:
 
 
 def leja(distribution: Any, level: int) -> tuple[FloatArray, FloatArray]:
-    """Weighted Leja rule of 2 level + 1 nodes, exact to degree 2 level; nested."""
-    nodes, _ = _chaospy_rule(distribution, 2 * level, "leja")
+    """Weighted Leja rule of 2 level + 2 nodes (the mean at level 0), exact to degree 2 level + 1;
+    nested from level 1 on, for any distribution."""
+    if level == 0:
+        return gauss(distribution, 0)
+    nodes, _ = _chaospy_rule(distribution, 2 * level + 1, "leja")
     # weights that integrate every polynomial through the nodes exactly: Σ_i w_i p_k(x_i) = δ_k0
-    values = recurrence_of(distribution, 2 * level).evaluate(nodes)
+    values = recurrence_of(distribution, 2 * level + 1).evaluate(nodes)
     return nodes, np.linalg.solve(values, np.eye(nodes.size)[0])
 
 

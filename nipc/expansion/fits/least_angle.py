@@ -1,8 +1,9 @@
 """Least-angle regression: which terms matter, found one after another; then least squares on them.
 
-Efron, Hastie, Johnstone & Tibshirani (2004), Annals of Statistics 32(2). The active set is the
-stretch of the path whose least-squares refit has the least corrected leave-one-out error. It finds
-sparse expansions from fewer runs than terms.
+Efron, Hastie, Johnstone & Tibshirani (2004), Annals of Statistics 32(2). Active sets
+are stretches of the path, judged by the corrected leave-one-out error of their least-squares
+refits; refits that do about as well are averaged. It finds sparse expansions from fewer runs than
+terms.
 """
 
 from __future__ import annotations
@@ -19,8 +20,9 @@ from nipc.expansion.fits.compression import compress
 from nipc.expansion.fits.fit import Fit, checked, spread_of
 
 _FEWEST_RUNS = 4
-_FIRST_STRETCH = 40  # steps of the path looked at first; as many again while the error still falls
+_STRETCH = 40  # steps of the path looked at first; as many again while the error still falls
 _FULL_LEVERAGE = 1e-6
+_SHARPNESS = 0.05  # weights of refits go with their squared error to the power −0.05 n
 _MOST_PATHS = 6
 _WORTHWHILE = 0.5  # of the squared error; less of a fall may be chance
 _EXACT = 1e-24  # of the output's square: rounding
@@ -32,8 +34,9 @@ def least_angle(
     """Fit outputs (runs, outputs) sparsely on a basis matrix (terms, runs), constant first.
 
     Many outputs are standardised and compressed by a singular value decomposition that loses at
-    most the share `loss` of their variance (counted in the error), where that saves work; terms are
-    then selected per component. `max_terms` bounds every active set.
+    most the share `loss` of their variance, where that saves work: paths are walked per component,
+    and each output then takes what it needs of the terms found, refitted to all of it.
+    `max_terms` bounds every active set.
 
     The error is of the selected terms: having been selected by it, it is too low by a factor of up
     to two where no sparse expansion exists; `cross_validated` selects anew in every fold.
@@ -45,36 +48,51 @@ def least_angle(
         raise FitError(f"{n_runs} runs: least-angle regression needs at least {_FEWEST_RUNS}")
     outputs, weights = checked(matrix, outputs, None)
     spread = spread_of(outputs, weights)
-    parts = compress(outputs, spread, loss)
+    alive = np.flatnonzero(spread > 0.0)
     columns = _Columns.of(matrix)
     most = min(n_runs - 2, columns.usable.size, n_terms - 1)
     if max_terms is not None:
         most = min(most, max(max_terms - 1, 0))
 
-    n_parts = parts.components.shape[1]
-    coefficients = np.zeros((n_terms, n_parts))
-    left_out = np.empty((n_runs, n_parts))
-    corrected = np.empty((n_runs, n_parts))
-    leverage = np.zeros(n_runs)
-    for k in range(n_parts):
-        model = _select(matrix, columns, parts.components[:, k], most)
-        coefficients[model.order, k] = model.coefficients
-        left_out[:, k] = model.left_out
-        corrected[:, k] = model.left_out * np.sqrt(model.correction)
-        leverage += model.leverage / n_parts
+    components, mixing = compress(outputs[:, alive], spread[alive], loss)
+    models = [_select(matrix, columns, column, most) for column in components.T]
+    if mixing is not None:
+        found = np.zeros((n_terms, len(models)))
+        for k, model in enumerate(models):
+            found[model.order, k] = model.coefficients
+        sizes = np.abs(found @ mixing)
+        models = [
+            _cut_by_size(matrix, outputs[:, o], sizes[:, k], most) for k, o in enumerate(alive)
+        ]
+    return _gathered(models, outputs, alive, spread, n_terms)
 
-    folded = coefficients @ parts.mixing
-    folded[0] += parts.centre
-    loo = _rms(left_out @ parts.mixing, parts.lost)
-    ratio = np.where(loo > 0.0, _rms(corrected @ parts.mixing, parts.lost), 1.0)
-    return Fit(
-        folded,
-        loo,
-        spread,
-        (ratio / np.where(loo > 0.0, loo, 1.0)) ** 2,
-        leverage,
-        np.count_nonzero(folded, axis=0).astype(np.float64),
-    )
+
+def _cut_by_size(matrix: FloatArray, output: FloatArray, sizes: FloatArray, most: int) -> _Model:
+    """Of the terms that the components use, those that this output needs, the largest first."""
+    candidates = 1 + np.argsort(-sizes[1:], kind="stable")
+    count = min(np.count_nonzero(sizes[1:]), most, output.size // 2)
+    order = np.concatenate([[0], candidates[:count]])
+    return _Refits.along(matrix, order, output).averaged()
+
+
+def _gathered(
+    models: list[_Model], outputs: FloatArray, alive: IntArray, spread: FloatArray, n_terms: int
+) -> Fit:
+    """The models of the varying outputs in one fit; constant outputs are their constant."""
+    n_runs, n_outputs = outputs.shape
+    coefficients = np.zeros((n_terms, n_outputs))
+    coefficients[0] = outputs.mean(axis=0)
+    loo, correction = np.zeros(n_outputs), np.ones(n_outputs)
+    used = np.ones(n_outputs)
+    leverage = np.zeros(n_runs)
+    for o, model in zip(alive, models, strict=True):
+        coefficients[:, o] = 0.0
+        coefficients[model.order, o] = model.coefficients
+        loo[o] = np.sqrt(np.mean(model.left_out**2))
+        correction[o] = model.correction
+        used[o] = model.order.size
+        leverage += model.leverage / alive.size
+    return Fit(coefficients, loo, spread, correction, leverage, used)
 
 
 @dataclass(frozen=True)
@@ -82,7 +100,6 @@ class _Columns:
     """Terms that vary over the runs, centred and of unit length: what the path is made of."""
 
     unit: FloatArray  # (runs, usable terms)
-    gram: FloatArray
     usable: IntArray
 
     @classmethod
@@ -92,7 +109,7 @@ class _Columns:
         size = np.sqrt(np.einsum("tn,tn->t", matrix[1:], matrix[1:]))
         usable = np.flatnonzero(length > 1e-10 * size)
         unit = np.asfortranarray((centred[usable] / length[usable, None]).T)
-        return cls(unit, unit.T @ unit, usable + 1)
+        return cls(unit, usable + 1)
 
     def beyond(self, held: FloatArray) -> _Columns:
         """What is left of the columns beside the held terms (held, runs)."""
@@ -101,12 +118,12 @@ class _Columns:
         length = np.sqrt(np.einsum("nt,nt->t", rest, rest))
         usable = np.flatnonzero(length > 1e-6)
         unit = np.asfortranarray(rest[:, usable] / length[usable])
-        return _Columns(unit, unit.T @ unit, self.usable[usable])
+        return _Columns(unit, self.usable[usable])
 
 
 @dataclass(frozen=True)
 class _Model:
-    """The refit on one active set; left_out, leverage (runs,)."""
+    """An average of refits; left_out, leverage (runs,)."""
 
     order: IntArray
     coefficients: FloatArray
@@ -114,10 +131,18 @@ class _Model:
     correction: float
     leverage: FloatArray
 
+
+@dataclass(frozen=True)
+class _Cut:
+    """The best of a sequence of refits: that on the terms of the order up to `last`."""
+
+    refits: _Refits
+    last: int
+    score: float
+
     @property
-    def score(self) -> float:
-        """Corrected mean square of the leave-one-out residuals."""
-        return float(self.correction * np.mean(self.left_out**2))
+    def held(self) -> IntArray:
+        return self.refits.order[: self.last + 1]
 
 
 def _select(matrix: FloatArray, columns: _Columns, output: FloatArray, most: int) -> _Model:
@@ -130,35 +155,34 @@ def _select(matrix: FloatArray, columns: _Columns, output: FloatArray, most: int
     """
     best = _walk(matrix, columns, output, np.zeros(1, dtype=np.int64), most)
     for _ in range(_MOST_PATHS - 1):
-        if best.order.size > most or best.score <= _EXACT * float(np.mean(output * output)):
+        if best.last >= most or best.score <= _EXACT * float(np.mean(output * output)):
             break
-        further = _walk(matrix, columns.beyond(matrix[best.order]), output, best.order, most)
+        further = _walk(matrix, columns.beyond(matrix[best.held]), output, best.held, most)
         if not further.score < _WORTHWHILE * best.score:
             break
         best = further
-    return best
+    return best.refits.averaged()
 
 
 def _walk(
     matrix: FloatArray, columns: _Columns, output: FloatArray, held: IntArray, most: int
-) -> _Model:
+) -> _Cut:
     """The best refit along a path that starts from the held terms, lengthened while that helps."""
-    steps = min(_FIRST_STRETCH, most + 1 - held.size)
+    q, _ = qr(matrix[held].T, mode="economic", check_finite=False)
+    rest = output - q @ (q.T @ output)
+    longest = most + 1 - held.size
+    steps = min(_STRETCH if held.size == 1 else _STRETCH // 2, longest)
     while True:
-        q, _ = qr(matrix[held].T, mode="economic", check_finite=False)
-        path = _path(columns, output - q @ (q.T @ output), steps)
-        refits = _Refits.along(matrix, np.concatenate([held, path]), output)
-        found = refits.best()
-        if found < held.size + 0.6 * steps or steps >= most + 1 - held.size or path.size < steps:
+        path = _path(columns, rest, steps)
+        found = _Refits.along(matrix, np.concatenate([held, path]), output).best()
+        if found.last < held.size + 0.6 * steps or steps >= longest or path.size < steps:
             break
-        steps = min(2 * steps, most + 1 - held.size)
+        steps = min(2 * steps, longest)
     # the constant stays first; the others by what they contribute
-    stretch = refits.model(min(found + 10, refits.order.size - 1))
-    by_size = 1 + np.argsort(-np.abs(stretch.coefficients[1:]), kind="stable")
-    resorted = _Refits.along(matrix, stretch.order[np.concatenate([[0], by_size])], output)
-    return min(
-        (refits.model(found), resorted.model(resorted.best())), key=lambda model: model.score
-    )
+    terms, sizes = found.refits.stretch(found.last + 10)
+    by_size = np.concatenate([[0], 1 + np.argsort(-np.abs(sizes[1:]), kind="stable")])
+    resorted = _Refits.along(matrix, terms[by_size], output).best()
+    return min(found, resorted, key=lambda cut: cut.score)
 
 
 def entry_order(matrix: FloatArray, output: FloatArray, steps: int) -> IntArray:
@@ -180,7 +204,6 @@ def _path(columns: _Columns, output: FloatArray, steps: int) -> IntArray:
         _, active, _ = lars_path(
             columns.unit,
             centred / size,
-            Gram=columns.gram,
             method="lar",
             max_iter=steps,
             return_path=False,
@@ -218,26 +241,42 @@ class _Refits:
     def left_out(self, k: int | slice) -> FloatArray:
         return np.asarray(self.residuals[k] / np.maximum(1.0 - self.leverages[k], _FULL_LEVERAGE))
 
-    def best(self) -> int:
-        """Position of the last term of the best refit."""
-        errors = self.corrections * np.mean(self.left_out(slice(None)) ** 2, axis=1)
-        return int(np.argmin(errors))
+    def errors(self) -> FloatArray:
+        """Corrected mean square of the leave-one-out residuals of each refit: (terms,)."""
+        return np.asarray(self.corrections * np.mean(self.left_out(slice(None)) ** 2, axis=1))
 
-    def model(self, k: int) -> _Model:
-        leading = slice(k + 1)
-        return _Model(
-            self.order[leading],
-            np.asarray(
-                solve_triangular(
-                    self.r[leading, leading], self.projected[leading], check_finite=False
-                )
-            ),
-            self.left_out(k),
-            float(self.corrections[k]),
-            np.minimum(self.leverages[k], 1.0),
+    def best(self) -> _Cut:
+        errors = self.errors()
+        last = int(np.argmin(errors))
+        return _Cut(self, last, float(errors[last]))
+
+    def stretch(self, n_terms: int) -> tuple[IntArray, FloatArray]:
+        """The leading terms of the order and their refitted coefficients."""
+        kept = slice(n_terms)
+        solved = solve_triangular(self.r[kept, kept], self.projected[kept], check_finite=False)
+        return self.order[kept], np.asarray(solved)
+
+    def averaged(self) -> _Model:
+        """The refits near the best, averaged (Buckland, Burnham & Augustin 1997).
+
+        Weights fall with the error, far more gently than likelihoods would: the errors of refits
+        along one path hardly differ by more than chance.
+        """
+        errors = self.errors()
+        floor = max(float(errors.min()), 1e-300)
+        weights = np.maximum(errors / floor, 1.0) ** (-_SHARPNESS * self.residuals.shape[1])
+        weights[weights < 1e-3] = 0.0
+        weights /= weights.sum()
+        kept = slice(int(np.flatnonzero(weights)[-1]) + 1)
+        # a coefficient of Q is in every refit that goes as far: R_k⁻¹ is a corner of R⁻¹
+        shares = np.cumsum(weights[::-1])[::-1][kept]
+        coefficients = solve_triangular(
+            self.r[kept, kept], shares * self.projected[kept], check_finite=False
         )
-
-
-def _rms(residuals: FloatArray, lost: FloatArray) -> FloatArray:
-    """Root mean square over runs of leave-one-out and lost parts together (outputs,)."""
-    return np.asarray(np.sqrt(np.mean(residuals * residuals, axis=0) + lost**2))
+        return _Model(
+            self.order[kept],
+            np.asarray(coefficients),
+            np.asarray(weights @ self.left_out(slice(None))),
+            float(weights @ self.corrections),
+            np.minimum(weights @ self.leverages, 1.0),
+        )

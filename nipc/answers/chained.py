@@ -61,20 +61,15 @@ class ChainAnswers:
 
     def table(self) -> ResultTable:
         """All answers of the chain."""
-        study, chain = self.horizon.study, self.chain
+        study = self.horizon.study
         table = ResultTable(study, tuple((g.name, g.kind) for g in self.groups))
-        parameters = self.horizon.germ.parameters(chain.check_nodes)
-        direct = self.of_values(chain.direct, parameters)
-        predicted = self.of_values(chain.predicted, parameters)
-        gap = direct - predicted
-        known = np.maximum(np.isfinite(gap).sum(axis=0), 1)
-        rms = np.sqrt(np.nansum(gap**2, axis=0) / known)
-        std = self._spread()
-        check = HeldOut(self.times, direct, predicted, std)
+        check = self.checked(self._spread())
+        known = np.maximum(np.isfinite(check.direct - check.predicted).sum(axis=0), 1)
+        rms = np.nan_to_num(check.rms)
         trust = check.trust_horizon(study.tolerance)
         moments = add_ensemble(table, self.plain(), normal_factor() * rms, trust)
         std = moments.std
-        add_check(table, check, study.tolerance)
+        add_check(table, HeldOut(self.times, check.direct, check.predicted, std), study.tolerance)
         unit = "as the quantity"
         mean, std_ends = moments.mean_interval(), moments.std_interval()
         # a path error e that is independent of the path adds e^2 to the variance; one that is not
@@ -98,6 +93,18 @@ class ChainAnswers:
         self._nonlinear(table)
         self._arcs(table)
         return table
+
+    def checked(self, spread: FloatArray) -> HeldOut:
+        """The check's members as quantities, directly and by the chain."""
+        parameters = self.horizon.germ.parameters(self.chain.check_nodes)
+        direct = self.of_values(self.chain.direct, parameters)
+        predicted = self.of_values(self.chain.predicted, parameters)
+        return HeldOut(self.times, direct, predicted, spread)
+
+    def path_error(self) -> float:
+        """Largest held-out path error over the spread, over quantities and output times."""
+        error = self.checked(self._spread()).error
+        return float(np.nanmax(np.where(np.isfinite(error), error, np.nan), initial=0.0))
 
     def _spread(self) -> FloatArray:
         """(T, Q) standard deviations of the first block, to read the trust horizon from."""

@@ -80,8 +80,18 @@ class ChainBuilder:
         self.degree = self.fixed or 1
         self.sizes: FloatArray | None = None
 
-    def build(self) -> Chain:
-        """All arcs, or those up to where the polynomials fail."""
+    def tightened(self, factor: float) -> ChainBuilder:
+        """A builder whose arcs must agree `factor` times better."""
+        other = ChainBuilder(self.horizon)
+        other.tolerance = self.tolerance * factor
+        return other
+
+    def build(self, before: Chain | None = None) -> Chain:
+        """All arcs, or those up to where the polynomials fail.
+
+        Arcs of a chain built `before` that keep this builder's tolerance are taken over as they
+        are, and their runs are not made again.
+        """
         horizon, study = self.horizon, self.study
         pool = horizon.members_of(horizon.nodes(horizon.streams("a"), 0, POOL), horizon.history, 0)
         nodes = horizon.nodes(horizon.streams("check"), 0, study.check.runs)
@@ -93,9 +103,9 @@ class ChainBuilder:
         maps: list[ArcMap] = []
         records: list[ArcRecord] = []
         notes: list[str] = []
-        cost = 0.0
+        cost = 0.0 if before is None else before.cost
         for first in range(horizon.cells):
-            arc, record, values, spent = self._arc(first, first + 1, pool, direct)
+            arc, record, values, spent = self._arc_or_kept(first, pool, direct, before)
             cost += spent * (record.end - record.start) / study.clock.length
             records.append(record)
             if arc is None:
@@ -120,6 +130,23 @@ class ChainBuilder:
             tuple(maps), tuple(records), seen, predicted, nodes, cost, float(reached),
             tuple(notes),
         )  # fmt: skip
+
+    def _arc_or_kept(
+        self, first: int, pool: Members, direct: Members, before: Chain | None
+    ) -> tuple[ArcMap | None, ArcRecord, FloatArray, int]:
+        kept = before is not None and first < len(before.maps)
+        if before is None or not kept or before.records[first].error > self.tolerance:
+            if before is not None and kept:
+                self.degree = max(self.degree, before.records[first].degree)
+            return self._arc(first, first + 1, pool, direct)
+        arc, record = before.maps[first], before.records[first]
+        rich = self.horizon.model(first, first + 1, self.study.check.richness)
+        count = direct.values.shape[0]
+        white = self.horizon.fresh(rich, self.checked, first, first + 1, 0, count)
+        label = f"arc {first + 1} of {self.horizon.cells}, check"
+        truth, _ = self.horizon.run(direct, rich, white, arc.times, label)
+        self.degree, self.sizes = arc.degree, None
+        return arc, record, truth, 0
 
     # -- one arc ---------------------------------------------------------------------------------
 
@@ -148,6 +175,8 @@ class ChainBuilder:
         degree = self.degree
         while True:
             sizes = np.full(white.shape[1], GUESS) if self.sizes is None else self.sizes
+            # noise that multiplies the state may have no linear effect, and yet matter
+            sizes = np.where(horizon.multiplies(model), 1.0, sizes)
             basis = ArcBasis.of(pool.correlated, sizes, max(degree, 1), study.chain.noise_degree)
             self._extend(state, basis.full, pool, model, times, label)
             arc, spread = self._fit(state, basis.full, model, times, degree)

@@ -111,6 +111,11 @@ class Horizon:
         sources = self.germ.noise.sources
         return NoiseModel(sources, bases, self.edges[first], self.edges[last])
 
+    def multiplies(self, model: NoiseModel) -> BoolArray:
+        """(K,) whether a white coefficient belongs to a source that multiplies the state."""
+        flags = [n.enters == "multiplicative" for n in self.study.noise]
+        return np.repeat(np.array(flags, bool), [b.terms for b in model.bases])
+
     def fresh(
         self, model: NoiseModel, history: NoiseHistory, first: int, last: int, block: int, n: int
     ) -> FloatArray:

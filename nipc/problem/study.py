@@ -192,7 +192,9 @@ class ExpansionSettings(_Section):
 class ChainSettings(_Section):
     """How the horizon is cut into arcs, and how far an arc's polynomial may go.
 
-    `arcs` is a number of equal arcs, or "auto": lengths and degrees follow from held-out runs.
+    `arcs` is a number of equal arcs, or "auto": half a period each. Where the held-out paths over
+    the whole horizon are off by more than the tolerance, the coarser arcs are done again, at most
+    `rounds` times.
     """
 
     arcs: Count | Literal["auto"] = 1
@@ -200,9 +202,8 @@ class ChainSettings(_Section):
     noise_degree: Annotated[int, Field(ge=1, le=4)] = 2
     largest_degree: Annotated[int, Field(ge=1, le=9)] = 5
     oversampling: Annotated[float, Field(ge=1.05, le=20)] = 1.4
-    held_out: Annotated[int, Field(ge=2)] = 3
-    direct_share: Annotated[float, Field(ge=0, le=0.2)] = 0.002
     arc_tolerance: Share | None = None
+    rounds: Annotated[int, Field(ge=0, le=5)] = 2
 
 
 class EnsembleSettings(_Section):

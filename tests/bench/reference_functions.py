@@ -56,13 +56,16 @@ CHAOTIC = (0.0, -0.15, 0.5, 0.0)
 
 
 def cubic_orbit(
-    z: np.ndarray, start: tuple[float, ...], horizon: float = 10.0, intensity: float = 5e-3
+    z: np.ndarray,
+    start: tuple[float, ...],
+    horizon: float = 10.0,
+    intensity: tuple[float, float] = (2e-3, 1e-3),
 ) -> np.ndarray:
     """State at the horizon of H = (p² + x² + y²)/2 + x² y − y³/3 (Hénon & Heiles 1964) with white
     forces on both momenta, z (n, 2 K) their Legendre coefficients; fourth-order Runge–Kutta."""
     n, n_modes = z.shape[0], z.shape[1] // 2
     scale = np.sqrt((2 * np.arange(n_modes) + 1) / horizon)
-    modes = z.reshape(n, 2, n_modes) * scale * intensity
+    modes = z.reshape(n, 2, n_modes) * scale * np.array(intensity)[:, None]
 
     def rate(t: float, s: np.ndarray) -> np.ndarray:
         x, y, px, py = s

@@ -6,7 +6,6 @@ from importlib.metadata import entry_points
 
 from nipc.adapters.base import Adapter, AdapterSettings
 from nipc.adapters.reference import load_function
-
 from nipc.errors import InputError
 
 GROUP = "nipc.adapters"

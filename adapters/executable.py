@@ -13,11 +13,11 @@ from pathlib import Path
 from typing import Annotated
 
 import numpy as np
+from pydantic import BaseModel, ConfigDict, Field, field_validator, model_validator
+
 from nipc.adapters.base import Adapter, AdapterSettings
 from nipc.adapters.deck import Deck, ScratchName, check_template, formatted, write_table
 from nipc.adapters.table_file import read_rows
-from pydantic import BaseModel, ConfigDict, Field, field_validator, model_validator
-
 from nipc.arrays import FloatArray
 from nipc.errors import InputError, PropagatorError
 from nipc.runs.propagator import AdapterContext, Batch, Propagator, Trajectories

@@ -6,9 +6,9 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+
 from nipc.adapters.base import Adapter, AdapterSettings
 from nipc.adapters.reference import Reference, check_reference, code_digest, load_function
-
 from nipc.arrays import FloatArray
 from nipc.errors import PropagatorError
 from nipc.problem.noise import Forcing

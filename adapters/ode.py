@@ -7,11 +7,11 @@ from pathlib import Path
 from typing import Annotated, Any, Literal
 
 import numpy as np
+from pydantic import Field, model_validator
+
 from nipc.adapters.base import Adapter, AdapterSettings
 from nipc.adapters.fixed_step import integrate
 from nipc.adapters.reference import Reference, check_reference, code_digest, load_function
-from pydantic import Field, model_validator
-
 from nipc.arrays import FloatArray
 from nipc.errors import PropagatorError
 from nipc.runs.propagator import AdapterContext, Batch, Propagator, Trajectories

@@ -54,7 +54,8 @@ def _row(dataset: xr.Dataset, quantity: str) -> Row:
     trust = reading.trust(dataset, quantity)
     mark = trust.mark(trust.end)
     mean = with_spread(
-        reading.last(dataset, "mean", quantity), reading.last(dataset, "std", quantity))
+        reading.last(dataset, "mean", quantity), reading.last(dataset, "std", quantity)
+    )
     cells = [Cell(f"{mean}\u202f{unit}".rstrip(), _range(dataset, quantity), mark)]
     box = reading.box(dataset, quantity)
     for name in ("inside_probability", "survival_probability"):
@@ -62,9 +63,16 @@ def _row(dataset: xr.Dataset, quantity: str) -> Row:
             cells.append(_probability(dataset, name, quantity, box, mark))
     if reading.has(dataset, "driver_total") or reading.has(dataset, "driver_first"):
         driver = reading.main_driver(dataset, quantity)
-        cells.append(Cell("–", "no spread to share out") if driver is None else
-                     Cell(driver[0], f"{percent(driver[1])} of the variance"
-                          + (", with what it shares" if driver[2] else ", by itself"), mark))
+        cells.append(
+            Cell("–", "no spread to share out")
+            if driver is None
+            else Cell(
+                driver[0],
+                f"{percent(driver[1])} of the variance"
+                + (", with what it shares" if driver[2] else ", by itself"),
+                mark,
+            )
+        )
     if "spreading_verdict" in dataset:
         cells.append(_spreading(dataset, quantity))
     cells.append(_trust(dataset, trust))
@@ -93,8 +101,9 @@ def _probability(
 def _spreading(dataset: xr.Dataset, quantity: str) -> Cell:
     verdict = reading.text(dataset, "spreading_verdict", quantity) or "–"
     exponent = reading.scalar(dataset, "diffusion_exponent", quantity)
-    low, high = (reading.scalar(dataset, "diffusion_exponent" + s, quantity)
-                 for s in ("_low", "_high"))
+    low, high = (
+        reading.scalar(dataset, "diffusion_exponent" + s, quantity) for s in ("_low", "_high")
+    )
     if not np.isfinite(exponent):
         return Cell(verdict)
     note = f"growth exponent {number(exponent, 3)}"
@@ -122,8 +131,9 @@ def cost(dataset: xr.Dataset) -> str:
     if "propagator_runs" in held:
         arcs = dataset.sizes.get("arc", 1)
         over = f" over {arcs} arcs" if arcs > 1 else ""
-        parts.append(f"{int(held['propagator_runs']):,} runs of the propagator{over}"
-                     .replace(",", "\u202f"))
+        parts.append(
+            f"{int(held['propagator_runs']):,} runs of the propagator{over}".replace(",", "\u202f")
+        )
     if "run_equivalents" in held:
         words = f"{number(float(held['run_equivalents']), 3)} run-equivalents"
         if "budget" in held:

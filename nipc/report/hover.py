@@ -31,8 +31,11 @@ def lines(dataset: xr.Dataset, figure: str, quantity: str | None) -> list[Line]:
     """What can be read off a figure at a time; nothing when it is not over time."""
     if quantity is None:
         form = "percent" if figure != "spread_rate" else "digits:3"
-        names = {"spread_rate": "spread_rate", "nonlinear_share": "nonlinear_share",
-                 "check_error": "check_error"}
+        names = {
+            "spread_rate": "spread_rate",
+            "nonlinear_share": "nonlinear_share",
+            "check_error": "check_error",
+        }
         unit = f"1/{reading.time_unit(dataset)}" if figure == "spread_rate" else ""
         if figure not in names:
             return []
@@ -42,8 +45,12 @@ def lines(dataset: xr.Dataset, figure: str, quantity: str | None) -> list[Line]:
             if values is not None:
                 found.append(Line(each, values, unit, reading.trust(dataset, each), form))
         return found
-    makers = {"bands": _bands, "confinement": _confinement, "driver_shares": _shares,
-              "diffusion": _variance}
+    makers = {
+        "bands": _bands,
+        "confinement": _confinement,
+        "driver_shares": _shares,
+        "diffusion": _variance,
+    }
     return makers[figure](dataset, quantity) if figure in makers else []
 
 
@@ -71,8 +78,10 @@ def _decimals(std: FloatArray | None) -> str:
 
 def _confinement(dataset: xr.Dataset, quantity: str) -> list[Line]:
     found, trust = [], reading.trust(dataset, quantity)
-    for name, label in (("inside_probability", "inside"),
-                        ("survival_probability", "inside all the time")):
+    for name, label in (
+        ("inside_probability", "inside"),
+        ("survival_probability", "inside all the time"),
+    ):
         values = reading.series(dataset, name, quantity)
         if values is not None:
             found.append(Line(label, values, "", trust, "decimals:3"))
@@ -105,9 +114,14 @@ def compact(values: FloatArray, form: str = "digits:5") -> list[float | None]:
 def block(every: list[Line]) -> list[dict[str, Any]]:
     """As it is stored in the page."""
     return [
-        {"label": line.label, "unit": line.unit, "form": line.form,
-         "values": compact(line.values, line.form),
-         "paths": _known(line.trust.paths), "distribution": _known(line.trust.distribution)}
+        {
+            "label": line.label,
+            "unit": line.unit,
+            "form": line.form,
+            "values": compact(line.values, line.form),
+            "paths": _known(line.trust.paths),
+            "distribution": _known(line.trust.distribution),
+        }
         for line in every
     ]
 

@@ -18,9 +18,7 @@ def power_of_ten(exponent: int) -> str:
 
 def pretty_unit(unit: str) -> str:
     """km^2/s^2 as km²/s²; powers that are no whole numbers stay as they are."""
-    return re.sub(
-        r"(?:\^|\*\*)(-?\d+)(?![\d.])", lambda m: m[1].translate(_SUPERSCRIPT), unit
-    )
+    return re.sub(r"(?:\^|\*\*)(-?\d+)(?![\d.])", lambda m: m[1].translate(_SUPERSCRIPT), unit)
 
 
 def _fixed(value: float, decimals: int) -> str:

@@ -24,8 +24,11 @@ SECTIONS = (
     ("stays", "Stays or leaves", ("confinement",)),
     ("drivers", "What drives it", ("driver_shares", "driver_ranking")),
     ("kind", "Kind of spreading", ("diffusion", "spread_rate", "nonlinear_share")),
-    ("trust", "How far to trust it",
-     ("check_error", "coefficient_decay", "direct_against_expansion", "noise_kept")),
+    (
+        "trust",
+        "How far to trust it",
+        ("check_error", "coefficient_decay", "direct_against_expansion", "noise_kept"),
+    ),
     ("cost", "What it cost", ("chain", "failures")),
 )
 
@@ -73,8 +76,11 @@ def render(dataset: xr.Dataset) -> str:
     from markupsafe import Markup
 
     environment = Environment(
-        loader=PackageLoader("nipc.report", "templates"), autoescape=True,
-        undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True,
+        loader=PackageLoader("nipc.report", "templates"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
     )
     small = thinned(dataset)
     sections = _sections(small)
@@ -92,12 +98,17 @@ def render(dataset: xr.Dataset) -> str:
         study=str(dataset.attrs.get("study", "")),
         provenance=_provenance(dataset),
         cautions=_cautions(dataset),
-        clock={"times": hover.compact(reading.times(small), "digits:9"),
-               "unit": reading.time_unit(small)},
+        clock={
+            "times": hover.compact(reading.times(small), "digits:9"),
+            "unit": reading.time_unit(small),
+        },
         css=Markup((templates / "page.css").read_text("utf-8")),
         script=Markup("\n".join((templates / name).read_text("utf-8") for name in SCRIPTS)),
-        whatif=panel.stored(small), remarks=panel.remarks(small),
-        light=LIGHT, dark=DARK, inks=[stroke.ink for stroke in STROKES],
+        whatif=panel.stored(small),
+        remarks=panel.remarks(small),
+        light=LIGHT,
+        dark=DARK,
+        inks=[stroke.ink for stroke in STROKES],
     )
 
 
@@ -131,12 +142,23 @@ def _sections(dataset: xr.Dataset) -> list[Section]:
             first = axes[0] if isinstance(axes, tuple) else axes
             drawing = inline(first.figure, f"f{counter}")
             lines = hover.lines(dataset, entry.name, entry.quantity) if drawing.frame else []
-            built[key].plates.append(Plate(
-                f"f{counter}", counter, entry.name, entry.quantity, entry.caption,
-                Markup(drawing.markup), asdict(drawing.frame) if drawing.frame else None,
-                hover.block(lines)))
-    for key, maker in (("stays", tables.exits), ("drivers", tables.allowances),
-                       ("cost", tables.arcs)):
+            built[key].plates.append(
+                Plate(
+                    f"f{counter}",
+                    counter,
+                    entry.name,
+                    entry.quantity,
+                    entry.caption,
+                    Markup(drawing.markup),
+                    asdict(drawing.frame) if drawing.frame else None,
+                    hover.block(lines),
+                )
+            )
+    for key, maker in (
+        ("stays", tables.exits),
+        ("drivers", tables.allowances),
+        ("cost", tables.arcs),
+    ):
         table = maker(dataset)
         if table is not None:
             built[key].tables.append(table)
@@ -155,16 +177,23 @@ def _provenance(dataset: xr.Dataset) -> list[tuple[str, str]]:
         rows.append(("made", str(held["created"])))
     if "seed" in held:
         rows.append(("seed", str(held["seed"])))
-    for name, label in (("propagator_runs", "runs of the propagator"),
-                        ("run_equivalents", "run-equivalents"), ("budget", "budget of runs"),
-                        ("failed_runs", "failed runs")):
+    for name, label in (
+        ("propagator_runs", "runs of the propagator"),
+        ("run_equivalents", "run-equivalents"),
+        ("budget", "budget of runs"),
+        ("failed_runs", "failed runs"),
+    ):
         if name in held:
             rows.append((label, number(float(held[name]), 6)))
     if "tolerance" in held:
         rows.append(("tolerance", f"{number(float(held['tolerance']))} of the spread"))
     if "monitoring_interval" in held:
-        rows.append(("monitoring interval", amount(float(held["monitoring_interval"]),
-                                                   reading.time_unit(dataset), 3)))
+        rows.append(
+            (
+                "monitoring interval",
+                amount(float(held["monitoring_interval"]), reading.time_unit(dataset), 3),
+            )
+        )
     if "wall_time" in held:
         rows.append(("wall time", seconds(float(held["wall_time"]))))
     versions = reading.listed(dataset, "versions")
@@ -179,8 +208,9 @@ def _cautions(dataset: xr.Dataset) -> list[str]:
     for quantity in reading.quantities(dataset):
         trust = reading.trust(dataset, quantity)
         if not trust.checked:
-            said.append(f"{quantity}: not checked against direct runs; nothing said of it is "
-                        "confirmed.")
+            said.append(
+                f"{quantity}: not checked against direct runs; nothing said of it is confirmed."
+            )
         elif trust.mark(trust.end):
             words = f"{quantity}: single paths agree with direct runs up to "
             words += amount(trust.paths, unit, 3) if np.isfinite(trust.paths) else "no time"
@@ -189,13 +219,17 @@ def _cautions(dataset: xr.Dataset) -> list[str]:
             said.append(words + "; what is shown later is marked, and not confirmed.")
     interval = dataset.attrs.get("monitoring_interval")
     if interval is not None and reading.has(dataset, "survival_probability"):
-        said.append(f"Boxes are watched every {amount(float(interval), unit, 3)}; a motion that "
-                    "leaves and comes back in between is not seen, so that survival may be "
-                    "overstated.")
+        said.append(
+            f"Boxes are watched every {amount(float(interval), unit, 3)}; a motion that "
+            "leaves and comes back in between is not seen, so that survival may be "
+            "overstated."
+        )
     failed = int(dataset.attrs.get("failed_runs", 0))
     if failed:
-        said.append(f"{failed} runs of the propagator failed; if they failed because of where they "
-                    "were, the answers lean away from there.")
+        said.append(
+            f"{failed} runs of the propagator failed; if they failed because of where they "
+            "were, the answers lean away from there."
+        )
     return said
 
 

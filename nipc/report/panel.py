@@ -94,9 +94,13 @@ def answer(
     values = parts.sum(axis=0)
     takes = panel.powers > 0
     supports = np.unique(takes[takes.any(axis=1)], axis=0)
-    variances = np.stack([
-        parts[(takes == support).all(axis=1)].sum(axis=0).var(axis=0) for support in supports
-    ]) if len(supports) else np.zeros((0, len(panel.times)))
+    variances = (
+        np.stack(
+            [parts[(takes == support).all(axis=1)].sum(axis=0).var(axis=0) for support in supports]
+        )
+        if len(supports)
+        else np.zeros((0, len(panel.times)))
+    )
     whole = variances.sum(axis=0)
     with np.errstate(invalid="ignore", divide="ignore"):
         share = variances / whole
@@ -107,8 +111,12 @@ def answer(
     undefined = ~(whole > 0)
     first[:, undefined], total[:, undefined] = np.nan, np.nan
     return Answer(
-        np.quantile(values, LEVELS, axis=0), values.mean(axis=0), values.std(axis=0),
-        ((values >= low) & (values <= high)).mean(axis=0), first, total,
+        np.quantile(values, LEVELS, axis=0),
+        values.mean(axis=0),
+        values.std(axis=0),
+        ((values >= low) & (values <= high)).mean(axis=0),
+        first,
+        total,
     )
 
 
@@ -181,16 +189,22 @@ def remarks(dataset: xr.Dataset) -> list[str]:
     ]
     gap = _gap(dataset, panel)
     if np.isfinite(gap):
-        said.append(f"With every scale at 1 its standard deviations differ from those above by "
-                    f"{_at_most(gap)}.")
+        said.append(
+            f"With every scale at 1 its standard deviations differ from those above by "
+            f"{_at_most(gap)}."
+        )
     if reading.has(dataset, "panel_error"):
         worst = float(np.nanmax(np.asarray(dataset["panel_error"].values, float)))
-        said.append(f"At other scales, members differ from the chain itself by "
-                    f"{_at_most(worst)} of the spread where this was tried.")
+        said.append(
+            f"At other scales, members differ from the chain itself by "
+            f"{_at_most(worst)} of the spread where this was tried."
+        )
     if panel.left_out:
         said.append(f"{panel.left_out} members that ended early are not in it.")
-    said.append("The command nipc whatif is the reference: it uses the whole ensemble and the "
-                "whole chain, and also gives survival.")
+    said.append(
+        "The command nipc whatif is the reference: it uses the whole ensemble and the "
+        "whole chain, and also gives survival."
+    )
     return said
 
 

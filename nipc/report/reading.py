@@ -155,7 +155,7 @@ class Trust:
         return bool(np.isfinite(self.paths) or np.isfinite(self.distribution))
 
     def mark(self, time: float) -> str:
-        """"" when trusted at this time, "†" for the distribution alone, "‡" when not at all."""
+        """ "" when trusted at this time, "†" for the distribution alone, "‡" when not at all."""
         slack = 1e-9 * max(abs(self.end), 1.0)
         if self.checked and time <= self.paths + slack:
             return ""

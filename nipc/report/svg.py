@@ -60,25 +60,33 @@ def inline(figure: Figure, key: str) -> Drawing:
             figure.set_layout_engine("none")
         figure.savefig(target, format="svg", metadata=blank)
     width, height = (72.0 * float(side) for side in figure.get_size_inches())
-    return Drawing(_compact(target.getvalue(), key, width, height), width, height,
-                   _time_frame(figure, width, height))
+    return Drawing(
+        _compact(target.getvalue(), key, width, height),
+        width,
+        height,
+        _time_frame(figure, width, height),
+    )
 
 
 def _compact(text: str, key: str, width: float, height: float) -> str:
     body = text[text.index("<svg") :]
     body = body[body.index(">") + 1 : body.rindex("</svg>")]
-    body = re.sub(r"<metadata>.*?</metadata>|<!--.*?-->|<style.*?</style>", "", body,
-                  flags=re.DOTALL)
+    body = re.sub(
+        r"<metadata>.*?</metadata>|<!--.*?-->|<style.*?</style>", "", body, flags=re.DOTALL
+    )
     used = {a or b for a, b in _REFERENCE.findall(body)}
     body = _ID.sub(lambda m: f' id="{key}-{m[1]}"' if m[1] in used else "", body)
     body = _REFERENCE.sub(
-        lambda m: f"url(#{key}-{m[1]})" if m[1] else f'href="#{key}-{m[2]}"', body)
+        lambda m: f"url(#{key}-{m[1]})" if m[1] else f'href="#{key}-{m[2]}"', body
+    )
     body = _TAG.sub(lambda m: _tag(m[0]), body)
     body = re.sub(r"<text [^>]*>", lambda m: _text_tag(m[0]), body)
     body = re.sub(r">\s+<", "><", body)
     body = re.sub(r"<g>((?:(?!</?g).)*)</g>", r"\1", body, flags=re.DOTALL)
-    return (f'<svg viewBox="0 0 {width:.1f} {height:.1f}" aria-hidden="true" focusable="false">'
-            f"{body}</svg>")
+    return (
+        f'<svg viewBox="0 0 {width:.1f} {height:.1f}" aria-hidden="true" focusable="false">'
+        f"{body}</svg>"
+    )
 
 
 def _tag(tag: str) -> str:
@@ -102,8 +110,20 @@ def _time_frame(figure: Figure, width: float, height: float) -> TimeFrame | None
         return None
     boxes = [ax.get_position() for ax in axes]
     start, end = axes[-1].get_xlim()
-    sides = (boxes[-1].x0 * width, boxes[-1].x1 * width,
-             (1 - max(b.y1 for b in boxes)) * height, (1 - min(b.y0 for b in boxes)) * height)
+    sides = (
+        boxes[-1].x0 * width,
+        boxes[-1].x1 * width,
+        (1 - max(b.y1 for b in boxes)) * height,
+        (1 - min(b.y0 for b in boxes)) * height,
+    )
     left, right, top, bottom = (round(float(side), 2) for side in sides)
-    return TimeFrame(left, right, top, bottom, float(start), float(end),
-                     axes[-1].get_xscale() == "log", "since" in axes[-1].get_xlabel())
+    return TimeFrame(
+        left,
+        right,
+        top,
+        bottom,
+        float(start),
+        float(end),
+        axes[-1].get_xscale() == "log",
+        "since" in axes[-1].get_xlabel(),
+    )

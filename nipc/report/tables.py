@@ -49,8 +49,10 @@ def moments(dataset: xr.Dataset, quantity: str) -> Table:
     unit = reading.time_unit(dataset)
     heads = (f"time ({unit})" if unit else "time", *(head for head, _ in found))
     rows = tuple(
-        (f"{number(times[i], 4)}\u202f{trust.mark(times[i])}".rstrip(),
-         *(column[row] for _, column in found))
+        (
+            f"{number(times[i], 4)}\u202f{trust.mark(times[i])}".rstrip(),
+            *(column[row] for _, column in found),
+        )
         for row, i in enumerate(picks)
     )
     q_unit = reading.unit(dataset, quantity)
@@ -85,8 +87,11 @@ def exits(dataset: xr.Dataset) -> Table | None:
         driver = reading.series(dataset, "exit_driver_total", quantity)
         cells.append("–" if driver is None else _leader(driver, reading.sources(dataset)))
         rows.append((_marked(dataset, quantity), *cells))
-    heads = ("quantity", *(f"{100 * level:g} % have left by" for level in levels),
-             "leaving is driven by")
+    heads = (
+        "quantity",
+        *(f"{100 * level:g} % have left by" for level in levels),
+        "leaving is driven by",
+    )
     return Table("When members leave their box", heads, tuple(rows)) if rows else None
 
 
@@ -111,9 +116,16 @@ def arcs(dataset: xr.Dataset) -> Table | None:
     """Every arc of the chain."""
     if not (reading.has(dataset, "arc_start") and reading.has(dataset, "arc_end")):
         return None
-    wanted = {"arc_start": "from", "arc_end": "to", "arc_degree": "degree", "arc_terms": "terms",
-              "arc_runs": "runs", "arc_failed": "failed", "arc_error": "error",
-              "arc_note": "note"}
+    wanted = {
+        "arc_start": "from",
+        "arc_end": "to",
+        "arc_degree": "degree",
+        "arc_terms": "terms",
+        "arc_runs": "runs",
+        "arc_failed": "failed",
+        "arc_error": "error",
+        "arc_note": "note",
+    }
     held = [name for name in wanted if name in dataset]
     digits = {"arc_error": 2, "arc_start": 5, "arc_end": 5}
     rows = []

@@ -62,19 +62,59 @@ def slot_terms(members: int, times: np.ndarray) -> tuple[np.ndarray, np.ndarray]
     z1, z2 = rng.standard_normal((2, members, 1))
     one = np.ones((members, len(times)))
     powers = np.array(
-        [[0, 0, 0], [1, 0, 0], [0, 1, 0], [0, 0, 1], [2, 0, 0], [0, 2, 0], [0, 0, 2],
-         [1, 1, 0], [1, 0, 1], [0, 1, 1]]
+        [
+            [0, 0, 0],
+            [1, 0, 0],
+            [0, 1, 0],
+            [0, 0, 1],
+            [2, 0, 0],
+            [0, 2, 0],
+            [0, 0, 2],
+            [1, 1, 0],
+            [1, 0, 1],
+            [0, 1, 1],
+        ]
     )
-    radius = [42164.8 + 0.9 * swing[0] * one, 0.9 * turn, 0.7 * along, 1.0 * z1 * swing[0] * one,
-              0.02 * radial**2, 0.03 * along**2, 0.02 * z1**2 * one, 0.01 * radial * along,
-              0.02 * radial * z1, 0.03 * along * z2]
-    longitude = [75.0 + 0.02 * u * one, 0.002 * turn, -0.055 * slow, -0.012 * z2 * u + 0.001 * z1,
-                 0 * one, 0.004 * slow**2, 0.0008 * z2**2 * u * one, 0 * one,
-                 0.0005 * radial * z1 * u, 0.004 * slow * z2 * u]
-    energy = [-4.7268 * one, 2e-7 * turn, 6e-6 * along, 2e-6 * z2 * one, 0 * one, 4e-7 * along**2,
-              1e-7 * z2**2 * one, 0 * one, 0 * one, 2e-7 * along * z2]
-    stacked = [np.broadcast_to(np.stack(group), (10, members, len(times)))
-               for group in (radius, longitude, energy)]
+    radius = [
+        42164.8 + 0.9 * swing[0] * one,
+        0.9 * turn,
+        0.7 * along,
+        1.0 * z1 * swing[0] * one,
+        0.02 * radial**2,
+        0.03 * along**2,
+        0.02 * z1**2 * one,
+        0.01 * radial * along,
+        0.02 * radial * z1,
+        0.03 * along * z2,
+    ]
+    longitude = [
+        75.0 + 0.02 * u * one,
+        0.002 * turn,
+        -0.055 * slow,
+        -0.012 * z2 * u + 0.001 * z1,
+        0 * one,
+        0.004 * slow**2,
+        0.0008 * z2**2 * u * one,
+        0 * one,
+        0.0005 * radial * z1 * u,
+        0.004 * slow * z2 * u,
+    ]
+    energy = [
+        -4.7268 * one,
+        2e-7 * turn,
+        6e-6 * along,
+        2e-6 * z2 * one,
+        0 * one,
+        4e-7 * along**2,
+        1e-7 * z2**2 * one,
+        0 * one,
+        0 * one,
+        2e-7 * along * z2,
+    ]
+    stacked = [
+        np.broadcast_to(np.stack(group), (10, members, len(times)))
+        for group in (radius, longitude, energy)
+    ]
     return np.stack(stacked, axis=2), powers
 
 
@@ -126,64 +166,104 @@ def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
         "std": _variable(std, qt, "", "standard deviation"),
         "std_low": _variable(0.95 * std, qt, "", "standard deviation, low"),
         "std_high": _variable(1.05 * std, qt, "", "standard deviation, high"),
-        "quantile": _variable(
-            np.quantile(values, LEVELS, axis=0), ("level", *qt), "", "quantiles"),
+        "quantile": _variable(np.quantile(values, LEVELS, axis=0), ("level", *qt), "", "quantiles"),
         "box_low": _variable(low, ("quantity",), "", "lower edge of the box"),
         "box_high": _variable(high, ("quantity",), "", "upper edge of the box"),
         "spread_rate": _variable(rate, qt, "1/d", "spread rate"),
         "nonlinear_share": _variable(
             np.stack([0.002 + 1e-3 * times / 28, 0.02 * times / 28, 0.001 + 0 * times]),
-            qt, "1", "share of variance beyond degree one"),
+            qt,
+            "1",
+            "share of variance beyond degree one",
+        ),
         "diffusion_coefficient": _variable(
-            np.array([8.5e-3, 2.4e-8, 6.4e-13]), ("quantity",), "", "diffusion coefficient"),
+            np.array([8.5e-3, 2.4e-8, 6.4e-13]), ("quantity",), "", "diffusion coefficient"
+        ),
         "diffusion_exponent": _variable(
-            np.array([1.02, 2.8, 1.01]), ("quantity",), "1", "diffusion exponent"),
+            np.array([1.02, 2.8, 1.01]), ("quantity",), "1", "diffusion exponent"
+        ),
         "diffusion_exponent_low": _variable(
-            np.array([0.96, 2.6, 0.97]), ("quantity",), "1", "diffusion exponent, low"),
+            np.array([0.96, 2.6, 0.97]), ("quantity",), "1", "diffusion exponent, low"
+        ),
         "diffusion_exponent_high": _variable(
-            np.array([1.08, 3.0, 1.05]), ("quantity",), "1", "diffusion exponent, high"),
+            np.array([1.08, 3.0, 1.05]), ("quantity",), "1", "diffusion exponent, high"
+        ),
         "spreading_verdict": _variable(
-            np.array(["diffusive", "super-diffusive", "diffusive"]), ("quantity",), "",
-            "kind of spreading"),
+            np.array(["diffusive", "super-diffusive", "diffusive"]),
+            ("quantity",),
+            "",
+            "kind of spreading",
+        ),
         "exit_time_quantile": _variable(
-            np.array([[np.inf, 24.1, np.nan], [np.inf, np.inf, np.nan]] + 3 * [[np.inf, np.inf,
-                                                                                np.nan]]),
-            ("level", "quantity"), "d", "exit time quantiles"),
+            np.array(
+                [[np.inf, 24.1, np.nan], [np.inf, np.inf, np.nan]] + 3 * [[np.inf, np.inf, np.nan]]
+            ),
+            ("level", "quantity"),
+            "d",
+            "exit time quantiles",
+        ),
         "exit_driver_total": _variable(
             np.array([[0.5, 0.01, np.nan], [0.2, 0.72, np.nan], [0.4, 0.35, np.nan]]),
-            ("source", "quantity"), "1", "total shares of the exit probability"),
+            ("source", "quantity"),
+            "1",
+            "total shares of the exit probability",
+        ),
         "check_error": _variable(growth, qt, "1", "held-out path error over the spread"),
         "trust_horizon": _variable(
-            np.array([28.0, 9.2, 28.0]), ("quantity",), "d", "trust horizon, paths"),
+            np.array([28.0, 9.2, 28.0]), ("quantity",), "d", "trust horizon, paths"
+        ),
         "trust_horizon_distribution": _variable(
-            np.array([28.0, 21.0, 28.0]), ("quantity",), "d", "trust horizon, distribution"),
+            np.array([28.0, 21.0, 28.0]), ("quantity",), "d", "trust horizon, distribution"
+        ),
         "allowance": _variable(
             np.array([[np.inf, np.inf, np.nan], [3.1e-8, 2.4e-8, np.nan], [np.nan, 1.1, np.nan]]),
-            ("source", "quantity"), "", "largest intensity that keeps the box"),
+            ("source", "quantity"),
+            "",
+            "largest intensity that keeps the box",
+        ),
         "arc_start": _variable(start[:-1], ("arc",), "d", "start of the arc"),
         "arc_end": _variable(start[1:], ("arc",), "d", "end of the arc"),
         "arc_degree": _variable(degree, ("arc",), "1", "degree"),
         "arc_terms": _variable(np.where(degree == 1, 17, 106), ("arc",), "1", "terms"),
         "arc_runs": _variable(np.where(degree == 1, 24, 149), ("arc",), "1", "runs"),
         "arc_error": _variable(
-            10 ** rng.normal(-3.6, 0.2, arcs), ("arc",), "1", "held-out error of the arc"),
+            10 ** rng.normal(-3.6, 0.2, arcs), ("arc",), "1", "held-out error of the arc"
+        ),
         "arc_note": _variable(
-            np.array(["degree raised" if d == 2 else "" for d in degree]), ("arc",), "", "note"),
+            np.array(["degree raised" if d == 2 else "" for d in degree]), ("arc",), "", "note"
+        ),
         "arc_failed": _variable(
-            np.where(np.arange(arcs) == 31, 3, 0), ("arc",), "1", "failed runs"),
+            np.where(np.arange(arcs) == 31, 3, 0), ("arc",), "1", "failed runs"
+        ),
         "degree_norm": _variable(
-            np.stack([0.99 + 0 * start[:-1], 10 ** rng.normal(-2, 0.2, arcs),
-                      np.where(degree == 2, 10 ** rng.normal(-3.6, 0.2, arcs), np.nan)], axis=1),
-            ("arc", "degree"), "1", "norm of the coefficients of a degree"),
+            np.stack(
+                [
+                    0.99 + 0 * start[:-1],
+                    10 ** rng.normal(-2, 0.2, arcs),
+                    np.where(degree == 2, 10 ** rng.normal(-3.6, 0.2, arcs), np.nan),
+                ],
+                axis=1,
+            ),
+            ("arc", "degree"),
+            "1",
+            "norm of the coefficients of a degree",
+        ),
         "member_quantity": _variable(values[:40], ("member", *qt), "", "some members"),
         "direct_quantity": _variable(
             values[40:48] + std * growth * rng.standard_normal((8, 3, 1)),
-            ("check_member", *qt), "", "direct runs"),
+            ("check_member", *qt),
+            "",
+            "direct runs",
+        ),
         "expansion_quantity": _variable(
-            values[40:48], ("check_member", *qt), "", "expansion at the same germ"),
+            values[40:48], ("check_member", *qt), "", "expansion at the same germ"
+        ),
         "panel_contribution": _variable(
-            terms[..., near], ("panel_term", "panel_member", "quantity", "panel_time"), "",
-            "contribution of each order"),
+            terms[..., near],
+            ("panel_term", "panel_member", "quantity", "panel_time"),
+            "",
+            "contribution of each order",
+        ),
         "panel_power": _variable(powers, ("panel_term", "source"), "1", "powers of the scales"),
     }
     for name, estimate in (("inside_probability", probability), ("survival_probability", survival)):
@@ -208,23 +288,39 @@ def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
             "degree": [1, 2, 3],
         },
         attrs={
-            "title": "Slot watch over 28 days", "seed": 20260, "time_unit": "d",
-            "tolerance": 0.02, "propagator_runs": 2094, "run_equivalents": 45.4, "budget": 200,
-            "wall_time": 41.7, "failed_runs": 3,
-            "failures": json.dumps([{"reason": "time limit of 60 s passed", "count": 2},
-                                    {"reason": "exit code 3: step size too small", "count": 1}]),
-            "findings": json.dumps([
-                "Longitude stays in its box of 74.95 to 75.05 deg at day 28 with probability 0.86 "
-                "(0.83 to 0.89), past the trust horizon of its paths at day 9.2.",
-                "The tangential noise drives 66 % of the spread of longitude at day 28.",
-                "Radius stays in its box for the whole 28 days with probability above 0.99.",
-            ]),
-            "noise_bases": json.dumps([
-                {"source": name, "basis": "legendre", "terms": 5}
-                for name in ("radial", "tangential")
-            ]),
-            "study": STUDY, "versions": json.dumps({"nipc": "0.1.0", "numpy": np.__version__}),
-            "created": "2026-12-01T07:00:00+00:00", "monitoring_interval": 2.0 / 24,
+            "title": "Slot watch over 28 days",
+            "seed": 20260,
+            "time_unit": "d",
+            "tolerance": 0.02,
+            "propagator_runs": 2094,
+            "run_equivalents": 45.4,
+            "budget": 200,
+            "wall_time": 41.7,
+            "failed_runs": 3,
+            "failures": json.dumps(
+                [
+                    {"reason": "time limit of 60 s passed", "count": 2},
+                    {"reason": "exit code 3: step size too small", "count": 1},
+                ]
+            ),
+            "findings": json.dumps(
+                [
+                    "Longitude stays in its box of 74.95 to 75.05 deg at day 28 with probability 0.86 "
+                    "(0.83 to 0.89), past the trust horizon of its paths at day 9.2.",
+                    "The tangential noise drives 66 % of the spread of longitude at day 28.",
+                    "Radius stays in its box for the whole 28 days with probability above 0.99.",
+                ]
+            ),
+            "noise_bases": json.dumps(
+                [
+                    {"source": name, "basis": "legendre", "terms": 5}
+                    for name in ("radial", "tangential")
+                ]
+            ),
+            "study": STUDY,
+            "versions": json.dumps({"nipc": "0.1.0", "numpy": np.__version__}),
+            "created": "2026-12-01T07:00:00+00:00",
+            "monitoring_interval": 2.0 / 24,
         },
     )
 
@@ -234,14 +330,24 @@ def build_hard() -> xr.Dataset:
     times = np.linspace(0.0, 50.0, 401)
     rng = np.random.default_rng(8)
     names = ["x", "<script>alert('q')</script>", "an integral of motion with a very long name $E$"]
-    spread = np.stack([1e-6 * np.exp(0.5 * times), np.minimum(1e-3 * np.exp(0.4 * times), 0.8),
-                       0 * times])
+    spread = np.stack(
+        [1e-6 * np.exp(0.5 * times), np.minimum(1e-3 * np.exp(0.4 * times), 0.8), 0 * times]
+    )
     mean = np.stack([np.sin(times), 3 + 0 * times, 0.125 + 0 * times])
     z = rng.standard_normal((30, 3, 1)) * (1 + 0.2 * np.sin(times + rng.uniform(0, 6, (30, 3, 1))))
     members = mean + spread * z
     normal = np.array([-1.959964, -0.67449, 0.0, 0.67449, 1.959964])
-    sources = ["white <b>noise</b>", "_hidden", "noise three", "noise four", "noise five",
-               "noise six", "noise seven", "start", "mass & drag"]
+    sources = [
+        "white <b>noise</b>",
+        "_hidden",
+        "noise three",
+        "noise four",
+        "noise five",
+        "noise six",
+        "noise seven",
+        "start",
+        "mass & drag",
+    ]
     share = rng.dirichlet(np.ones(9), size=(3, 401)).transpose(2, 0, 1).cumsum(axis=2)
     share /= share.sum(axis=0) * 1.1
     share[:, 2] = np.nan
@@ -256,7 +362,8 @@ def build_hard() -> xr.Dataset:
         "mean": _variable(mean, qt, "", "mean"),
         "std": _variable(spread, qt, "", "standard deviation"),
         "quantile": _variable(
-            mean + spread * normal[:, None, None], ("level", *qt), "", "quantiles"),
+            mean + spread * normal[:, None, None], ("level", *qt), "", "quantiles"
+        ),
         "box_low": _variable(np.array([-np.inf, np.nan, np.nan]), ("quantity",), "", "low"),
         "box_high": _variable(np.array([np.inf, np.nan, np.nan]), ("quantity",), "", "high"),
         "inside_probability": _variable(np.full((3, 401), np.nan), qt, "1", "inside"),
@@ -265,37 +372,59 @@ def build_hard() -> xr.Dataset:
         "driver_total": _variable(share, ("source", *qt), "1", "total"),
         "spreading_verdict": _variable(
             np.array(["exponential", "exponential, then a plateau", "cannot tell"]),
-            ("quantity",), "", "kind"),
+            ("quantity",),
+            "",
+            "kind",
+        ),
         "check_error": _variable(error, qt, "1", "error"),
         "trust_horizon": _variable(np.array([16.9, 16.9, np.nan]), ("quantity",), "", "trust"),
         "trust_horizon_distribution": _variable(
-            np.array([16.9, 50.0, np.nan]), ("quantity",), "", "trust"),
+            np.array([16.9, 50.0, np.nan]), ("quantity",), "", "trust"
+        ),
         "arc_start": _variable(arcs[:-1], ("arc",), "", "start"),
         "arc_end": _variable(arcs[1:], ("arc",), "", "end"),
         "arc_degree": _variable(rng.integers(2, 6, count), ("arc",), "1", "degree"),
         "arc_runs": _variable(rng.integers(30, 400, count), ("arc",), "1", "runs"),
         "arc_error": _variable(
             np.where(np.arange(count) == 4, np.nan, 10 ** rng.normal(-2, 0.8, count)),
-            ("arc",), "1", "error"),
+            ("arc",),
+            "1",
+            "error",
+        ),
         "arc_failed": _variable(rng.poisson(12, count), ("arc",), "1", "failed"),
         "member_quantity": _variable(members, ("member", *qt), "", "members"),
         "direct_quantity": _variable(
-            members[:5] + spread * error[0], ("check_member", *qt), "", "direct"),
+            members[:5] + spread * error[0], ("check_member", *qt), "", "direct"
+        ),
         "expansion_quantity": _variable(members[:5], ("check_member", *qt), "", "expansion"),
     }
     kinds = ["noise"] * 7 + ["start", "parameter"]
     return xr.Dataset(
         data,
-        coords={"time": times, "quantity": names, "quantity_unit": ("quantity", ["m", "<i>", ""]),
-                "source": sources, "source_kind": ("source", kinds), "level": LEVELS},
+        coords={
+            "time": times,
+            "quantity": names,
+            "quantity_unit": ("quantity", ["m", "<i>", ""]),
+            "source": sources,
+            "source_kind": ("source", kinds),
+            "level": LEVELS,
+        },
         attrs={
-            "title": "</title><script>alert('title')</script> $\\alpha$", "time_unit": "",
-            "tolerance": 0.05, "propagator_runs": 41000, "run_equivalents": 507.0,
+            "title": "</title><script>alert('title')</script> $\\alpha$",
+            "time_unit": "",
+            "tolerance": 0.05,
+            "propagator_runs": 41000,
+            "run_equivalents": 507.0,
             "failed_runs": 812,
-            "failures": json.dumps([{"reason": "<img src=x onerror=alert(1)>" * 6, "count": 700},
-                                    {"reason": "not finite", "count": 112}]),
+            "failures": json.dumps(
+                [
+                    {"reason": "<img src=x onerror=alert(1)>" * 6, "count": 700},
+                    {"reason": "not finite", "count": 112},
+                ]
+            ),
             "findings": json.dumps(["The spread of x grows <script>alert('f')</script> e-fold."]),
-            "study": "title = '</pre><script>alert(1)</script>'\n", "seed": 1,
+            "study": "title = '</pre><script>alert(1)</script>'\n",
+            "seed": 1,
         },
     )
 
@@ -304,8 +433,10 @@ def build_minimal() -> xr.Dataset:
     times = np.linspace(0.0, 10.0, 21)
     qt = ("quantity", "time")
     return xr.Dataset(
-        {"mean": _variable(0.5 * times[None], qt, "m", "mean"),
-         "std": _variable(np.sqrt(times**3 / 3)[None], qt, "m", "standard deviation")},
+        {
+            "mean": _variable(0.5 * times[None], qt, "m", "mean"),
+            "std": _variable(np.sqrt(times**3 / 3)[None], qt, "m", "standard deviation"),
+        },
         coords={"time": ("time", times, {"units": "s"}), "quantity": ["position"]},
     )
 
@@ -323,3 +454,11 @@ def hard() -> xr.Dataset:
 @pytest.fixture(scope="session")
 def minimal() -> xr.Dataset:
     return build_minimal()
+
+
+@pytest.fixture(scope="session")
+def pages(slot: xr.Dataset, hard: xr.Dataset, minimal: xr.Dataset) -> dict[str, str]:
+    """The text of each result's page."""
+    from nipc.report import page
+
+    return {"slot": page.render(slot), "hard": page.render(hard), "minimal": page.render(minimal)}

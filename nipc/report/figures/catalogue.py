@@ -42,27 +42,36 @@ PER_QUANTITY: dict[str, tuple[Callable[..., Any], str]] = {
     "bands": (bands, "Distribution of {q} over time, and some members of the ensemble."),
     "confinement": (confinement, "Probability that {q} is in its box, with 95 % intervals."),
     "driver_shares": (
-        driver_shares, "Who drives the spread of {q}: shares of its variance over time."),
+        driver_shares,
+        "Who drives the spread of {q}: shares of its variance over time.",
+    ),
     "driver_ranking": (driver_ranking, "Drivers of {q} at the end of the horizon."),
     "diffusion": (diffusion, "How the variance of {q} grows."),
     "direct_against_expansion": (
         direct_against_expansion,
-        "Members that the fit never saw: {q} by direct runs and by the expansion."),
+        "Members that the fit never saw: {q} by direct runs and by the expansion.",
+    ),
 }
 OVERALL: dict[str, tuple[Callable[..., Any], str]] = {
     "spread_rate": (
-        spread_rate, "Spread rate of every quantity; thin past its trust horizon, which is "
-        "marked."),
+        spread_rate,
+        "Spread rate of every quantity; thin past its trust horizon, which is marked.",
+    ),
     "nonlinear_share": (
-        nonlinear_share, "Share of the variance beyond degree one: near 0, a linear picture is "
-        "enough."),
+        nonlinear_share,
+        "Share of the variance beyond degree one: near 0, a linear picture is enough.",
+    ),
     "check_error": (
-        check_error, "Error of held-out paths against direct runs, over the spread; a marker where "
-        "it passes the tolerance for good."),
+        check_error,
+        "Error of held-out paths against direct runs, over the spread; a marker where "
+        "it passes the tolerance for good.",
+    ),
     "chain": (chain, "The arcs of the chain: degree, runs, and error at their held-out runs."),
     "coefficient_decay": (
-        coefficient_decay, "How the coefficients fall off with their degree: flat would mean that "
-        "the degree is too low."),
+        coefficient_decay,
+        "How the coefficients fall off with their degree: flat would mean that "
+        "the degree is too low.",
+    ),
     "failures": (failures, "Why runs of the propagator failed."),
 }
 NEEDS = {
@@ -103,8 +112,12 @@ def catalogue(dataset: xr.Dataset) -> Iterator[Entry]:
     for name, (function, caption) in PER_QUANTITY.items():
         for quantity in reading.quantities(dataset):
             if _fills(dataset, name, quantity):
-                yield Entry(name, (quantity,), caption.replace("{q}", quantity),
-                            lambda f=function, q=quantity: f(dataset, q))  # type: ignore[misc]
+                yield Entry(
+                    name,
+                    (quantity,),
+                    caption.replace("{q}", quantity),
+                    lambda f=function, q=quantity: f(dataset, q),
+                )  # type: ignore[misc]
     yield from _pairs(dataset)
     yield from _bases(dataset)
     for name, (function, caption) in OVERALL.items():
@@ -119,8 +132,7 @@ def _pairs(dataset: xr.Dataset) -> Iterator[Entry]:
         return
     for x, y in list(pairwise(names))[:PAIRS]:
         caption = f"Members in the plane of {x} and {y}; the lines hold the densest 90 %."
-        yield Entry("density", (x, y), caption,
-                    lambda x=x, y=y: density(dataset, x, y))  # type: ignore[misc]
+        yield Entry("density", (x, y), caption, lambda x=x, y=y: density(dataset, x, y))  # type: ignore[misc]
 
 
 def _bases(dataset: xr.Dataset) -> Iterator[Entry]:
@@ -131,5 +143,9 @@ def _bases(dataset: xr.Dataset) -> Iterator[Entry]:
     for (basis, terms), names in told.items():
         if basis in BASES:
             caption = f"What the basis of {', '.join(names)} keeps of one path of the noise."
-            yield Entry("noise_kept", (basis, str(terms)), caption,
-                        lambda b=basis, n=terms: noise_kept(BASES[b](n)))  # type: ignore[misc]
+            yield Entry(
+                "noise_kept",
+                (basis, str(terms)),
+                caption,
+                lambda b=basis, n=terms: noise_kept(BASES[b](n)),
+            )  # type: ignore[misc]

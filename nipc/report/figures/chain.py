@@ -42,8 +42,14 @@ def chain(dataset: xr.Dataset, axes: Sequence[Axes] | None = None) -> tuple[Axes
         ax.stairs(values, edges, fill=True, color=LIGHT["band"], lw=0, zorder=2)
         ax.stairs(values, edges, color=LIGHT["main"], lw=1.1, zorder=3)
         if count <= 80:
-            ax.vlines(edges[1:-1], 0, np.minimum(values[1:], values[:-1]), color=LIGHT["paper"],
-                      lw=0.5, zorder=2.5)
+            ax.vlines(
+                edges[1:-1],
+                0,
+                np.minimum(values[1:], values[:-1]),
+                color=LIGHT["paper"],
+                lw=0.5,
+                zorder=2.5,
+            )
         ax.set_ylim(0, 1.15 * float(np.nanmax(values)) or 1.0)
         ax.yaxis.set_major_locator(MaxNLocator(nbins=4, integer=True))
         ax.set_ylabel({"arc_degree": "degree", "arc_runs": "runs"}[name])
@@ -65,10 +71,22 @@ def _failures(ax: Axes, dataset: xr.Dataset, start: FloatArray, end: FloatArray)
     failed = np.asarray(dataset["arc_failed"].values, float)
     at = failed > 0
     if at.any():
-        ax.bar(start[at], failed[at], width=(end - start)[at], align="edge", lw=0, zorder=4,
-               color=LIGHT["edge"], hatch="////", edgecolor=LIGHT["paper"])
-        frame.legend(ax, [frame.patch_key("band"), frame.patch_key("edge", hatch="////")],
-                     ["runs", "of these failed"])
+        ax.bar(
+            start[at],
+            failed[at],
+            width=(end - start)[at],
+            align="edge",
+            lw=0,
+            zorder=4,
+            color=LIGHT["edge"],
+            hatch="////",
+            edgecolor=LIGHT["paper"],
+        )
+        frame.legend(
+            ax,
+            [frame.patch_key("band"), frame.patch_key("edge", hatch="////")],
+            ["runs", "of these failed"],
+        )
 
 
 def _errors(
@@ -76,14 +94,28 @@ def _errors(
 ) -> None:
     ax.set_yscale("log")
     good = np.isfinite(values) & (values > 0)
-    ax.plot(0.5 * (start + end)[good], values[good], ls="", marker="o", ms=3.5,
-            color=LIGHT["main"], mew=0)
+    ax.plot(
+        0.5 * (start + end)[good],
+        values[good],
+        ls="",
+        marker="o",
+        ms=3.5,
+        color=LIGHT["main"],
+        mew=0,
+    )
     bad = ~np.isfinite(values)
     if bad.any():
-        ax.plot(0.5 * (start + end)[bad], np.full(bad.sum(), np.nanmax(values[good], initial=1.0)),
-                ls="", marker="x", ms=6, color=LIGHT["edge"])
-        frame.legend(ax, [Line2D([], [], ls="", marker="x", ms=6, color=LIGHT["edge"])],
-                     ["not known"])
+        ax.plot(
+            0.5 * (start + end)[bad],
+            np.full(bad.sum(), np.nanmax(values[good], initial=1.0)),
+            ls="",
+            marker="x",
+            ms=6,
+            color=LIGHT["edge"],
+        )
+        frame.legend(
+            ax, [Line2D([], [], ls="", marker="x", ms=6, color=LIGHT["edge"])], ["not known"]
+        )
     if good.any():
         top = max(float(values[good].max()), 1.0 if bad.any() else 0.0)
         ax.set_ylim(0.5 * float(values[good].min()), 2.0 * top)

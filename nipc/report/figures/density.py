@@ -52,14 +52,24 @@ def density(
         x, y = (values[:, name, index] for name in names)
         good = np.isfinite(x) & np.isfinite(y)
         x, y = x[good], y[good]
-        ax.plot(x[:POINTS], y[:POINTS], ls="", marker=hand.marker, ms=3.2, mew=0,
-                color=hand.colour, alpha=0.85)
+        ax.plot(
+            x[:POINTS],
+            y[:POINTS],
+            ls="",
+            marker=hand.marker,
+            ms=3.2,
+            mew=0,
+            color=hand.colour,
+            alpha=0.85,
+        )
         _contour(ax, x, y, hand.colour, hand.dash)
         mark = max(trust.mark(float(kept[index])) for trust in trusts)
         handles.append(Line2D([], [], color=hand.colour, ls=hand.dash, marker=hand.marker, ms=4))
         labels.append(amount(float(kept[index]), unit, 3) + mark)
-    for edges, draw in ((reading.box(dataset, horizontal), ax.axvline),
-                        (reading.box(dataset, vertical), ax.axhline)):
+    for edges, draw in (
+        (reading.box(dataset, horizontal), ax.axvline),
+        (reading.box(dataset, vertical), ax.axhline),
+    ):
         low, high = ax.get_xlim() if draw == ax.axvline else ax.get_ylim()
         for edge in edges.edges if edges is not None else []:
             if low <= edge <= high:
@@ -100,5 +110,12 @@ def _contour(ax: Axes, x: FloatArray, y: FloatArray, colour: str, dash: object) 
     reach = [np.linspace(row.min() - 0.5, row.max() + 0.5, 60) for row in scaled]
     mesh = np.meshgrid(*reach)
     grid = estimate(np.stack([side.ravel() for side in mesh])).reshape(mesh[0].shape)
-    ax.contour(mesh[0] * spread[0] + middle[0], mesh[1] * spread[1] + middle[1], grid,
-               levels=[level], colors=[colour], linestyles=[dash], linewidths=1.4)
+    ax.contour(
+        mesh[0] * spread[0] + middle[0],
+        mesh[1] * spread[1] + middle[1],
+        grid,
+        levels=[level],
+        colors=[colour],
+        linestyles=[dash],
+        linewidths=1.4,
+    )

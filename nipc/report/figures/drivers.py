@@ -44,14 +44,21 @@ def driver_shares(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) ->
     for _, share, key in rows:
         top = bottom + share
         ax.fill_between(
-            times, bottom, top, facecolor=key.get_facecolor(), hatch=key.get_hatch(),
-            edgecolor=LIGHT["paper"], lw=0.0, zorder=2,
+            times,
+            bottom,
+            top,
+            facecolor=key.get_facecolor(),
+            hatch=key.get_hatch(),
+            edgecolor=LIGHT["paper"],
+            lw=0.0,
+            zorder=2,
         )
         bottom = top
     handles, labels = [row[2] for row in rows], [row[0] for row in rows]
     if np.nanmax(1.0 - bottom) > 0.005:
-        ax.fill_between(times, bottom, np.fmax(1.0, bottom), facecolor=LIGHT["rest"], lw=0,
-                        zorder=2)
+        ax.fill_between(
+            times, bottom, np.fmax(1.0, bottom), facecolor=LIGHT["rest"], lw=0, zorder=2
+        )
         handles.append(Patch(facecolor=LIGHT["rest"], lw=0))
         labels.append("several together")
     ax.set_ylim(0.0, max(1.0, float(np.nanmax(bottom))))
@@ -77,27 +84,59 @@ def driver_ranking(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -
     for row, index in enumerate(order):
         hand = stroke(int(index))
         if first is not None:
-            ax.barh(row, first[index, -1], height=0.62, color=hand.colour, hatch=hand.hatch,
-                    edgecolor=LIGHT["paper"], lw=0, zorder=2)
-        ax.barh(row, leading[index, -1], height=0.62, fill=False, edgecolor=LIGHT["ink"], lw=0.9,
-                zorder=3)
-        end = _interval(ax, dataset, quantity, "driver_total" if total is not None else
-                        "driver_first", int(index), row)
-        ax.annotate(percent(float(leading[index, -1])), (max(end, leading[index, -1]), row),
-                    xytext=(6, 0), textcoords="offset points", va="center")
+            ax.barh(
+                row,
+                first[index, -1],
+                height=0.62,
+                color=hand.colour,
+                hatch=hand.hatch,
+                edgecolor=LIGHT["paper"],
+                lw=0,
+                zorder=2,
+            )
+        ax.barh(
+            row,
+            leading[index, -1],
+            height=0.62,
+            fill=False,
+            edgecolor=LIGHT["ink"],
+            lw=0.9,
+            zorder=3,
+        )
+        end = _interval(
+            ax,
+            dataset,
+            quantity,
+            "driver_total" if total is not None else "driver_first",
+            int(index),
+            row,
+        )
+        ax.annotate(
+            percent(float(leading[index, -1])),
+            (max(end, leading[index, -1]), row),
+            xytext=(6, 0),
+            textcoords="offset points",
+            va="center",
+        )
     ax.set_yticks(range(len(order)), [frame.printable(names[i]) for i in order])
     ax.set_ylim(len(order) - 0.4, -0.6)
     ax.set_xlim(0.0, max(1.12, 1.15 * float(at_end.max())))
     ax.set_xticks(np.arange(0.0, 1.01, 0.2))
     ax.grid(False, axis="y")
     trust = reading.trust(dataset, quantity)
-    late = {"": "", "†": "\n† past the trust horizon of its paths",
-            "‡": "\n‡ past its trust horizon" if trust.checked else "\n‡ not checked"}
+    late = {
+        "": "",
+        "†": "\n† past the trust horizon of its paths",
+        "‡": "\n‡ past its trust horizon" if trust.checked else "\n‡ not checked",
+    }
     mark = trust.mark(trust.end)
     words = f"share of the variance of {frame.printable(quantity)} at the end{mark}"
     ax.set_xlabel(textwrap.fill(words, 46) + late[mark])
-    keys = [Patch(fill=False, edgecolor=LIGHT["ink"], lw=0.9), Patch(facecolor=LIGHT["soft"]),
-            Line2D([], [], color=LIGHT["edge"], lw=1.5)]
+    keys = [
+        Patch(fill=False, edgecolor=LIGHT["ink"], lw=0.9),
+        Patch(facecolor=LIGHT["soft"]),
+        Line2D([], [], color=LIGHT["edge"], lw=1.5),
+    ]
     names_of_keys = ["total", "by itself", "95 % interval of the total"]
     if total is None:
         keys, names_of_keys = keys[1:], ["by itself", "95 % interval"]
@@ -113,6 +152,14 @@ def _interval(
     high = reading.shares(dataset, name + "_high", quantity)
     if low is None or high is None or not np.isfinite(low[index, -1] + high[index, -1]):
         return 0.0
-    ax.plot([low[index, -1], high[index, -1]], [row, row], color=LIGHT["edge"], lw=1.5, zorder=4,
-            marker="|", ms=7, mew=1.5)
+    ax.plot(
+        [low[index, -1], high[index, -1]],
+        [row, row],
+        color=LIGHT["edge"],
+        lw=1.5,
+        zorder=4,
+        marker="|",
+        ms=7,
+        mew=1.5,
+    )
     return float(high[index, -1])

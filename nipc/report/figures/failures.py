@@ -23,11 +23,20 @@ def failures(dataset: xr.Dataset, ax: Axes | None = None) -> Axes:
         raise KeyError("no run failed")
     rows = sorted(((str(f["reason"]), int(f["count"])) for f in found), key=lambda r: -r[1])[:SHOWN]
     ax = frame.new_axes(ax, height=1.0 + 0.42 * len(rows))
-    ax.barh(range(len(rows)), [count for _, count in rows], height=0.6, color=LIGHT["edge"],
-            hatch="////", edgecolor=LIGHT["paper"], lw=0, zorder=2)
+    ax.barh(
+        range(len(rows)),
+        [count for _, count in rows],
+        height=0.6,
+        color=LIGHT["edge"],
+        hatch="////",
+        edgecolor=LIGHT["paper"],
+        lw=0,
+        zorder=2,
+    )
     for row, (_, count) in enumerate(rows):
-        ax.annotate(str(count), (count, row), xytext=(5, 0), textcoords="offset points",
-                    va="center")
+        ax.annotate(
+            str(count), (count, row), xytext=(5, 0), textcoords="offset points", va="center"
+        )
     names = [textwrap.shorten(" ".join(reason.split()), 60, placeholder="…") for reason, _ in rows]
     ax.set_yticks(range(len(rows)), [textwrap.fill(frame_safe(n), 30) for n in names], fontsize=9)
     ax.set_ylim(len(rows) - 0.4, -0.6)

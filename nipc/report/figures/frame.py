@@ -33,9 +33,7 @@ def new_axes(ax: Axes | None, height: float = HEIGHT) -> Axes:
 
 def new_figure(rows: int, height: float, ratios: Sequence[float] | None = None) -> list[Axes]:
     """Axes one above the other that share their horizontal axis."""
-    figure = Figure(
-        figsize=(WIDTH, height), layout=ConstrainedLayoutEngine(w_pad=0.06, h_pad=0.06)
-    )
+    figure = Figure(figsize=(WIDTH, height), layout=ConstrainedLayoutEngine(w_pad=0.06, h_pad=0.06))
     FigureCanvasAgg(figure)
     grid = figure.subplots(rows, 1, sharex=True, squeeze=False, height_ratios=ratios)
     return list(grid[:, 0])
@@ -63,7 +61,11 @@ def time_axis(ax: Axes, dataset: xr.Dataset) -> None:
 
 
 def set_view(
-    ax: Axes, dataset: xr.Dataset, quantity: str, low: FloatArray, high: FloatArray,
+    ax: Axes,
+    dataset: xr.Dataset,
+    quantity: str,
+    low: FloatArray,
+    high: FloatArray,
     edges: Sequence[float] = (),
 ) -> tuple[float, float] | None:
     """Vertical limits from curves low ... high (time,) and the edges of a box that lie near.
@@ -121,15 +123,14 @@ def value_axis(ax: Axes, name: str, unit: str, side: Literal["x", "y"] = "y") ->
         unit = f"{power_of_ten(round(math.log10(factor)))} {unit}".rstrip()
     axis.set_label_text(textwrap.fill(with_unit(label, unit), 30 if side == "y" else 60))
     if offset or factor != 1.0:
+
         def tick(value: float, _: int) -> str:
             return number(round((value - offset) / span, 9) * span / factor, 4)
 
         axis.set_major_formatter(FuncFormatter(tick))
 
 
-def legend(
-    ax: Axes, handles: Sequence[Any], labels: Sequence[str], raised: bool = False
-) -> None:
+def legend(ax: Axes, handles: Sequence[Any], labels: Sequence[str], raised: bool = False) -> None:
     """A row of keys above the axes, where no curve can be; as many columns as fit."""
     if not handles:
         return
@@ -178,8 +179,16 @@ def _zone(ax: Axes, low: float, high: float, kind: str) -> None:
     alpha = 0.11 if kind == "distribution" else 0.22
     shape: dict[str, Any] = {"transform": band, "lw": 0.0, "zorder": 2.5}
     ax.fill_between([low, high], 0, 1, facecolor=LIGHT["doubt"], alpha=alpha, **shape)
-    ax.fill_between([low, high], 0, 1, facecolor="none", edgecolor=LIGHT["doubt"], alpha=0.5,
-                    hatch=hatch, **shape)
+    ax.fill_between(
+        [low, high],
+        0,
+        1,
+        facecolor="none",
+        edgecolor=LIGHT["doubt"],
+        alpha=0.5,
+        hatch=hatch,
+        **shape,
+    )
 
 
 def _trust_label(ax: Axes, fraction: float, words: str) -> None:
@@ -191,7 +200,13 @@ def _trust_label(ax: Axes, fraction: float, words: str) -> None:
         side, at = ("right", fraction) if fraction > width else ("right", 1.0)
         text = f"{words} ▾" if fraction > width else words
     ax.text(
-        at, 1.015, text, transform=ax.transAxes, ha=side, va="bottom", fontsize=10,
+        at,
+        1.015,
+        text,
+        transform=ax.transAxes,
+        ha=side,
+        va="bottom",
+        fontsize=10,
         color=LIGHT["soft"],
     )
 

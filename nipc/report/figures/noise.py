@@ -32,9 +32,11 @@ def noise_kept(basis: NoiseBasis, seed: int = 1, ax: Axes | None = None) -> Axes
     ax.plot(1.0, path[-1], marker="o", ms=5, color=LIGHT["soft"], clip_on=False)
     ax.plot(1.0, kept[-1], marker="s", ms=5, color=LIGHT["main"], clip_on=False)
     ax.set_xlim(0.0, 1.0)
-    ax.set_xlabel("part of the arc\n"
-                  f"lost: {number(100 * lost[0], 2)} % of the path, "
-                  f"{number(100 * lost[1], 2) if lost[1] > 1e-12 else '0'} % of the end's variance")
+    ax.set_xlabel(
+        "part of the arc\n"
+        f"lost: {number(100 * lost[0], 2)} % of the path, "
+        f"{number(100 * lost[1], 2) if lost[1] > 1e-12 else '0'} % of the end's variance"
+    )
     ax.set_ylabel("integrated white noise\n(of unit variance at the end)")
     name = basis.name.replace("_", " ").replace("-", " ")
     plural = "s" if basis.terms > 1 else ""

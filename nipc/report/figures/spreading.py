@@ -134,6 +134,7 @@ def _squared(unit: str) -> str:
 
 def log_labels(ax: Axes, which: str) -> None:
     """Ticks of log axes as text, without the typesetting that figures with any name cannot use."""
+
     def label(value: float, _: int) -> str:
         exponent = round(float(np.log10(value)))
         whole = abs(np.log10(value) - exponent) < 1e-6

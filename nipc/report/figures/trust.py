@@ -33,8 +33,9 @@ def check_error(dataset: xr.Dataset, ax: Axes | None = None) -> Axes:
         if np.isfinite(horizon) and horizon < times[-1]:
             at = float(np.interp(horizon, times, np.nan_to_num(positive, nan=np.nanmin(positive))))
             ax.plot(horizon, at, marker=hand.marker, color=hand.colour, ms=8, mec=LIGHT["paper"])
-        handles.append(Line2D([], [], color=hand.colour, ls=hand.dash, lw=1.6,
-                              marker=hand.marker, ms=5))
+        handles.append(
+            Line2D([], [], color=hand.colour, ls=hand.dash, lw=1.6, marker=hand.marker, ms=5)
+        )
         labels.append(frame.printable(quantity))
         seen.append(positive)
     if not handles:
@@ -56,9 +57,7 @@ def check_error(dataset: xr.Dataset, ax: Axes | None = None) -> Axes:
 
 
 @drawn
-def direct_against_expansion(
-    dataset: xr.Dataset, quantity: str, ax: Axes | None = None
-) -> Axes:
+def direct_against_expansion(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> Axes:
     """Held-out members: direct runs of the propagator, and the expansion at the same germ."""
     ax = frame.new_axes(ax)
     times = reading.times(dataset)
@@ -73,8 +72,16 @@ def direct_against_expansion(
         hand = line_stroke(row)
         ax.plot(times, direct[row] - middle, color=hand.colour, lw=1.2)
         offset = (row * step) // max(SHOWN, 1)
-        ax.plot(times[offset::step], (expansion[row] - middle)[offset::step], ls="", ms=4.5,
-                marker=hand.marker, mfc=LIGHT["paper"], mec=hand.colour, mew=1.0)
+        ax.plot(
+            times[offset::step],
+            (expansion[row] - middle)[offset::step],
+            ls="",
+            ms=4.5,
+            marker=hand.marker,
+            mfc=LIGHT["paper"],
+            mec=hand.colour,
+            mew=1.0,
+        )
     frame.time_axis(ax, dataset)
     paths = np.concatenate([direct[:SHOWN], expansion[:SHOWN]]) - middle
     cut = frame.set_view(ax, dataset, quantity, paths.min(axis=0), paths.max(axis=0))
@@ -82,7 +89,9 @@ def direct_against_expansion(
     less = " − mean" if mean is not None else ""
     frame.value_axis(ax, frame.printable(quantity) + less, reading.unit(dataset, quantity))
     marked = frame.mark_trust(ax, dataset, quantity)
-    keys = [Line2D([], [], color=LIGHT["ink"], lw=1.2),
-            Line2D([], [], ls="", marker="o", mfc=LIGHT["paper"], mec=LIGHT["ink"], ms=5)]
+    keys = [
+        Line2D([], [], color=LIGHT["ink"], lw=1.2),
+        Line2D([], [], ls="", marker="o", mfc=LIGHT["paper"], mec=LIGHT["ink"], ms=5),
+    ]
     frame.legend(ax, keys, ["direct run", "expansion, same germ"], raised=marked)
     return ax

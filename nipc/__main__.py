@@ -1,0 +1,5 @@
+"""python -m nipc."""
+
+from nipc.cli import main
+
+main()

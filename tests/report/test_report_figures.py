@@ -1,0 +1,235 @@
+"""Figures show what the dataset holds, leave out what it lacks, and keep their labels apart."""
+
+from __future__ import annotations
+
+import warnings
+from itertools import combinations
+from pathlib import Path
+
+import matplotlib
+import numpy as np
+import pytest
+import xarray as xr
+from matplotlib.axes import Axes
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.collections import PolyCollection
+from matplotlib.figure import Figure
+from matplotlib.text import Text
+
+from nipc.problem.noise import CompletedKarhunenLoeve, KarhunenLoeve
+from nipc.report import figures, save_figures
+from nipc.report.style import LIGHT
+
+RESULTS = ("slot", "hard", "minimal")
+
+
+def first_axes(drawn: Axes | tuple[Axes, ...]) -> Axes:
+    return drawn[0] if isinstance(drawn, tuple) else drawn
+
+
+def line(ax: Axes, colour: str, index: int = 0) -> np.ndarray:
+    found = [each for each in ax.lines if each.get_color() == LIGHT[colour]]
+    return np.asarray(found[index].get_ydata(), float)
+
+
+def test_a_result_fills_the_figures_it_can(
+    slot: xr.Dataset, hard: xr.Dataset, minimal: xr.Dataset
+) -> None:
+    names = {entry.name for entry in figures.catalogue(slot)}
+    assert names == set(figures.__all__) - {"Entry", "catalogue"}
+    assert "confinement" not in {entry.name for entry in figures.catalogue(hard)}  # it has no box
+    assert [(e.name, e.quantity) for e in figures.catalogue(minimal)] == [
+        ("bands", "position"),
+        ("diffusion", "position"),
+    ]
+
+
+@pytest.mark.parametrize("result", RESULTS)
+def test_every_figure_is_legible(result: str, request: pytest.FixtureRequest) -> None:
+    """No two texts meet, none leaves the figure, every axis says what it shows, nothing warns."""
+    dataset = request.getfixturevalue(result)
+    for entry in figures.catalogue(dataset):
+        with warnings.catch_warnings():
+            warnings.simplefilter("error")
+            ax = first_axes(entry.draw())
+            figure = ax.figure
+            canvas = FigureCanvasAgg(figure)
+            canvas.draw()
+        where = f"{result}: {entry.name} of {entry.of}"
+        whole = figure.bbox.padded(1.0)
+        boxes = []
+        for text in figure.findobj(Text):
+            if not (text.get_visible() and text.get_text().strip()):
+                continue
+            box = text.get_window_extent(canvas.get_renderer())
+            if box.width == 0 or box.height == 0 or _is_hidden_tick(text, figure):
+                continue
+            held = min(box.x0 - whole.x0, whole.x1 - box.x1, box.y0 - whole.y0, whole.y1 - box.y1)
+            assert held >= 0, f"{where}: {text.get_text()!r} is cut off"
+            boxes.append((text.get_text(), box))
+        for (one, box), (other, another) in combinations(boxes, 2):
+            room = box.padded(-1.0), another.padded(-1.0)
+            assert not room[0].overlaps(room[1]), f"{where}: {one!r} meets {other!r}"
+        for each in figure.axes:
+            assert each.get_ylabel() or [t for t in each.get_yticklabels() if t.get_text()], where
+        assert figure.axes[-1].get_xlabel(), where
+
+
+def _is_hidden_tick(text: Text, figure: Figure) -> bool:
+    """Matplotlib keeps tick labels outside the view and does not draw them."""
+    for ax in figure.axes:
+        for axis, (low, high) in ((ax.xaxis, ax.get_xlim()), (ax.yaxis, ax.get_ylim())):
+            for tick in axis.get_major_ticks() + axis.get_minor_ticks():
+                if text in (tick.label1, tick.label2):
+                    low, high = sorted((low, high))
+                    slack = 1e-9 * (high - low)
+                    shown = low - slack <= tick.get_loc() <= high + slack
+                    return not shown or not text.get_visible()
+    return False
+
+
+def test_bands_show_the_quantiles(slot: xr.Dataset) -> None:
+    ax = figures.bands(slot, "longitude")
+    median = slot["quantile"].sel(quantity="longitude", level=0.5).values
+    assert np.array_equal(line(ax, "main"), median)
+    edges = [each.get_ydata()[0] for each in ax.lines if each.get_color() == LIGHT["edge"]]
+    assert edges == [74.95, 75.05]
+    assert ax.get_ylabel() == "longitude (deg)"
+    assert ax.get_xlabel() == "time (d)"
+
+
+def test_without_quantiles_a_band_is_mean_and_spread(minimal: xr.Dataset) -> None:
+    ax = figures.bands(minimal, "position")
+    band = next(c for c in ax.collections if isinstance(c, PolyCollection))
+    top = band.get_paths()[0].vertices[:, 1].max()
+    assert top == pytest.approx(5.0 + 1.96 * np.sqrt(1000 / 3))
+    assert "mean ± 1.96 std" in [t.get_text() for t in ax.get_legend().get_texts()]
+
+
+def zones(ax: Axes) -> list[tuple[float, float]]:
+    """Spans over the whole height: the shading of what lies past the trust horizons."""
+    found = []
+    for shade in ax.collections:
+        corners = shade.get_paths()[0].vertices if shade.get_paths() else np.zeros((0, 2))
+        if len(corners) and set(np.unique(corners[:, 1])) == {0.0, 1.0}:
+            found.append((float(corners[:, 0].min()), float(corners[:, 0].max())))
+    return sorted(set(found))
+
+
+def test_what_lies_past_the_trust_horizon_is_marked(slot: xr.Dataset, hard: xr.Dataset) -> None:
+    for figure in (figures.bands, figures.confinement, figures.driver_shares):
+        ax = figure(slot, "longitude")
+        assert zones(ax) == [(9.2, 21.0), (21.0, 28.0)]
+        said = [text.get_text() for text in ax.texts]
+        assert any("paths 9.2" in words and "distribution 21" in words for words in said)
+    assert zones(figures.bands(slot, "radius")) == []
+    unchecked = figures.bands(hard, str(hard["quantity"].values[2]))
+    assert zones(unchecked) == [(0.0, 50.0)]
+    assert any("not checked" in text.get_text() for text in unchecked.texts)
+
+
+def test_the_law_is_drawn_on_the_clock_of_the_study(slot: xr.Dataset) -> None:
+    """A study that starts at t = 100: elapsed time below, horizons moved with it."""
+    moved = slot.assign_coords(time=slot["time"] + 100.0)
+    for name in ("trust_horizon", "trust_horizon_distribution"):
+        moved[name] = moved[name] + 100.0
+    for dataset in (slot, moved):
+        ax = figures.diffusion(dataset, "longitude")
+        assert np.array(zones(ax)) == pytest.approx(np.array([[9.2, 21.0], [21.0, 28.0]]))
+        law = line(ax, "edge")
+        elapsed = np.asarray(slot["time"].values)[1:]
+        inside = np.isfinite(law)
+        assert law[inside] == pytest.approx(2 * 2.4e-8 * elapsed[inside] ** 2.8)
+
+
+def test_a_blow_up_past_the_horizon_does_not_hide_what_is_trusted(hard: xr.Dataset) -> None:
+    ax = figures.bands(hard, "x")
+    low, high = ax.get_ylim()
+    assert -10 < low < -1
+    assert 1 < high < 10
+    assert "view cut" in ax.get_xlabel()
+
+
+def test_a_box_that_is_far_away_is_told_and_not_shown(slot: xr.Dataset) -> None:
+    far = slot.copy()
+    far["box_high"] = ("quantity", [42170.0, 99.0, np.nan])
+    ax = figures.bands(far, "longitude")
+    assert ax.get_ylim()[1] < 76
+    labels = [text.get_text() for text in ax.get_legend().get_texts()]
+    assert "box (99 off the scale)" in labels
+
+
+def test_shares_are_stacked_to_the_last_source(slot: xr.Dataset) -> None:
+    """At the end of longitude, stacked by hand: the top of the tangential area."""
+    ax = figures.driver_shares(slot, "longitude")
+    shares = slot["driver_first"].sel(quantity="longitude").isel(time=-1).values
+    tops = [c.get_paths()[0].vertices for c in ax.collections if isinstance(c, PolyCollection)]
+    at_end = [area[area[:, 0] == 28.0, 1].max() for area in tops[:3]]
+    assert at_end == pytest.approx(np.cumsum(shares), rel=1e-12)
+
+
+def test_more_than_seven_sources_are_put_together(hard: xr.Dataset) -> None:
+    ax = figures.driver_shares(hard, "x")
+    labels = [text.get_text() for text in ax.get_legend().get_texts()]
+    assert "2 smaller ones" in labels
+    assert "\u200a_hidden" in labels  # a leading underscore would hide it
+
+
+def test_ranking_is_sorted_by_total_share(slot: xr.Dataset) -> None:
+    ax = figures.driver_ranking(slot, "longitude")
+    names = [text.get_text() for text in ax.get_yticklabels()]
+    total = slot["driver_total"].sel(quantity="longitude").isel(time=-1)
+    expected = [str(total["source"].values[i]) for i in np.argsort(-total.values)]
+    assert names == expected == ["tangential", "start", "radial"]
+
+
+def test_what_is_missing_is_said(minimal: xr.Dataset) -> None:
+    with pytest.raises(KeyError, match="no driver shares"):
+        figures.driver_shares(minimal, "position")
+    with pytest.raises(KeyError, match="no quantity 'speed'; there are position"):
+        figures.bands(minimal, "speed")
+    with pytest.raises(KeyError, match="no arcs"):
+        figures.chain(minimal)
+
+
+def test_axes_of_the_caller_are_used_and_style_does_not_leak(slot: xr.Dataset) -> None:
+    figure = Figure()
+    ax = figure.add_subplot()
+    before = matplotlib.rcParams["font.size"]
+    assert figures.bands(slot, "radius", ax=ax) is ax
+    assert matplotlib.rcParams["font.size"] == before
+    axes = figures.chain(slot, axes=Figure().subplots(3, 1))
+    assert len(axes) == 3
+
+
+def test_the_noise_figure_states_what_the_basis_loses() -> None:
+    """After N = 4 terms the path loses 1 - sum 2 / ((k - 1/2) pi)^2 ... of its mean square.
+
+    Karhunen-Loeve: eigenvalues 1 / ((k - 1/2) pi)^2, their sum 1/2. The end value loses as much
+    as sum 2 / ((k - 1/2) pi)^2 over k > N, since F_k(1)^2 = 2 / ((k - 1/2) pi)^2.
+    """
+    k = np.arange(1, 5) - 0.5
+    lost = 1 - 2 * np.sum(1 / (k * np.pi) ** 2)
+    words = figures.noise_kept(KarhunenLoeve(4)).get_xlabel()
+    assert f"lost: {100 * lost:.2g} % of the path, {100 * lost:.2g} % of the end" in words
+    assert "0 % of the end" in figures.noise_kept(CompletedKarhunenLoeve(4)).get_xlabel()
+
+
+def test_the_kept_path_ends_where_a_complete_basis_ends_it() -> None:
+    """A basis that holds the constant keeps W(1) exactly, whatever the path."""
+    ax = figures.noise_kept(CompletedKarhunenLoeve(3), seed=5)
+    path, kept = (np.asarray(each.get_ydata()) for each in ax.lines[:2])
+    assert kept[-1] == pytest.approx(path[-1], abs=2e-3)  # quadrature over 1500 kicks
+
+
+def test_figures_are_saved_in_every_form(hard: xr.Dataset, tmp_path: Path) -> None:
+    written = save_figures(hard, tmp_path, formats=("svg",))
+    assert len({path.name for path in written}) == len(written)
+    assert len(written) == len(list(figures.catalogue(hard)))
+    assert all(path.parent == tmp_path and path.stat().st_size > 1000 for path in written)
+    assert all(c.isalnum() or c in "-_." for path in written for c in path.name)
+    one = hard.isel(quantity=[0])[["mean", "std"]]
+    kinds = {p.suffix for p in save_figures(one, tmp_path / "all")}
+    assert kinds == {".png", ".svg", ".pdf"}
+    assert (tmp_path / "all" / "bands-x.png").read_bytes().startswith(b"\x89PNG")
+    assert (tmp_path / "all" / "bands-x.pdf").read_bytes().startswith(b"%PDF")

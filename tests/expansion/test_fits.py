@@ -134,7 +134,7 @@ def test_truncation_is_chosen_by_the_error():
 
 
 def test_bootstrap_intervals_hold_the_truth():
-    # 100 data sets with noise, four quantities of 95 %: coverage below 85 % of 400 has a false-alarm
+    # 100 noisy data sets, four quantities of 95 %: coverage below 85 % of 400 has a false-alarm
     # probability below 1e-6 at nominal coverage were they independent
     rng = np.random.default_rng(7)
     truth = np.zeros(10)

@@ -305,7 +305,7 @@ def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
             ),
             "findings": json.dumps(
                 [
-                    "Longitude stays in its box of 74.95 to 75.05 deg at day 28 with probability 0.86 "
+                    "Longitude is in its box of 74.95 to 75.05 deg at day 28 with probability 0.86 "
                     "(0.83 to 0.89), past the trust horizon of its paths at day 9.2.",
                     "The tangential noise drives 66 % of the spread of longitude at day 28.",
                     "Radius stays in its box for the whole 28 days with probability above 0.99.",

@@ -40,6 +40,12 @@ SWITCHES = (
 )
 
 
+HIDDEN = """
+    const box = arguments[0].getBoundingClientRect(), bar = document.getElementById('clock');
+    const top = bar.getBoundingClientRect().top;
+    return !bar.contains(arguments[0]) && box.top > top - 4 && box.height > 0;"""
+
+
 @pytest.fixture(scope="module")
 def browser(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Any]:
     if CHROMIUM is None or DRIVER is None:
@@ -249,7 +255,9 @@ def test_the_panel_draws_its_answers_and_goes_back(browser: Any, addresses: dict
     put(browser, "#whatif-1", "0.2")
     assert browser.execute_script(band) != before[0]
     assert browser.execute_script(shares) != before[1]
-    browser.find_element("css selector", '[data-part="reset"]').click()
+    button = browser.find_element("css selector", '[data-part="reset"]')
+    browser.execute_script("arguments[0].scrollIntoView({block: 'center'})", button)
+    button.click()
     assert (browser.execute_script(band), browser.execute_script(shares)) == before
     put(browser, "#whatif-quantity", "2", "change")
     inside = browser.find_element("css selector", "#whatif-inside")
@@ -277,6 +285,7 @@ def test_controls_are_reached_by_keyboard(browser: Any, addresses: dict[str, str
         browser.switch_to.active_element.send_keys(Keys.TAB)
         focus = browser.switch_to.active_element
         seen.append(focus.get_attribute("id") or focus.get_attribute("data-part"))
+        assert browser.execute_script(HIDDEN, focus) is False, seen[-1]
     wanted = [
         "whatif-quantity",
         "whatif-low",

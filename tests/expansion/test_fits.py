@@ -99,8 +99,9 @@ def test_many_related_outputs_are_fitted_as_well_as_each_alone():
 
 
 def test_the_estimated_error_is_near_the_true_one():
-    # 200 draws of a design: the mean ratio of estimated to true squared error; a bound of 15 % is
-    # over four standard errors of that mean away from 1 (deviation of one ratio about 0.4)
+    # Leave-one-out is unbiased for one run less: over 200 draws of a design the mean estimate over
+    # the mean true error is near 1. Its standard error is 0.15 (the estimates are heavy-tailed), so
+    # a factor of two is over four of them away on the logarithm; the seed is fixed.
     rng = np.random.default_rng(5)
     fresh = rng.normal(size=(4000, 3))
     truth = np.exp(0.4 * fresh.sum(axis=1))
@@ -110,8 +111,9 @@ def test_the_estimated_error_is_near_the_true_one():
         nodes = rng.normal(size=(60, 3))
         fit = least_squares(BASIS.evaluate(nodes), np.exp(0.4 * nodes.sum(axis=1)))
         true = np.mean((held.T @ fit.coefficients[:, 0] - truth) ** 2)
-        ratios.append(fit.loo[0] ** 2 / true)
-    assert 0.6 < np.median(ratios) < 1.4
+        ratios.append((fit.loo[0] ** 2, true))
+    estimated, real = np.mean(ratios, axis=0)
+    assert 0.5 < estimated / real < 2.0
 
 
 def test_cross_validation_is_not_deceived_by_selection_on_noise():
@@ -206,7 +208,7 @@ def test_constant_outputs_have_no_spread_and_no_shares(fitter):
 def test_runs_that_are_not_finite_are_refused_and_can_be_left_out(fitter):
     outputs = NODES.copy()
     outputs[5, 1], outputs[7, 0] = np.nan, np.inf
-    with pytest.raises(FitError, match=r"2 of 40 runs .* first: run 5"):
+    with pytest.raises(FitError, match=r"2 of 40 runs .*first: run 5"):
         fitter(MATRIX, outputs)
     fine = finite_rows(outputs)
     assert np.flatnonzero(~fine).tolist() == [5, 7]

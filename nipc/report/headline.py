@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass
 
 import numpy as np
@@ -27,6 +28,12 @@ class Row:
     quantity: str
     unit: str
     cells: tuple[Cell, ...]
+
+
+def split(finding: str) -> tuple[str, str]:
+    """A finding and the note in brackets that ends it, if one does."""
+    found = re.fullmatch(r"(.*\S)\s+\[([^\[\]]*)\]", finding, flags=re.DOTALL)
+    return (found[1], found[2]) if found else (finding, "")
 
 
 def columns(dataset: xr.Dataset) -> list[str]:
@@ -136,7 +143,7 @@ def cost(dataset: xr.Dataset) -> str:
         )
     if "run_equivalents" in held:
         words = f"{number(float(held['run_equivalents']), 3)} run-equivalents"
-        if "budget" in held:
+        if np.isfinite(float(held.get("budget", np.nan))):
             words += f" of a budget of {number(float(held['budget']), 4)}"
         parts.append(words + " (one is one run over the whole horizon)")
     if int(held.get("failed_runs", 0)):

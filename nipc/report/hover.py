@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
@@ -29,6 +30,11 @@ class Line:
 
 def lines(dataset: xr.Dataset, figure: str, quantity: str | None) -> list[Line]:
     """What can be read off a figure at a time; nothing when it is not over time."""
+    if figure == "joint_confinement" and quantity is not None:
+        return _probabilities(
+            lambda name: reading.joint_series(dataset, f"joint_{name}", quantity),
+            reading.trust(dataset, None),
+        )
     if quantity is None:
         form = "percent" if figure != "spread_rate" else "digits:3"
         names = {
@@ -77,12 +83,18 @@ def _decimals(std: FloatArray | None) -> str:
 
 
 def _confinement(dataset: xr.Dataset, quantity: str) -> list[Line]:
-    found, trust = [], reading.trust(dataset, quantity)
+    return _probabilities(
+        lambda name: reading.series(dataset, name, quantity), reading.trust(dataset, quantity)
+    )
+
+
+def _probabilities(series: Callable[[str], FloatArray | None], trust: reading.Trust) -> list[Line]:
+    found = []
     for name, label in (
         ("inside_probability", "inside"),
         ("survival_probability", "inside all the time"),
     ):
-        values = reading.series(dataset, name, quantity)
+        values = series(name)
         if values is not None:
             found.append(Line(label, values, "", trust, "decimals:3"))
     return found

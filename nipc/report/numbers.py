@@ -21,6 +21,13 @@ def pretty_unit(unit: str) -> str:
     return re.sub(r"(?:\^|\*\*)(-?\d+)(?![\d.])", lambda m: m[1].translate(_SUPERSCRIPT), unit)
 
 
+def squared(unit: str) -> str:
+    """The square of a unit: km² of km, (km/s)² of km/s."""
+    if not unit:
+        return ""
+    return f"{unit}²" if unit.isalpha() else f"({unit})²"
+
+
 def _fixed(value: float, decimals: int) -> str:
     """Fixed notation with a true minus sign and thin spaces between thousands."""
     text = f"{value:,.{max(decimals, 0)}f}".replace(",", THIN)

@@ -10,8 +10,8 @@ from typing import Any
 import numpy as np
 import xarray as xr
 
-from nipc.report import headline, hover, panel, reading, tables
-from nipc.report.numbers import amount, number, seconds
+from nipc.report import headline, hover, panel, provenance, reading, tables
+from nipc.report.numbers import amount, number
 from nipc.report.style import DARK, LIGHT, STROKES
 
 POINTS = 600
@@ -21,7 +21,7 @@ SCRIPTS = ("clock.js", "chart.js", "panel.js")
 
 SECTIONS = (
     ("spread", "Where it goes", ("bands", "density")),
-    ("stays", "Stays or leaves", ("confinement",)),
+    ("stays", "Stays or leaves", ("confinement", "joint_confinement")),
     ("drivers", "What drives it", ("driver_shares", "driver_ranking")),
     ("kind", "Kind of spreading", ("diffusion", "spread_rate", "nonlinear_share")),
     (
@@ -84,20 +84,22 @@ def render(dataset: xr.Dataset) -> str:
     )
     small = thinned(dataset)
     sections = _sections(small)
+    keys = [section.key for section in sections]
     templates = files("nipc.report") / "templates"
     return environment.get_template("page.html.j2").render(
         title=str(dataset.attrs.get("title") or "A study"),
-        findings=reading.listed(dataset, "findings") or [],
+        findings=[headline.split(str(f)) for f in reading.listed(dataset, "findings") or []],
         columns=headline.columns(dataset),
         rows=headline.rows(dataset),
         cost=headline.cost(dataset),
         horizon=_horizon(dataset),
         sections=sections,
         values=[tables.moments(dataset, q) for q in reading.quantities(dataset)],
-        whatif_after="drivers" if any(s.key == "drivers" for s in sections) else sections[0].key,
+        whatif_after="drivers" if "drivers" in keys else "".join(keys[:1]),
         study=str(dataset.attrs.get("study", "")),
-        provenance=_provenance(dataset),
-        cautions=_cautions(dataset),
+        provenance=provenance.origin(dataset),
+        cautions=provenance.cautions(dataset),
+        notes=[str(note) for note in reading.listed(dataset, "notes") or []],
         clock={
             "times": hover.compact(reading.times(small), "digits:9"),
             "unit": reading.time_unit(small),
@@ -155,8 +157,10 @@ def _sections(dataset: xr.Dataset) -> list[Section]:
                 )
             )
     for key, maker in (
+        ("stays", tables.joint_boxes),
         ("stays", tables.exits),
         ("drivers", tables.allowances),
+        ("kind", tables.laws),
         ("cost", tables.arcs),
     ):
         table = maker(dataset)
@@ -168,98 +172,3 @@ def _sections(dataset: xr.Dataset) -> list[Section]:
 def _horizon(dataset: xr.Dataset) -> str:
     times, unit = reading.times(dataset), reading.time_unit(dataset)
     return f"from {number(times[0], 5)} to {amount(times[-1], unit, 5)}"
-
-
-def _provenance(dataset: xr.Dataset) -> list[tuple[str, str]]:
-    held = dataset.attrs
-    rows: list[tuple[str, str]] = []
-    if "created" in held:
-        rows.append(("made", str(held["created"])))
-    if "seed" in held:
-        rows.append(("seed", str(held["seed"])))
-    for name, label in (
-        ("propagator_runs", "runs of the propagator"),
-        ("run_equivalents", "run-equivalents"),
-        ("budget", "budget of runs"),
-        ("failed_runs", "failed runs"),
-    ):
-        if name in held:
-            rows.append((label, number(float(held[name]), 6)))
-    if "tolerance" in held:
-        rows.append(("tolerance", f"{number(float(held['tolerance']))} of the spread"))
-    if "monitoring_interval" in held:
-        rows.append(
-            (
-                "monitoring interval",
-                amount(float(held["monitoring_interval"]), reading.time_unit(dataset), 3),
-            )
-        )
-    if "wall_time" in held:
-        rows.append(("wall time", seconds(float(held["wall_time"]))))
-    versions = reading.listed(dataset, "versions")
-    if isinstance(versions, dict):
-        rows.append(("versions", ", ".join(f"{k} {v}" for k, v in versions.items())))
-    return rows
-
-
-def _cautions(dataset: xr.Dataset) -> list[str]:
-    """What this very result should be read with."""
-    unit, said = reading.time_unit(dataset), []
-    for quantity in reading.quantities(dataset):
-        trust = reading.trust(dataset, quantity)
-        if not trust.checked:
-            said.append(
-                f"{quantity}: not checked against direct runs; nothing said of it is confirmed."
-            )
-        elif trust.mark(trust.end):
-            words = f"{quantity}: single paths agree with direct runs up to "
-            words += amount(trust.paths, unit, 3) if np.isfinite(trust.paths) else "no time"
-            if trust.distribution > trust.paths:
-                words += f", its distribution up to {amount(trust.distribution, unit, 3)}"
-            said.append(words + "; what is shown later is marked, and not confirmed.")
-    interval = dataset.attrs.get("monitoring_interval")
-    if interval is not None and reading.has(dataset, "survival_probability"):
-        said.append(
-            f"Boxes are watched every {amount(float(interval), unit, 3)}; a motion that "
-            "leaves and comes back in between is not seen, so that survival may be "
-            "overstated."
-        )
-    failed = int(dataset.attrs.get("failed_runs", 0))
-    if failed:
-        said.append(
-            f"{failed} runs of the propagator failed; if they failed because of where they "
-            "were, the answers lean away from there."
-        )
-    return said
-
-
-def save_figures(
-    dataset: xr.Dataset, folder: Path, formats: tuple[str, ...] = ("png", "svg", "pdf")
-) -> list[Path]:
-    """Save every figure that the result can fill into `folder`; the files written."""
-    from nipc.report.figures import catalogue
-    from nipc.report.style import styled
-
-    folder = Path(folder)
-    folder.mkdir(parents=True, exist_ok=True)
-    written: list[Path] = []
-    stems: set[str] = set()
-    for entry in catalogue(dataset):
-        axes = entry.draw()
-        first = axes[0] if isinstance(axes, tuple) else axes
-        stem = _file_name(entry.name, entry.of)
-        while stem in stems:  # names that differ only in what a file name cannot hold
-            stem += "_"
-        stems.add(stem)
-        for form in formats:
-            target = folder / f"{stem}.{form}"
-            with styled():
-                first.figure.savefig(target, dpi=200)
-            written.append(target)
-    return written
-
-
-def _file_name(name: str, subjects: tuple[str, ...]) -> str:
-    """A figure and what it is of as a file name: ASCII letters and digits only."""
-    plain = ("".join(c if c.isascii() and c.isalnum() else "_" for c in s)[:40] for s in subjects)
-    return "-".join([name, *plain])

@@ -81,6 +81,20 @@ def last(dataset: xr.Dataset, name: str, quantity: str) -> float:
     return float("nan") if found is None else float(found[..., -1])
 
 
+def joints(dataset: xr.Dataset) -> list[str]:
+    """Names of the boxes of several quantities."""
+    return [str(name) for name in dataset["joint"].values] if "joint" in dataset.coords else []
+
+
+def joint_series(dataset: xr.Dataset, name: str, joint: str) -> FloatArray | None:
+    """A joint box's part of a variable over time."""
+    if name not in dataset:
+        return None
+    part = dataset[name].isel(joint=joints(dataset).index(joint)).values
+    part = np.asarray(part, float)
+    return part if part.size and not bool(np.isnan(part).all()) else None
+
+
 def text(dataset: xr.Dataset, name: str, quantity: str) -> str:
     """One string of a quantity, "" when there is none."""
     if name not in dataset:
@@ -162,9 +176,13 @@ class Trust:
         return "†" if self.checked and time <= self.distribution + slack else "‡"
 
 
-def trust(dataset: xr.Dataset, quantity: str) -> Trust:
-    """The trust horizons of a quantity."""
+def trust(dataset: xr.Dataset, quantity: str | None) -> Trust:
+    """The trust horizons of a quantity; of none: the earliest of all, NaN where one is."""
     end = float(times(dataset)[-1])
+    if quantity is None:
+        every = [trust(dataset, name) for name in quantities(dataset)]
+        first = float(np.min([t.paths for t in every]))
+        return Trust(first, float(np.min([t.distribution for t in every])), end)
     paths = scalar(dataset, "trust_horizon", quantity)
     found = scalar(dataset, "trust_horizon_distribution", quantity)
     return Trust(paths, float(np.fmax(paths, found)), end)

@@ -98,7 +98,7 @@ SETTINGS: Any = {
     "axes.grid": True,
     "axes.axisbelow": True,
     "axes.unicode_minus": True,
-    "axes.formatter.useoffset": True,
+    "axes.formatter.useoffset": False,
     "axes.formatter.use_mathtext": False,
     "grid.color": LIGHT["faint"],
     "grid.linewidth": 0.7,

@@ -7,8 +7,9 @@ from dataclasses import dataclass
 import numpy as np
 import xarray as xr
 
+from nipc.arrays import FloatArray
 from nipc.report import reading
-from nipc.report.numbers import amount, beside, number, percent, probability
+from nipc.report.numbers import amount, beside, interval, number, percent, probability, squared
 
 MOMENTS = 9
 
@@ -33,7 +34,7 @@ def moments(dataset: xr.Dataset, quantity: str) -> Table:
     if mean is not None:
         found.append(("mean", [beside(mean[i], spread[i]) for i in picks]))
     if std is not None:
-        found.append(("std", [number(std[i], 2) for i in picks]))
+        found.append(("std", [beside(std[i], std[i]) for i in picks]))
     for level in (0.025, 0.975):
         values = reading.quantile(dataset, level, quantity)
         if values is not None:
@@ -63,13 +64,66 @@ def _leader(shares: np.ndarray, names: list[str]) -> str:
     if np.isnan(shares).all():
         return "–"
     index = int(np.nanargmax(shares))
-    return f"{names[index]} {percent(float(shares[index]))}"
+    return f"{names[index]} {percent(min(float(shares[index]), 1.0))}"
 
 
 def _marked(dataset: xr.Dataset, quantity: str) -> str:
     """A quantity, marked when what is said of the end lies past its trust horizon."""
     trust = reading.trust(dataset, quantity)
     return f"{quantity}\u202f{trust.mark(trust.end)}".rstrip()
+
+
+def joint_boxes(dataset: xr.Dataset) -> Table | None:
+    """Boxes of several quantities at the end."""
+    rows = []
+    mark = reading.trust(dataset, None).mark(float(reading.times(dataset)[-1]))
+    for joint in reading.joints(dataset):
+        cells = []
+        for name in ("joint_inside_probability", "joint_survival_probability"):
+            ends = (
+                reading.joint_series(dataset, name + side, joint) for side in ("", "_low", "_high")
+            )
+            value, low, high = (np.nan if end is None else float(end[-1]) for end in ends)
+            known = f" ({interval(low, high)})" if np.isfinite(low + high) else ""
+            cells.append(probability(value) + known)
+        rows.append((f"{joint}\u202f{mark}".rstrip(), *cells))
+    heads = ("joint box", "inside at the end", "inside all the time")
+    return Table("All quantities of a joint box at once", heads, tuple(rows)) if rows else None
+
+
+def _at_end(series: FloatArray | None) -> float:
+    return float("nan") if series is None else float(series[-1])
+
+
+def laws(dataset: xr.Dataset) -> Table | None:
+    """How each quantity spreads, and why that is said."""
+    if "spreading_verdict" not in dataset:
+        return None
+    rows, clock = [], reading.time_unit(dataset)
+    for quantity in reading.quantities(dataset):
+        exponent = _estimate(dataset, "diffusion_exponent", quantity)
+        coefficient = _estimate(dataset, "diffusion_coefficient", quantity)
+        unit = squared(reading.unit(dataset, quantity)) or "1"
+        per = f" {unit} per {clock or 'time'}^α" if coefficient != "–" else ""
+        rows.append(
+            (
+                _marked(dataset, quantity),
+                reading.text(dataset, "spreading_verdict", quantity) or "–",
+                exponent,
+                coefficient + per,
+                reading.text(dataset, "spreading_evidence", quantity) or "–",
+            )
+        )
+    heads = ("quantity", "spreading", "exponent α", "coefficient D", "evidence")
+    return Table("Law of spreading, Var = A + 2 D t^α", heads, tuple(rows))
+
+
+def _estimate(dataset: xr.Dataset, name: str, quantity: str) -> str:
+    value, low, high = (
+        reading.scalar(dataset, name + side, quantity) for side in ("", "_low", "_high")
+    )
+    known = f" ({number(low, 3)} to {number(high, 3)})" if np.isfinite(low + high) else ""
+    return number(value, 3) + known
 
 
 def exits(dataset: xr.Dataset) -> Table | None:

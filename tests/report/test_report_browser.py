@@ -164,7 +164,7 @@ def test_the_slider_reads_values_off_every_figure(
     assert f"median {float(here['quantile'].sel(level=0.5)):.3f}\u202fdeg" in words
     shares = readout(browser, "driver_shares", "radius")
     share = float(slot["driver_first"].sel(quantity="radius", source="start").isel(time=index))
-    assert f"start {100 * share:.3g}\u202f%" in shares
+    assert f"start {100 * share:.1f}\u202f%" in shares
     place = browser.execute_script("""
         const figure = document.querySelector('figure[data-kind="bands"]');
         const { frame } = JSON.parse(figure.querySelector('script.data').textContent);

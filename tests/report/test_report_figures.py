@@ -233,3 +233,22 @@ def test_figures_are_saved_in_every_form(hard: xr.Dataset, tmp_path: Path) -> No
     assert kinds == {".png", ".svg", ".pdf"}
     assert (tmp_path / "all" / "bands-x.png").read_bytes().startswith(b"\x89PNG")
     assert (tmp_path / "all" / "bands-x.pdf").read_bytes().startswith(b"%PDF")
+
+
+def test_a_joint_box_is_marked_past_the_earliest_horizon(slot: xr.Dataset) -> None:
+    ax = figures.joint_confinement(slot, "slot")
+    assert zones(ax) == [(9.2, 21.0), (21.0, 28.0)]  # those of longitude
+    assert np.array_equal(line(ax, "main", -1), slot["joint_inside_probability"].values[0])
+    with pytest.raises(KeyError, match="no joint box 'other'"):
+        figures.joint_confinement(slot, "other")
+
+
+@pytest.mark.parametrize("shift", [0.0, 2460000.5, -3.0e9])
+def test_a_clock_far_from_zero_has_short_ticks(slot: xr.Dataset, shift: float) -> None:
+    """A Julian date, or seconds since long ago: what is common goes into the label."""
+    moved = slot.assign_coords(time=slot["time"] + shift)
+    ax = figures.spread_rate(moved)
+    FigureCanvasAgg(ax.figure).draw()
+    assert ax.get_xlabel().startswith("time")
+    assert all(len(text.get_text()) <= 7 for text in ax.get_xticklabels())
+    assert not ax.xaxis.get_offset_text().get_text()

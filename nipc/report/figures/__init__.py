@@ -7,7 +7,7 @@ beforehand which figures a result can fill.
 from nipc.report.figures.bands import bands
 from nipc.report.figures.catalogue import Entry, catalogue
 from nipc.report.figures.chain import chain
-from nipc.report.figures.confinement import confinement
+from nipc.report.figures.confinement import confinement, joint_confinement
 from nipc.report.figures.decay import coefficient_decay
 from nipc.report.figures.density import density
 from nipc.report.figures.drivers import driver_ranking, driver_shares
@@ -30,6 +30,7 @@ __all__ = [
     "driver_ranking",
     "driver_shares",
     "failures",
+    "joint_confinement",
     "noise_kept",
     "nonlinear_share",
     "spread_rate",

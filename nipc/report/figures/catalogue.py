@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
+from functools import partial
 from itertools import pairwise
 from typing import Any
 
@@ -13,7 +14,7 @@ from nipc.problem.noise import BASES
 from nipc.report import reading
 from nipc.report.figures.bands import bands
 from nipc.report.figures.chain import chain
-from nipc.report.figures.confinement import confinement
+from nipc.report.figures.confinement import confinement, joint_confinement
 from nipc.report.figures.decay import coefficient_decay
 from nipc.report.figures.density import density, ensemble
 from nipc.report.figures.drivers import driver_ranking, driver_shares
@@ -34,8 +35,9 @@ class Entry:
 
     @property
     def quantity(self) -> str | None:
-        """The quantity of a figure of one quantity."""
-        return self.of[0] if self.name in PER_QUANTITY else None
+        """The quantity, or the joint box, of a figure of one."""
+        single = self.name in PER_QUANTITY or self.name == "joint_confinement"
+        return self.of[0] if single else None
 
 
 PER_QUANTITY: dict[str, tuple[Callable[..., Any], str]] = {
@@ -112,17 +114,27 @@ def catalogue(dataset: xr.Dataset) -> Iterator[Entry]:
     for name, (function, caption) in PER_QUANTITY.items():
         for quantity in reading.quantities(dataset):
             if _fills(dataset, name, quantity):
-                yield Entry(
-                    name,
-                    (quantity,),
-                    caption.replace("{q}", quantity),
-                    lambda f=function, q=quantity: f(dataset, q),
-                )  # type: ignore[misc]
+                words = caption.replace("{q}", quantity)
+                yield Entry(name, (quantity,), words, partial(function, dataset, quantity))
+    yield from _joints(dataset)
     yield from _pairs(dataset)
     yield from _bases(dataset)
     for name, (function, caption) in OVERALL.items():
         if _fills(dataset, name, None):
-            yield Entry(name, (), caption, lambda f=function: f(dataset))  # type: ignore[misc]
+            yield Entry(name, (), caption, partial(function, dataset))
+
+
+def _joints(dataset: xr.Dataset) -> Iterator[Entry]:
+    """Boxes of several quantities."""
+    for joint in reading.joints(dataset):
+        if reading.joint_series(dataset, "joint_inside_probability", joint) is not None:
+            caption = f"Probability that all quantities of {joint} are in their boxes at once."
+            yield Entry(
+                "joint_confinement",
+                (joint,),
+                caption,
+                partial(joint_confinement, dataset, joint),
+            )
 
 
 def _pairs(dataset: xr.Dataset) -> Iterator[Entry]:
@@ -132,7 +144,7 @@ def _pairs(dataset: xr.Dataset) -> Iterator[Entry]:
         return
     for x, y in list(pairwise(names))[:PAIRS]:
         caption = f"Members in the plane of {x} and {y}; the lines hold the densest 90 %."
-        yield Entry("density", (x, y), caption, lambda x=x, y=y: density(dataset, x, y))  # type: ignore[misc]
+        yield Entry("density", (x, y), caption, partial(density, dataset, x, y))
 
 
 def _bases(dataset: xr.Dataset) -> Iterator[Entry]:
@@ -142,10 +154,6 @@ def _bases(dataset: xr.Dataset) -> Iterator[Entry]:
         told.setdefault((str(each["basis"]), int(each["terms"])), []).append(str(each["source"]))
     for (basis, terms), names in told.items():
         if basis in BASES:
-            caption = f"What the basis of {', '.join(names)} keeps of one path of the noise."
-            yield Entry(
-                "noise_kept",
-                (basis, str(terms)),
-                caption,
-                lambda b=basis, n=terms: noise_kept(BASES[b](n)),
-            )  # type: ignore[misc]
+            words = f"What the basis of {', '.join(names)} keeps of one path of the noise."
+            of = (basis, str(terms))
+            yield Entry("noise_kept", of, words, partial(noise_kept, BASES[basis](terms)))

@@ -76,6 +76,7 @@ def density(
                 draw(edge, color=LIGHT["edge"], lw=1.3, ls=(0, (7, 2, 1.5, 2)))
     frame.value_axis(ax, frame.printable(vertical), reading.unit(dataset, vertical))
     frame.value_axis(ax, frame.printable(horizontal), reading.unit(dataset, horizontal), "x")
+    ax.locator_params(axis="x", nbins=6)
     frame.legend(ax, handles, labels)
     return ax
 

@@ -55,9 +55,9 @@ def with_unit(label: str, unit: str) -> str:
 def time_axis(ax: Axes, dataset: xr.Dataset) -> None:
     """Label and limits of a time axis."""
     times = reading.times(dataset)
-    ax.set_xlabel(with_unit("time", reading.time_unit(dataset)))
     if times[-1] > times[0]:
         ax.set_xlim(float(times[0]), float(times[-1]))
+    value_axis(ax, "time", reading.time_unit(dataset), "x")
 
 
 def set_view(
@@ -145,8 +145,11 @@ def legend(ax: Axes, handles: Sequence[Any], labels: Sequence[str], raised: bool
     )
 
 
-def mark_trust(ax: Axes, dataset: xr.Dataset, quantity: str) -> bool:
-    """Shade what lies past the trust horizons and say so above the axes; whether it did."""
+def mark_trust(ax: Axes, dataset: xr.Dataset, quantity: str | None) -> bool:
+    """Shade what lies past the trust horizons and say so above the axes; whether it did.
+
+    No quantity: the earliest of all trust horizons.
+    """
     trust = reading.trust(dataset, quantity)
     start, end = ax.get_xlim()
     unit = reading.time_unit(dataset)

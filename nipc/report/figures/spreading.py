@@ -12,7 +12,7 @@ from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 
 from nipc.report import reading
 from nipc.report.figures import frame
-from nipc.report.numbers import number, power_of_ten
+from nipc.report.numbers import number, power_of_ten, squared
 from nipc.report.style import LIGHT, drawn, line_stroke
 
 
@@ -52,7 +52,7 @@ def spread_rate(dataset: xr.Dataset, ax: Axes | None = None) -> Axes:
     top = float(np.quantile(finite, 0.97))
     if finite.max() > 3 * max(top, 1e-300) and top > 0:
         ax.set_ylim(min(float(finite.min()), 0.0) - 0.05 * top, 1.5 * top)
-    ax.set_ylabel(frame.with_unit("spread rate", f"1/{unit}" if unit else ""))
+    frame.value_axis(ax, "spread rate", f"1/{unit}" if unit else "")
     return ax
 
 
@@ -63,7 +63,7 @@ def nonlinear_share(dataset: xr.Dataset, ax: Axes | None = None) -> Axes:
     if not _curves(ax, dataset, "nonlinear_share"):
         raise KeyError("the result has no nonlinear shares")
     top = float(np.nanmax(dataset["nonlinear_share"].values))
-    ax.set_ylim(0.0, 1.1 * top if top > 0 else 1.0)
+    ax.set_ylim(0.0, max(1.1 * top, 0.01))  # below a hundredth it does not matter how little it is
     ax.set_ylabel("share of the variance\nbeyond degree one")
     return ax
 
@@ -90,18 +90,19 @@ def diffusion(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> Axe
     if np.isfinite(coefficient) and np.isfinite(exponent) and coefficient > 0:
         offset = reading.scalar(dataset, "diffusion_offset", quantity)
         law = np.nan_to_num(offset) + 2 * coefficient * elapsed[shown] ** exponent
+        span = max(min(span[0], 0.1 * law[-1]), 1e-6 * span[1]), span[1]
         law = np.where((law > 0.3 * span[0]) & (law < 3 * span[1]), law, np.nan)
         dash = (0, (6, 2))
         ax.plot(elapsed[shown], law, color=LIGHT["edge"], lw=1.5, ls=dash)
         handles.append(Line2D([], [], color=LIGHT["edge"], lw=1.5, ls=dash))
-        law_name = "A + 2 D t^α" if np.isfinite(offset) else "2 D t^α"
+        law_name = "A + 2 D t^α" if np.isfinite(offset) else "2 D t^α of its slow part"
         labels.append(f"{law_name}, α = {_alpha(dataset, quantity)}")
     ax.set_xlim(float(elapsed[shown][0]), float(elapsed[-1]))
     ax.set_ylim(0.6 * span[0], 1.7 * span[1])
     log_labels(ax, "xy")
     unit = reading.unit(dataset, quantity)
     ax.set_xlabel(frame.with_unit("time since the start", reading.time_unit(dataset)))
-    label = frame.with_unit(f"variance of {frame.printable(quantity)}", _squared(unit))
+    label = frame.with_unit(f"variance of {frame.printable(quantity)}", squared(unit))
     ax.set_ylabel(textwrap.fill(label, 30))
     marked = frame.mark_trust(ax, _from_start(dataset, times[0]), quantity)
     frame.legend(ax, handles, labels, raised=marked)
@@ -124,12 +125,6 @@ def _alpha(dataset: xr.Dataset, quantity: str) -> str:
     if not np.isfinite(low + high):
         return value
     return f"{value} ({number(low, 3)} to {number(high, 3)})"
-
-
-def _squared(unit: str) -> str:
-    if not unit:
-        return ""
-    return f"{unit}²" if unit.isalpha() else f"({unit})²"
 
 
 def log_labels(ax: Axes, which: str) -> None:

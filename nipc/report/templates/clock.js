@@ -27,7 +27,10 @@ nipc.amount = (value, unit, digits) => nipc.number(value, digits) + (unit ? "\u2
 nipc.formed = (value, { form, unit }) => {
   const [kind, digits] = form.split(":");
   if (value === null || !Number.isFinite(value)) return "–";
-  if (kind === "percent") return `${nipc.number(100 * value, 3)}\u202f%`;
+  if (kind === "percent") {
+    const share = (100 * value).toFixed(1);
+    return `${share === "0.0" && value > 0 ? "<\u202f0.1" : share}\u202f%`;
+  }
   if (kind === "digits") return nipc.amount(value, unit, Number(digits));
   const text = Math.abs(value).toFixed(Number(digits));
   return (value < 0 && Number(text) ? "−" : "") + text + (unit ? "\u202f" + unit : "");

@@ -137,7 +137,7 @@ def exits(dataset: xr.Dataset) -> Table | None:
         times = reading.series(dataset, "exit_time_quantile", quantity)
         if times is None:
             continue
-        cells = [amount(t, unit, 3) if np.isfinite(t) else "not within the horizon" for t in times]
+        cells = [amount(t, unit, 3) if np.isfinite(t) else "later" for t in times]
         driver = reading.series(dataset, "exit_driver_total", quantity)
         cells.append("–" if driver is None else _leader(driver, reading.sources(dataset)))
         rows.append((_marked(dataset, quantity), *cells))
@@ -146,7 +146,8 @@ def exits(dataset: xr.Dataset) -> Table | None:
         *(f"{100 * level:g} % have left by" for level in levels),
         "leaving is driven by",
     )
-    return Table("When members leave their box", heads, tuple(rows)) if rows else None
+    caption = "When members leave their box; later: not within the horizon"
+    return Table(caption, heads, tuple(rows)) if rows else None
 
 
 def allowances(dataset: xr.Dataset) -> Table | None:

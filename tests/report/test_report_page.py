@@ -222,3 +222,38 @@ def test_report_loads_matplotlib_late() -> None:
     code = "import sys, nipc.report; print({'matplotlib', 'jinja2'} & set(sys.modules))"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert done.stdout.strip() == "set()"
+
+
+def test_any_one_variable_may_be_missing(slot: xr.Dataset) -> None:
+    """All of the page but its drawings, for a result without each variable in turn."""
+    from nipc.report import headline, panel, provenance, tables
+    from nipc.report.figures import catalogue
+
+    for name in slot.data_vars:
+        less = slot.drop_vars(str(name))
+        heads = headline.columns(less)
+        assert all(len(row.cells) == len(heads) for row in headline.rows(less)), name
+        for make in (tables.exits, tables.allowances, tables.arcs, tables.laws, tables.joint_boxes):
+            made = make(less)
+            assert made is None or all(len(row) == len(made.heads) for row in made.rows), name
+        assert tables.moments(less, "longitude").rows
+        assert provenance.cautions(less)
+        assert (panel.stored(less) is None) == str(name).startswith("panel")
+        assert len(list(catalogue(less))) > 15, name
+
+
+def test_a_motion_that_ended_is_drawn_as_far_as_it_goes(slot: xr.Dataset) -> None:
+    """Every member of longitude ended after day 10: NaN from there on, and no warning."""
+    import warnings
+
+    from nipc.report.figures import catalogue
+
+    ended = slot.copy(deep=True)
+    for variable in ended.data_vars.values():
+        if {"time", "quantity"} <= set(variable.dims):
+            variable[{"quantity": 1, "time": slice(120, None)}] = np.nan
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")
+        for entry in catalogue(ended):
+            if "longitude" in entry.of:
+                entry.draw()

@@ -92,7 +92,7 @@ def _fills(dataset: xr.Dataset, name: str, quantity: str | None) -> bool:
     """Whether a figure has something to show."""
     if quantity is None:
         if name == "chain":
-            return reading.has(dataset, "arc_start") and reading.has(dataset, "arc_runs")
+            return all(reading.has(dataset, f"arc_{what}") for what in ("start", "end", "runs"))
         if name == "failures":
             return bool(reading.listed(dataset, "failures"))
         return any(reading.has(dataset, needed) for needed in NEEDS[name])

@@ -24,7 +24,7 @@ def chain(dataset: xr.Dataset, axes: Sequence[Axes] | None = None) -> tuple[Axes
 
     The width of a bar is the arc's length. `axes`: two of them, or none for a new figure.
     """
-    if not (reading.has(dataset, "arc_start") and reading.has(dataset, "arc_runs")):
+    if not all(reading.has(dataset, f"arc_{what}") for what in ("start", "end", "runs")):
         raise KeyError("the result has no arcs")
     start, end = (np.asarray(dataset[f"arc_{side}"].values, float) for side in ("start", "end"))
     edges, count = np.append(start, end[-1]), len(start)

@@ -44,7 +44,7 @@ def density(
     if times is None:
         trusted = min(trust.distribution for trust in trusts)
         last = trusted if kept[0] < trusted < kept[-1] else kept[-1]
-        times = np.linspace(kept[0], last, 5)[1:].tolist()
+        times = np.linspace(kept[0], kept[kept <= last][-1], 5)[1:].tolist()
     ax = frame.new_axes(ax, height=4.2)
     handles, labels, unit = [], [], reading.time_unit(dataset)
     for row, time in enumerate(times):

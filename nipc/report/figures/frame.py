@@ -73,6 +73,8 @@ def set_view(
     What happens within the trust horizon is not dwarfed by what comes later: then the view is cut,
     and the range that was cut is returned.
     """
+    if not (np.isfinite(low).any() and np.isfinite(high).any()):
+        return None
     reach = bottom, top = float(np.nanmin(low)), float(np.nanmax(high))
     if not (np.isfinite(bottom) and np.isfinite(top)):
         return None

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import itertools
 import time
 from collections.abc import Callable, Sequence
 
 import numpy as np
 
 from nipc.arrays import FloatArray, IntArray
+from nipc.errors import LedgerError
 from nipc.runs.keys import block_digest
 from nipc.runs.ledger import Ledger
 from nipc.runs.progress import Progress
@@ -38,7 +40,7 @@ class Writer:
         self.kept = 0
         self._ledger, self._number, self._keys, self._batch = ledger, number, keys, batch
         self._progress, self._tell = progress, tell
-        self._records: list[Record] = []
+        self._calls: list[list[Record]] = []
         self._bytes = 0
         self._began = self._last = time.monotonic()
 
@@ -46,7 +48,7 @@ class Writer:
         """Take an answer in; a verdict is a place in its unit, a status, and attempts so far."""
         block = self._block(answer.unit.rows)
         records = [self._record(answer, block, *verdict) for verdict in verdicts]
-        self._records += records  # one step, so that Ctrl-C cannot part them
+        self._calls.append(records)  # one step, so that Ctrl-C cannot part them
         self._bytes += sum(r.states.nbytes for r in records if r.states is not None)
 
     def _record(
@@ -84,14 +86,25 @@ class Writer:
             self.commit()
 
     def commit(self) -> None:
-        """Keep what was collected."""
+        """Keep what was collected; call by call, as many as there is room for, when it fails."""
         self._last = time.monotonic()
-        if not self._records:
+        if not self._calls:
             return
-        self._ledger.write(self._records, self._number)
-        final = [record for record in self._records if record.status is not Status.ALONE]
+        try:
+            self._keep(len(self._calls))
+        except LedgerError:
+            while len(self._calls) > 1:
+                self._keep(1)
+            raise
+
+    def _keep(self, count: int) -> None:
+        """Keep the first `count` calls, all or none."""
+        records = list(itertools.chain.from_iterable(self._calls[:count]))
+        self._ledger.write(records, self._number)
+        del self._calls[:count]
+        self._bytes = sum(r.states.nbytes for c in self._calls for r in c if r.states is not None)
+        final = [record for record in records if record.status is not Status.ALONE]
         failed = sum(1 for record in final if record.status is Status.FAILED)
-        self._records, self._bytes = [], 0
         self.kept += len(final)
         self._tell(final)
         self._progress.advance(len(final), failed)

@@ -21,6 +21,7 @@ from runs_samples import (
 )
 
 from nipc.errors import LedgerError, RunsError
+from nipc.runs import writer
 from nipc.runs.engine import BLOCK, Engine, block_size
 from nipc.runs.keys import block_digest, run_keys
 from nipc.runs.ledger import Ledger
@@ -250,17 +251,23 @@ def test_workers_stay_from_batch_to_batch(tmp_path):
     assert len({line.split()[0] for line in log.read_text().splitlines()}) == 1
 
 
-def test_a_full_disk_is_said_and_a_ledger_without_room_keeps_what_it_has(tmp_path):
+@pytest.mark.parametrize("vectorised", [False, True])
+def test_a_full_disk_is_said_and_what_still_fits_is_kept(vectorised, tmp_path, monkeypatch):
     """SQLite itself limits the file: the same error code as of a full disk."""
+    monkeypatch.setattr(writer, "COMMIT_SECONDS", 1e9)  # all runs would be kept at once
     batch = sample_batch(200, times=500)
-    with Ledger.open(tmp_path) as ledger, Engine(Sample(), ledger, backend="inline") as engine:
-        engine.ensure(batch.take(slice(0, 20)), "arc 1")
-        ledger._connection.execute("PRAGMA max_page_count = 40")
+    propagator = Sample(vectorised=vectorised)
+    with Ledger.open(tmp_path) as ledger, Engine(propagator, ledger, backend="inline") as engine:
+        # 8,000 bytes a run on pages of 8,192: at least 64, and not 200, have room on 150 pages
+        ledger._connection.execute("PRAGMA max_page_count = 150")
         with pytest.raises(LedgerError, match="the disk is full"):
             engine.ensure(batch, "arc 1")
-    outcomes = run(tmp_path, Sample(), batch, backend="inline")
+        kept = ledger.count(Status.DONE)
+        assert 64 <= kept < 150
+        assert not vectorised or kept % BLOCK == 0
+    outcomes = run(tmp_path, propagator, batch, backend="inline")
     assert outcomes.ok.all()
-    assert outcomes.reused.sum() >= 20
+    assert outcomes.reused.sum() == kept
 
 
 def test_wrong_settings():

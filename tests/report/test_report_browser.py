@@ -25,7 +25,7 @@ pytestmark = pytest.mark.skipif(
     (CHROMIUM is None or DRIVER is None) and not os.environ.get("CI"),
     reason="needs chromium and chromedriver (Debian: apt install chromium chromium-driver)",
 )
-WIDTHS = (1280, 400)
+WIDTHS = (1280, 768, 400)
 RESULTS = ("slot", "hard", "minimal")
 SWITCHES = (
     "--headless=new",
@@ -331,6 +331,9 @@ def test_dark_and_print(browser: Any, addresses: dict[str, str]) -> None:
     browser.execute_cdp_cmd("Emulation.setEmulatedMedia", {"media": "print"})
     assert browser.execute_script(ground) == "rgb(255, 255, 255)"
     assert not browser.find_element("css selector", "#clock").is_displayed()
+    show(browser, addresses["slot"], width=700)  # A4 between its margins
+    browser.execute_cdp_cmd("Emulation.setEmulatedMedia", {"media": "print"})
+    assert browser.execute_script("return document.documentElement.scrollWidth") <= 700
     printed = browser.execute_cdp_cmd("Page.printToPDF", {"printBackground": True})
     assert len(printed["data"]) > 50_000
 

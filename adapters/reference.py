@@ -63,9 +63,14 @@ def load_function(folder: Path, reference: str) -> Callable[..., Any]:
 
 
 def _module(path: Path, folder: Path) -> ModuleType:
-    """A module loaded from its file under a name of its own; its neighbours can be imported."""
+    """A module loaded from its file under a name of its own; its neighbours can be imported.
+
+    The name holds the file's time and size, so that a file changed within a session is read again.
+    """
     path = path.resolve()
-    name = "nipc_study_" + hashlib.sha256(str(path).encode()).hexdigest()[:16]
+    stamp = path.stat()
+    key = f"{path} {stamp.st_mtime_ns} {stamp.st_size}"
+    name = "nipc_study_" + hashlib.sha256(key.encode()).hexdigest()[:16]
     if name in sys.modules:
         return sys.modules[name]
     spec = importlib.util.spec_from_file_location(name, path)
@@ -74,6 +79,8 @@ def _module(path: Path, folder: Path) -> ModuleType:
     module = importlib.util.module_from_spec(spec)
     sys.modules[name] = module
     sys.path.insert(0, str(folder))
+    importlib.invalidate_caches()
+    before = set(sys.modules)
     try:
         spec.loader.exec_module(module)
     except BaseException:
@@ -81,6 +88,11 @@ def _module(path: Path, folder: Path) -> ModuleType:
         raise
     finally:
         sys.path.remove(str(folder))
+        # another study may have a neighbour of the same name
+        for other in set(sys.modules) - before:
+            file = getattr(sys.modules[other], "__file__", None)
+            if file and Path(file).parent == folder:
+                del sys.modules[other]
     return module
 
 
@@ -100,6 +112,13 @@ def code_digest(folder: Path, references: Sequence[str], depends: Sequence[str])
         except OSError as error:
             raise InputError(f"depends: cannot read {name!r}: {error.strerror}") from None
     return digest.hexdigest()
+
+
+def check_depends(folder: Path, depends: Sequence[str]) -> None:
+    """Raise InputError when a file that kept runs depend on is not there."""
+    for name in depends:
+        if not (folder / name).is_file():
+            raise InputError(f"depends: there is no file {name!r} in {folder}")
 
 
 def _version_of(module: str) -> str:

@@ -6,13 +6,14 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from nipc.answers.result import Result, load_result
-    from nipc.errors import NipcError
+    from nipc.errors import Ended, NipcError
     from nipc.problem.study import Study
     from nipc.workflow import load_study, plan, report, run
 
 __version__ = "0.1.0"
 
 _HOMES = {
+    "Ended": "nipc.errors",
     "NipcError": "nipc.errors",
     "Result": "nipc.answers.result",
     "Study": "nipc.problem.study",
@@ -23,7 +24,17 @@ _HOMES = {
     "run": "nipc.workflow",
 }
 
-__all__ = ["NipcError", "Result", "Study", "load_result", "load_study", "plan", "report", "run"]
+__all__ = [
+    "Ended",
+    "NipcError",
+    "Result",
+    "Study",
+    "load_result",
+    "load_study",
+    "plan",
+    "report",
+    "run",
+]
 
 
 def __getattr__(name: str) -> Any:

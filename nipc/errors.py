@@ -48,6 +48,17 @@ class PropagatorError(NipcError):
     """One run of the propagator failed; the message is kept in the ledger as its reason."""
 
 
+class Ended(Exception):  # noqa: N818 - nothing is wrong
+    """Raised by a user's propagator: the motion ended at `time` (re-entry, a lost particle).
+
+    `states` (k, d) are those at the first k output times, all of them up to `time`.
+    """
+
+    def __init__(self, time: float, states: object = None) -> None:
+        super().__init__(time, states)
+        self.time, self.states = time, states
+
+
 class FitError(NipcError):
     """An expansion cannot be fitted to these runs."""
 

@@ -80,6 +80,7 @@ def adapter_context(study: Study, folder: Path) -> AdapterContext:
         study.state_names,
         study.parameter_names,
         study.source_names,
+        tuple(n.name for n in study.noise if n.calculus == "ito"),
     )
 
 

@@ -54,7 +54,8 @@ class Trajectories:
 class AdapterContext:
     """Where a study stands and what it calls its things; what an adapter may use to build.
 
-    `folder` holds the study file, `scratch` is where run folders may be made.
+    `folder` holds the study file, `scratch` is where run folders may be made. `ito_sources` are
+    the noise sources that the study reads in the Ito sense.
     """
 
     folder: Path
@@ -62,6 +63,7 @@ class AdapterContext:
     state_names: tuple[str, ...]
     parameter_names: tuple[str, ...]
     source_names: tuple[str, ...]
+    ito_sources: tuple[str, ...] = ()
 
 
 class Propagator(ABC):

@@ -26,6 +26,7 @@ import cloudpickle
 
 from nipc.errors import RunsError
 from nipc.runs.crew import Crew, Work
+from nipc.runs.descendants import end_descendants
 from nipc.runs.propagator import Propagator
 from nipc.runs.unit import Answer, Problem, Unit, time_limit_problem
 
@@ -114,6 +115,8 @@ class Worker:
         if code is None:
             with contextlib.suppress(subprocess.TimeoutExpired):
                 code = self.process.wait(0.2)  # its connection may end a moment before it does
+        if code is None:
+            end_descendants(self.process.pid)
         with contextlib.suppress(OSError):
             os.killpg(self.process.pid, signal.SIGKILL)
         self.process.wait()

@@ -16,6 +16,7 @@ import time
 from multiprocessing.connection import Connection
 from typing import Any
 
+from nipc.runs.descendants import end_descendants
 from nipc.runs.propagator import Batch
 from nipc.runs.unit import Answer, call
 
@@ -80,7 +81,8 @@ def _receive(connection: Connection, inbox: queue.SimpleQueue[Any], out: Outbox)
 
 
 def _end() -> None:
-    """Leave at once, with every process this one has started and not set apart."""
+    """Leave at once, with every process that this one has started."""
+    end_descendants(os.getpid())
     with contextlib.suppress(OSError):
         os.killpg(os.getpgid(0), signal.SIGKILL)
     os._exit(1)

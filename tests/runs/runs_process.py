@@ -48,12 +48,14 @@ def main() -> int:
     parser.add_argument("--jobs", type=int, default=2)
     parser.add_argument("--vectorised", action="store_true")
     parser.add_argument("--file-limit", type=int)
+    parser.add_argument("--kind", type=int, nargs=2, metavar=("ROW", "KIND"))
     options = parser.parse_args()
     if options.file_limit:
         resource.setrlimit(resource.RLIMIT_FSIZE, (options.file_limit, options.file_limit))
     vectorised = options.vectorised
     propagator = Sample(pause=options.pause, vectorised=vectorised, mixing=vectorised)
-    batch = sample_batch(options.n, times=options.times)
+    kinds = dict([options.kind]) if options.kind else None
+    batch = sample_batch(options.n, times=options.times, kinds=kinds)
     reporter = Reporter()
     try:
         with (

@@ -5,6 +5,7 @@ from __future__ import annotations
 import ctypes
 import os
 import signal
+import subprocess
 import sys
 import time
 from pathlib import Path
@@ -15,7 +16,9 @@ from nipc.errors import PropagatorError
 from nipc.problem.noise import Legendre, NoiseModel, Source
 from nipc.runs.propagator import Batch, Propagator, Trajectories
 
-GOOD, RAISES, EXITS, SEGFAULTS, SLEEPS, DEAF, NAN, SHAPE, MEMORY, LEAVES, REFUSES, ENDS = range(12)
+GOOD, RAISES, EXITS, SEGFAULTS, SLEEPS, DEAF, NAN, SHAPE, MEMORY, LEAVES, REFUSES, ENDS, CALLS = (
+    range(13)
+)
 
 
 class Sample(Propagator):
@@ -78,6 +81,8 @@ def misbehave(what: int) -> None:
     if what == DEAF:
         signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGALRM})
         time.sleep(600)
+    if what == CALLS:  # a program in a session of its own, as an adapter would start it
+        subprocess.run(["sleep", "600.25"], start_new_session=True)
     if what == MEMORY:
         np.ones(1 << 46)
     if what == LEAVES:

@@ -12,8 +12,9 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from runs_samples import DEAF, RAISES, SLEEPS, Sample, alive, eventually, sample_batch
+from runs_samples import CALLS, DEAF, RAISES, SLEEPS, Sample, alive, eventually, sample_batch
 
+from nipc.runs.descendants import descendants
 from nipc.runs.engine import Engine
 from nipc.runs.ledger import Ledger
 from nipc.runs.policy import FailurePolicy
@@ -234,3 +235,32 @@ def test_workers_leave_with_a_master_that_is_killed(tmp_path):
     os.kill(process.pid, signal.SIGKILL)
     process.communicate()
     assert eventually(lambda: not any(map(alive, workers(text))), 5.0)
+
+
+@pytest.mark.parametrize("signal_number", [signal.SIGKILL, signal.SIGINT])
+def test_programs_that_workers_started_leave_with_them(signal_number, tmp_path):
+    """Also those in sessions of their own, which no signal to a group of processes reaches."""
+    process = start(tmp_path, 4, "--jobs", 1, "--kind", 3, CALLS)
+    text = ""
+    while kept(text) < 3:
+        text += process.stdout.readline()
+    (worker,) = workers(text)
+    assert eventually(lambda: descendants(worker))
+    programs = descendants(worker)
+    process.send_signal(signal_number)
+    process.communicate()
+    assert eventually(lambda: not any(map(alive, [worker, *programs])), 5.0)
+
+
+def test_a_program_that_hangs_is_ended_and_its_worker_stays(tmp_path):
+    """Here the worker's own alarm ends it, and the worker stays."""
+    with (
+        Ledger.open(tmp_path) as ledger,
+        Engine(
+            Sample(), ledger, time_limit=0.3, policy=FailurePolicy(retries=0)
+        ) as engine,
+    ):  # fmt: skip
+        outcomes = engine.run(sample_batch(2, kinds={1: CALLS}), "arc 1")
+        assert outcomes.kinds[1] == "time limit"
+        (worker,) = engine._crew._workers
+        assert descendants(worker.process.pid) == []

@@ -156,7 +156,7 @@ int main(void) {
 """
 
 
-def executable(n: int = 400, slices: int = 4) -> Row:
+def executable(n: int = 1200, slices: int = 2) -> Row:
     """A trivial C program through its adapter, beside subprocess.run in a joblib loop."""
     from nipc.adapters.executable import ExecutableAdapter, ExecutableSettings
 

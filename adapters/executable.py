@@ -1,268 +1,271 @@
-"""A program as it is: input files from templates, a forcing table, an output table."""
+"""A program as it is: input files from templates, a forcing table, output tables."""
 
 from __future__ import annotations
 
-import contextlib
-import hashlib
-import os
+import json
 import shutil
-import signal
-import subprocess
 import tempfile
 from pathlib import Path
-from typing import Annotated
+from typing import Annotated, Any
 
 import numpy as np
 from pydantic import BaseModel, ConfigDict, Field, field_validator, model_validator
 
 from nipc.adapters.base import Adapter, AdapterSettings
-from nipc.adapters.deck import Deck, ScratchName, check_template, formatted, write_table
-from nipc.adapters.table_file import read_rows
-from nipc.arrays import FloatArray
+from nipc.adapters.deck import Deck, InputFile, NumberFormat, Numbers, ScratchName, table_text
+from nipc.adapters.endings import until
+from nipc.adapters.forcing_grid import forcing_grid, grid_table
+from nipc.adapters.legs import by_legs
+from nipc.adapters.outputs import OutputTable, end_between
+from nipc.adapters.program import call, failure, files_digest, program_of
 from nipc.errors import InputError, PropagatorError
 from nipc.runs.propagator import AdapterContext, Batch, Propagator, Trajectories
 
-TAIL = 400  # characters of standard error that are kept when a run fails
-
-
-class InputFile(BaseModel):
-    """One input file, from a template beside the study or from text in the study."""
-
-    model_config = ConfigDict(extra="forbid", frozen=True)
-
-    file: ScratchName
-    template: str | None = None
-    text: str | None = None
-
-    @model_validator(mode="after")
-    def _one(self) -> InputFile:
-        if (self.template is None) == (self.text is None):
-            raise ValueError("give one of template and text")
-        return self
+Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
 
 
 class ForcingTable(BaseModel):
-    """The noise as a table of t, xi_1 ... xi_J with a row every `step` of the clock's unit."""
+    """The noise as a table of t, xi_1 ... xi_J with a row every `step` of the clock's unit.
 
-    model_config = ConfigDict(extra="forbid", frozen=True)
-
-    file: ScratchName
-    step: Annotated[float, Field(gt=0)]
-    header: bool = False
-
-
-class OutputTable(BaseModel):
-    """Where the states are read: columns counted from 1, a row an output time.
-
-    The rows are those of the times asked for, in their order; with `time_column` each row's time is
-    checked. `first_row`: the table's first row is the start.
+    In a batch the tables follow each other, or there is one a run with $run in the file's name.
     """
 
     model_config = ConfigDict(extra="forbid", frozen=True)
 
     file: ScratchName
-    columns: Annotated[tuple[Annotated[int, Field(ge=1)], ...], Field(min_length=1)]
-    time_column: Annotated[int, Field(ge=1)] | None = None
-    widths: tuple[Annotated[int, Field(ge=1)], ...] | None = None
-    skip: Annotated[int, Field(ge=0)] = 0
-    comment: Annotated[str, Field(max_length=4)] = "#"
-    first_row: bool = True
+    step: Positive
+    header: bool = False
+    format: NumberFormat | None = None
 
 
 class ExecutableSettings(AdapterSettings):
     """The program, what it reads, what it writes.
 
-    Templates may use $start, $end, $step (of the forcing table), $n_times, $times (a line each),
-    and every state component and parameter by its name. `lost_exit_code`: with it the program says
-    that the motion ended for a physical reason; the rows that it wrote are kept.
+    Templates may use $start, $end, $n_times, $times (a line each), $step and $n_forcing (of the
+    forcing table), $run and $n_runs, and every state component and parameter by its name; numbers
+    are printed by `format`, single ones by `formats`. `files` are copied into the run's folder,
+    `links` linked. `stdin` and `stdout` are files of that folder. Printed times are time_offset +
+    time_scale x the clock's. `lost_exit_code`: with it the program says that the motion ended for a
+    physical reason; the rows that it wrote are kept. `batch`: one start of the program makes many
+    runs. `keep_failed`: folders of failed runs are kept.
     """
 
     command: Annotated[tuple[str, ...], Field(min_length=1)]
     inputs: tuple[InputFile, ...] = ()
     forcing: ForcingTable | None = None
-    output: OutputTable
-    format: str = "%.17e"
+    output: Annotated[tuple[OutputTable, ...], Field(min_length=1)]
+    format: NumberFormat = "%.17e"
+    formats: dict[str, NumberFormat] = Field(default_factory=dict)
     fortran_exponent: bool = False
+    files: tuple[str, ...] = ()
+    links: tuple[str, ...] = ()
+    stdin: ScratchName | None = None
+    stdout: ScratchName | None = None
     environment: dict[str, str] = Field(default_factory=dict)
-    time_limit: Annotated[float, Field(gt=0)] | None = None
+    time_offset: float = 0.0
+    time_scale: Positive = 1.0
+    time_limit: Positive | None = None
     lost_exit_code: Annotated[int, Field(ge=1, le=255)] | None = None
+    batch: bool = False
+    keep_failed: bool = False
     depends: tuple[str, ...] = ()
 
-    @field_validator("format")
+    @field_validator("output", mode="before")
     @classmethod
-    def _formats(cls, value: str) -> str:
-        try:
-            text = value % 1.5
-            float(text)
-        except (TypeError, ValueError):
+    def _one_or_many(cls, value: Any) -> Any:
+        return (value,) if isinstance(value, dict) else value
+
+    @model_validator(mode="after")
+    def _consistent(self) -> ExecutableSettings:
+        names = [f.file for f in self.inputs]
+        names += [] if self.forcing is None else [self.forcing.file]
+        names += [Path(f).name for f in (*self.files, *self.links)]
+        twice = sorted({n for n in names if names.count(n) > 1})
+        if twice:
+            raise ValueError(f"two things would be written to {twice[0]!r}")
+        if self.stdin is not None and self.stdin not in names:
+            raise ValueError(f"stdin = {self.stdin!r} is none of the input files")
+        if not self.batch and any("$run" in n for n in [*names, *(o.file for o in self.output)]):
+            raise ValueError("$run in a file's name needs batch = true")
+        if self.batch and any(o.rows == "final" for o in self.output):
+            raise ValueError('rows = "final" starts a run again and again, which a batch cannot')
+        if self.batch and self.lost_exit_code is not None:
             raise ValueError(
-                f"{value!r} does not print a number; write for example %.15e"
-            ) from None
-        return value
+                "one exit code cannot tell which run of a batch was lost: use short_is_lost"
+            )
+        return self
 
 
 class ExecutablePropagator(Propagator):
-    """One run of the program a run, each in a scratch folder of its own."""
+    """One run of the program a run or a batch, each in a scratch folder of its own."""
 
     def __init__(self, settings: ExecutableSettings, context: AdapterContext) -> None:
         self.settings, self.context = settings, context
-        self.command = (str(program_of(settings, context.folder)), *settings.command[1:])
-        self.templates = {f.file: template_of(f, context.folder) for f in settings.inputs}
+        self.vectorised = settings.batch
+        self.command = (
+            str(program_of(settings.command[0], context.folder)), *settings.command[1:]
+        )  # fmt: skip
+        self.decks = tuple(Deck(f, context.folder) for f in settings.inputs)
+        self.shown = Numbers(settings.format, settings.formats, settings.fortran_exponent)
 
     def propagate(self, batch: Batch) -> Trajectories:
+        if any(o.rows == "final" for o in self.settings.output):
+            return by_legs(self._once, batch)
+        return self._once(batch)
+
+    def _once(self, batch: Batch) -> Trajectories:
         self.context.scratch.mkdir(parents=True, exist_ok=True)
-        folder = Path(tempfile.mkdtemp(prefix="run-", dir=self.context.scratch))
+        folder = Path(tempfile.mkdtemp(prefix="run-", dir=self.context.scratch)).resolve()
         try:
             self._write(batch, folder)
             code = self._call(folder)
-            return self._read(batch, folder, code)
-        finally:
+            found = self._read(batch, folder, code)
+        except PropagatorError as error:
+            if self.settings.keep_failed:
+                raise PropagatorError(f"{error} (kept in {folder})") from None
             shutil.rmtree(folder, ignore_errors=True)
+            raise
+        except BaseException:
+            shutil.rmtree(folder, ignore_errors=True)
+            raise
+        shutil.rmtree(folder, ignore_errors=True)
+        return found
+
+    # -- before ----------------------------------------------------------------------------------
 
     def _write(self, batch: Batch, folder: Path) -> None:
-        settings = self.settings
-
-        def shown(value: float) -> str:
-            return formatted(value, settings.format, settings.fortran_exponent)
-
-        words = {
-            "start": shown(batch.times[0]),
-            "end": shown(batch.times[-1]),
-            "n_times": str(batch.times.size),
-            "times": "\n".join(shown(t) for t in batch.times),
+        settings, shown = self.settings, self.shown
+        for name in settings.files:
+            shutil.copy2(self.context.folder / name, folder / Path(name).name)
+        for name in settings.links:
+            (folder / Path(name).name).symlink_to((self.context.folder / name).resolve())
+        times = self._printed(batch.times)
+        shared = {
+            "start": shown(times[0], "start"),
+            "end": shown(times[-1], "end"),
+            "n_times": str(times.size),
+            "times": "\n".join(shown(t, "times") for t in times),
+            "n_runs": str(len(batch)),
         }
-        words |= dict(zip(self.context.state_names, map(shown, batch.states[0]), strict=True))
-        parameters = map(shown, batch.parameters[0])
-        words |= dict(zip(self.context.parameter_names, parameters, strict=True))
+        tables = np.empty((len(batch), 0, 0))
+        grid = np.empty(0)
         if settings.forcing is not None:
             grid = forcing_grid(batch.times[0], batch.times[-1], settings.forcing.step)
-            words |= {"step": shown(grid[1] - grid[0]), "n_forcing": str(grid.size)}
-            values = batch.forcing.table(grid)[0]
-            target = self._target(folder, settings.forcing.file)
-            write_table(target, grid, values, settings.format, settings.fortran_exponent)
-            if settings.forcing.header:
-                names = " ".join(self.context.source_names)
-                target.write_text(f"# t {names}\n" + target.read_text())
-        for file, text in self.templates.items():
-            self._target(folder, file).write_text(Deck(text).substitute(words), encoding="utf-8")
+            tables = grid_table(batch.forcing, grid)
+            grid = self._printed(grid)
+            shared |= {"step": shown(grid[1] - grid[0], "step"), "n_forcing": str(grid.size)}
+            self._write_forcing(folder, grid, tables)
+        words = [self._words(batch, i) for i in range(len(batch))]
+        for deck in self.decks:
+            rows = range(len(batch)) if "$run" in deck.file.file else [None]
+            for i in rows:
+                own = words if i is None else [words[i]]
+                if deck.file.language == "jinja":
+                    text = deck.fill_jinja(self._values(batch, times, grid, tables, i))
+                else:
+                    text = deck.fill(shared, own)
+                name = deck.file.file if i is None else numbered(deck.file.file, i)
+                self._target(folder, name).write_text(text, encoding="utf-8")
+
+    def _printed(self, times: Any) -> Any:
+        return self.settings.time_offset + self.settings.time_scale * times
+
+    def _words(self, batch: Batch, row: int) -> dict[str, str]:
+        names = (*self.context.state_names, *self.context.parameter_names)
+        values = (*batch.states[row].tolist(), *batch.parameters[row].tolist())
+        words = {n: self.shown(v, n) for n, v in zip(names, values, strict=True)}
+        return words | {"run": str(row + 1)}
+
+    def _values(
+        self, batch: Batch, times: Any, grid: Any, tables: Any, row: int | None
+    ) -> dict[str, Any]:
+        """What a jinja template sees: numbers, lists, and number(x) to print one by `format`."""
+        names = (*self.context.state_names, *self.context.parameter_names)
+        runs = []
+        for i in range(len(batch)) if row is None else [row]:
+            values = (*batch.states[i].tolist(), *batch.parameters[i].tolist())
+            table = [[t, *x] for t, x in zip(grid.tolist(), tables[i].tolist(), strict=True)]
+            runs.append(dict(zip(names, values, strict=True)) | {"run": i + 1, "forcing": table})
+        shared = {
+            "start": float(times[0]), "end": float(times[-1]), "n_times": times.size,
+            "times": times.tolist(), "n_runs": len(batch), "n_forcing": grid.size,
+            "step": float(grid[1] - grid[0]) if grid.size else None, "number": self.shown,
+            "runs": runs,
+        }  # fmt: skip
+        return shared | (runs[0] if len(runs) == 1 else {})
+
+    def _write_forcing(self, folder: Path, grid: Any, tables: Any) -> None:
+        forcing = self.settings.forcing
+        assert forcing is not None
+        shown = Numbers(forcing.format or self.settings.format, {}, self.shown.fortran)
+        names = " ".join(self.context.source_names)
+        head = f"# t {names}\n" if forcing.header else ""
+        texts = [table_text(grid, table, shown) for table in tables]
+        if "$run" in forcing.file:
+            for i, text in enumerate(texts):
+                self._target(folder, numbered(forcing.file, i)).write_text(head + text)
+        else:
+            self._target(folder, forcing.file).write_text(head + "".join(texts))
 
     def _target(self, folder: Path, name: str) -> Path:
         target = folder / name
-        target.parent.mkdir(parents=True, exist_ok=True)
-        if not target.resolve().is_relative_to(folder.resolve()):
+        if not target.resolve().is_relative_to(folder):
             raise PropagatorError(f"{name!r} leads out of the run's scratch folder")
+        target.parent.mkdir(parents=True, exist_ok=True)
         return target
+
+    # -- the run ---------------------------------------------------------------------------------
 
     def _call(self, folder: Path) -> int:
         settings = self.settings
-        try:
-            process = subprocess.Popen(
-                self.command, cwd=folder, stdin=subprocess.DEVNULL, stdout=subprocess.DEVNULL,
-                stderr=subprocess.PIPE, env={**os.environ, **settings.environment},
-                start_new_session=True,
-            )  # fmt: skip
-        except OSError as error:
-            raise PropagatorError(f"cannot start {self.command[0]}: {error.strerror}") from None
-        try:
-            _, stderr = process.communicate(timeout=settings.time_limit)
-        except subprocess.TimeoutExpired:
-            raise PropagatorError(
-                f"the program did not end within {settings.time_limit:g} s and was stopped"
-            ) from None
-        finally:
-            # also when this process is interrupted: nothing that the program started is left
-            if process.poll() is None:
-                with contextlib.suppress(ProcessLookupError):
-                    os.killpg(process.pid, signal.SIGKILL)
-                process.wait()
-        code = process.returncode
+        code, words = call(
+            self.command, folder, environment=settings.environment, limit=settings.time_limit,
+            stdin=None if settings.stdin is None else self._target(folder, settings.stdin),
+            stdout=None if settings.stdout is None else self._target(folder, settings.stdout),
+        )  # fmt: skip
         if code not in (0, settings.lost_exit_code):
-            tail = stderr.decode("utf-8", "replace").strip()[-TAIL:]
-            how = f"signal {-code}" if code < 0 else f"exit code {code}"
-            raise PropagatorError(f"the program ended with {how}" + (f": {tail}" if tail else ""))
+            raise failure(code, words)
         return code
 
+    # -- after -----------------------------------------------------------------------------------
+
     def _read(self, batch: Batch, folder: Path, code: int) -> Trajectories:
-        output, times = self.settings.output, batch.times
-        columns = list(output.columns)
-        if output.time_column is not None:
-            columns.append(output.time_column)
-        rows = read_rows(
-            self._target(folder, output.file), columns, skip=output.skip, comment=output.comment,
-            widths=output.widths,
-        )  # fmt: skip
-        wanted = times if output.first_row else times[1:]
-        lost = code != 0
-        if rows.shape[0] > wanted.size or (rows.shape[0] < wanted.size and not lost):
-            raise PropagatorError(
-                f"{output.file} has {rows.shape[0]} rows; {wanted.size} are expected, one an output"
-                f" time{' and the start' if output.first_row else ''}"
-            )
-        states = np.full((1, times.size, batch.states.shape[1]), np.nan)
-        states[0, 0] = batch.states[0]
-        first = 0 if output.first_row else 1
-        states[0, first : first + rows.shape[0]] = rows[:, : len(output.columns)]
-        if output.time_column is not None:
-            self._check_times(rows[:, -1], wanted[: rows.shape[0]])
-        ended = np.full(1, np.nan)
-        if lost:
-            # the time of loss lies between the last row that was written and the next
-            ended[0] = times[min(first + rows.shape[0], times.size - 1)]
-            states[0, times >= ended[0]] = np.nan
+        times, n = batch.times, len(batch)
+        states = np.full((n, times.size, batch.states.shape[1]), np.nan)
+        states[:, 0] = batch.states
+        reach, told = np.full(n, times.size), np.full(n, np.inf)
+        scale = (self.settings.time_offset, self.settings.time_scale)
+        for output in self.settings.output:
+            names = output.components or self.context.state_names
+            places = [self.context.state_names.index(name) for name in names]
+            lost = code != 0
+            if "$run" in output.file:
+                paths = [self._target(folder, numbered(output.file, i)) for i in range(n)]
+                found = [output.read(path, times, 1, lost, scale)[0] for path in paths]
+            else:
+                found = output.read(self._target(folder, output.file), times, n, lost, scale)
+            for i, rows in enumerate(found):
+                states[i, rows.first : rows.reach, places] = rows.values.T
+                reach[i] = min(reach[i], rows.reach)
+                told[i] = min(told[i], np.inf if rows.lost is None else rows.lost)
+        ended = np.full(n, np.nan)
+        for i in np.flatnonzero((reach < times.size) | (code != 0)):
+            ended[i] = end_between(times, int(reach[i]), told[i] if np.isfinite(told[i]) else None)
+            states[i] = until(states[i], times, ended[i])
         return Trajectories(states, ended)
 
-    def _check_times(self, found: FloatArray, wanted: FloatArray) -> None:
-        span = max(float(np.ptp(wanted)), abs(float(wanted[-1])), 1e-300)
-        off = np.abs(found - wanted) > 1e-5 * span
-        if np.any(off):
-            row = int(np.argmax(off))
-            raise PropagatorError(
-                f"{self.settings.output.file}: row {row + 1} is at time {found[row]:g}; "
-                f"{wanted[row]:g} is expected"
-            )
-
     def fingerprint(self) -> str:
-        digest = hashlib.sha256()
-        used = [Path(self.command[0]), *(self.context.folder / d for d in self.settings.depends)]
-        for path in used:
-            digest.update(path.read_bytes())
-        for text in self.templates.values():
-            digest.update(text.encode())
+        folder, settings = self.context.folder, self.settings
+        used = [Path(self.command[0])]
+        used += [folder / f for f in (*settings.files, *settings.links, *settings.depends)]
+        sources = json.dumps([deck.source for deck in self.decks])
         names = (self.context.state_names, self.context.parameter_names)
-        return f"executable {self.settings.model_dump_json()} {names} {digest.hexdigest()}"
+        return f"executable {settings.model_dump_json()} {names} {sources} {files_digest(used)}"
 
 
-def forcing_grid(start: float, end: float, step: float) -> FloatArray:
-    """Times from start to end in equal steps of at most `step`."""
-    count = max(1, int(np.ceil((end - start) / step - 1e-9)))
-    return np.linspace(start, end, count + 1)
-
-
-def program_of(settings: ExecutableSettings, folder: Path) -> Path:
-    """The program's file: beside the study, absolute, or on the search path."""
-    name = settings.command[0]
-    beside = folder / name
-    if beside.is_file():
-        if not os.access(beside, os.X_OK):
-            raise InputError(f"{beside} is there but cannot be executed: chmod +x it")
-        return beside.resolve()
-    found = shutil.which(name)
-    if found is None:
-        raise InputError(
-            f"there is no program {name!r} in {folder} nor on the search path: build it first"
-        )
-    return Path(found)
-
-
-def template_of(file: InputFile, folder: Path) -> str:
-    """The template's text."""
-    if file.text is not None:
-        return file.text
-    assert file.template is not None
-    try:
-        return (folder / file.template).read_text(encoding="utf-8")
-    except (OSError, UnicodeDecodeError) as error:
-        raise InputError(f"cannot read the template {file.template!r}: {error}") from None
+def numbered(name: str, row: int) -> str:
+    """The file's name for one run, counted from 1."""
+    return name.replace("$run", str(row + 1))
 
 
 class ExecutableAdapter(Adapter):
@@ -273,29 +276,49 @@ class ExecutableAdapter(Adapter):
 
     @classmethod
     def check(cls, settings: ExecutableSettings, context: AdapterContext) -> None:
-        program_of(settings, context.folder)
-        known = {"start", "end", "n_times", "times"}
-        known |= {*context.state_names, *context.parameter_names}
+        program_of(settings.command[0], context.folder)
+        shared = {"start", "end", "n_times", "times", "n_runs"}
+        own = {*context.state_names, *context.parameter_names, "run"}
         if settings.forcing is not None:
-            known |= {"step", "n_forcing"}
+            shared |= {"step", "n_forcing"}
         elif context.source_names:
             raise InputError(
                 "the study has noise sources, and the program is not given them: add a "
-                "[propagator.forcing] table with file and step"
+                "[propagator.forcing] table with file and step, or wrap it in the kicks adapter"
             )
         for file in settings.inputs:
-            check_template(template_of(file, context.folder), known, file.template or file.file)
-        count = len(settings.output.columns)
-        if count != len(context.state_names):
-            raise InputError(
-                f"output.columns names {count} columns for the {len(context.state_names)} state "
-                "components; one each is needed, in the state's order"
-            )
-        for name in settings.depends:
-            if not (context.folder / name).is_file():
-                raise InputError(f"depends: there is no file {name!r} in {context.folder}")
+            Deck(file, context.folder).check(shared, own, settings.batch)
+        unknown = sorted(set(settings.formats) - shared - own)
+        if unknown:
+            raise InputError(f"formats: there is no {unknown[0]!r} to print")
+        _check_outputs(settings, context)
+        for key in ("files", "links", "depends"):
+            for name in getattr(settings, key):
+                if not (context.folder / name).is_file():
+                    raise InputError(f"{key}: there is no file {name!r} in {context.folder}")
 
     @classmethod
     def build(cls, settings: ExecutableSettings, context: AdapterContext) -> Propagator:
         cls.check(settings, context)
         return ExecutablePropagator(settings, context)
+
+
+def _check_outputs(settings: ExecutableSettings, context: AdapterContext) -> None:
+    read: list[str] = []
+    for output in settings.output:
+        names = output.components or context.state_names
+        if output.count != len(names):
+            what = "columns" if output.columns else "pattern"
+            raise InputError(
+                f"output.{what} for {output.file} reads {output.count} numbers, and there are "
+                f"{len(names)} state components ({', '.join(names)}); one each is needed"
+            )
+        read += names
+    for name in read:
+        if name not in context.state_names:
+            raise InputError(f"output.components: {name!r} is no state component")
+        if read.count(name) > 1:
+            raise InputError(f"output: {name!r} is read twice")
+    missing = [n for n in context.state_names if n not in read]
+    if missing:
+        raise InputError(f"output: {', '.join(missing)} is read nowhere")

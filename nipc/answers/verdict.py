@@ -16,11 +16,13 @@ from nipc.answers.wording import estimate, number, percent
 def findings(dataset: xr.Dataset) -> list[str]:
     """Sentences on each quantity of a result, then on the joint boxes and on the runs."""
     sentences: list[str] = []
-    for name in dataset["quantity"].values:
-        view = View(dataset, str(name))
+    views = [View(dataset, str(name)) for name in dataset["quantity"].values]
+    # whether it stays comes first: quantities that have a box before those that have none
+    views.sort(key=lambda view: bool(np.isnan(view.triple("survival_probability")[0])))
+    for view in views:
         if view.trust.index == 0:
             sentences.append(
-                f"Nothing can be said of {name} beyond the start: held-out direct runs differ from"
+                f"Nothing can be said of {view.name} beyond the start: held-out direct runs differ from"
                 f" the expansion there. {view.trust.clause}"
             )
             continue

@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 import json
+import os
 import sys
+from io import TextIOWrapper
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
 import typer
 
 from nipc.errors import InputError, NipcError
+from nipc.starter import Flavour
 
 if TYPE_CHECKING:
     from nipc.runs.progress import Progress
@@ -18,19 +21,43 @@ app = typer.Typer(
     no_args_is_help=True,
     pretty_exceptions_enable=False,
     context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 80},
-    help="Noise and uncertain starts pushed through a propagator that stays a black box. "
-    "Begin with `nipc new FOLDER`; then check, plan, run.",
+    help="Tell how noise and an uncertain start spread a motion, by running your own propagator "
+    "as a black box.\n\nBegin with `nipc new FOLDER`, then go on in this order: check, plan, run.",
 )
 
-StudyFile = Annotated[Path, typer.Argument(metavar="STUDY", help="The study file (TOML).")]
+StudyFile = Annotated[
+    Path, typer.Argument(metavar="STUDY", help="The study file, as study.toml.", show_default=False)
+]
 AsJson = Annotated[bool, typer.Option("--json", help="Print JSON, for scripts.")]
-Jobs = Annotated[int, typer.Option("--jobs", "-j", help="Runs at a time; -1 for all processors.")]
-Quiet = Annotated[bool, typer.Option("--quiet", "-q", help="Say nothing but errors.")]
+Jobs = Annotated[
+    int, typer.Option("--jobs", "-j", help="How many runs at a time; -1: one a processor.")
+]
+Quiet = Annotated[bool, typer.Option("--quiet", "-q", help="Print errors only.")]
+
+
+def _version(asked: bool) -> None:
+    if asked:
+        from nipc import __version__
+
+        print(f"nipc {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def _options(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version.")
+    ] = False,
+) -> None:
+    pass
 
 
 @app.command()
 def check(study: StudyFile, as_json: AsJson = False) -> None:
-    """Say all that is wrong with a study, by line. Nothing of yours is run."""
+    """Look a study over: what is in it, or all that is wrong, by line.
+
+    Neither your propagator nor any other code of yours is run.
+    """
     from nipc.terminal import console, show_study
     from nipc.workflow import load_study
 
@@ -39,23 +66,26 @@ def check(study: StudyFile, as_json: AsJson = False) -> None:
         print(json.dumps({"file": str(study), "ok": True, "title": loaded.title}))
         return
     show_study(console(), loaded)
-    print(f"{study}: nothing is wrong. Next: nipc plan {study}")
+    print(f"\nNothing is wrong. Next: nipc plan {study}")
 
 
 @app.command()
 def plan(study: StudyFile, as_json: AsJson = False) -> None:
-    """Tell what a study will cost and what each noise basis would lose, without running it."""
+    """Tell how many runs a study will take, before any is made.
+
+    Also what each noise basis would lose at the chosen number of terms.
+    Neither your propagator nor any other code of yours is run.
+    """
     from nipc.terminal import console, show_plan
     from nipc.workflow import load_study
     from nipc.workflow import plan as make_plan
 
-    loaded = load_study(study)
-    made = make_plan(loaded)
+    made = make_plan(load_study(study))
     if as_json:
         print(json.dumps(made.as_dict()))
         return
-    show_plan(console(), made, loaded.clock.unit)
-    print(f"Next: nipc run {study}")
+    show_plan(console(), made)
+    print(f"\nNext: nipc run {study} --jobs {os.cpu_count() or 1}")
 
 
 @app.command()
@@ -64,33 +94,37 @@ def run(
     jobs: Jobs = 1,
     quiet: Quiet = False,
     as_json: AsJson = False,
-    page: Annotated[bool, typer.Option(help="Write the page too.")] = True,
+    page: Annotated[bool, typer.Option(help="Write the page as well.")] = True,
 ) -> None:
-    """Run a study: the propagator's runs, the expansions, the check, the answers, the page.
+    """Run a study: the program it names is run, and a page and data are written.
 
-    Every finished run is kept: stop with Ctrl-C and start again, it goes on where it was.
+    They go to a folder beside the study, study.work for study.toml.
+    Every finished run is kept there: stop with Ctrl-C, start again, and it
+    goes on where it was.
     """
     from nipc.terminal import console, show_result
     from nipc.workflow import load_study, report
     from nipc.workflow import run as run_study
 
+    if jobs == 0:
+        raise InputError("--jobs 0: give 1 or more, or -1 for one a processor")
     loaded = load_study(study)
     result = run_study(loaded, n_jobs=jobs, progress=_progress(quiet or as_json))
-    written = str(report(result)) if page else None
+    written = report(result) if page else None
     if as_json:
         print(json.dumps(result.summary))
     elif not quiet:
-        show_result(console(), result, written)
+        show_result(console(), result, written, study)
 
 
 @app.command()
 def report(
     study: StudyFile,
     figures: Annotated[
-        bool, typer.Option("--figures", help="Also write each figure as PNG, SVG and PDF.")
+        bool, typer.Option("--figures", help="Write each figure as PNG, SVG and PDF as well.")
     ] = False,
 ) -> None:
-    """Write the page again from the kept results, and the figures as files."""
+    """Write the page again from the results that are kept; nothing is run."""
     from nipc.answers.result import load_result
     from nipc.workflow import load_study, work_folder
     from nipc.workflow import report as write
@@ -104,7 +138,10 @@ def report(
 
 @app.command()
 def status(study: StudyFile, as_json: AsJson = False) -> None:
-    """Tell how far a study is: runs done, failed and missing, also while it goes on elsewhere."""
+    """Tell how far a study is: runs done, failed and missing.
+
+    Also from another terminal, while the runs go on.
+    """
     from dataclasses import asdict
 
     from nipc.runs.status import status
@@ -112,25 +149,35 @@ def status(study: StudyFile, as_json: AsJson = False) -> None:
 
     folder = work_folder(load_study(study))
     if not folder.is_dir():
-        raise InputError(f"{folder} is not there yet: nothing of this study has been run")
+        raise InputError(
+            f"{folder} is not there yet: nothing of this study has been run. Next: nipc run {study}"
+        )
     found = status(folder)
     print(json.dumps(asdict(found)) if as_json else str(found))
 
 
 @app.command()
 def new(
-    folder: Annotated[Path, typer.Argument(help="A folder that is not there yet.")],
+    folder: Annotated[
+        Path, typer.Argument(metavar="FOLDER", help="A new folder.", show_default=False)
+    ],
     flavour: Annotated[
-        str, typer.Option(help="How the propagator is made: function or ode.")
-    ] = "function",
+        Flavour,
+        typer.Option(
+            help="What your propagator is: a Python function that integrates by itself, the "
+            "right-hand side of an ODE, or a program that reads and writes files."
+        ),
+    ] = Flavour.FUNCTION,
 ) -> None:
-    """Write a commented study and a small propagator that run as they are."""
+    """Write a commented study and a small propagator, to change into yours.
+
+    They run as they are.
+    """
     from nipc.starter import write_starter
 
     study = write_starter(folder, flavour)
-    print(f"{study} is written. Next:")
-    print(f"  nipc check {study}")
-    print(f"  nipc run {study}")
+    print(f"Written: {', '.join(sorted(str(p) for p in folder.iterdir()))}")
+    print(f"Next: nipc check {study}, then nipc run {study}")
 
 
 def _progress(quiet: bool) -> Progress:
@@ -141,20 +188,26 @@ def _progress(quiet: bool) -> Progress:
 
 def main() -> None:
     """The entry point: a user's mistake ends with a message and exit code 2, never a traceback."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, TextIOWrapper):
+            stream.reconfigure(errors="replace")  # a terminal that cannot show a letter
     try:
-        app(standalone_mode=False)
+        sys.exit(app(standalone_mode=False) or 0)
     except NipcError as error:
         print(f"nipc: {error}", file=sys.stderr)
         sys.exit(error.exit_code)
-    except KeyboardInterrupt:
-        print("nipc: stopped; what is finished is kept, start again to go on", file=sys.stderr)
+    except (KeyboardInterrupt, typer.Abort):
+        print(
+            "nipc: stopped; what is finished is kept, and the same command goes on from there",
+            file=sys.stderr,
+        )
         sys.exit(130)
-    except typer.Exit as done:
-        sys.exit(done.exit_code)
-    except typer.Abort:
-        sys.exit(130)
+    except BrokenPipeError:
+        # whoever read the output has read enough; nothing more can be flushed to it
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        sys.exit(1)
     except Exception as error:
-        show = getattr(error, "show", None)
+        show = getattr(error, "show", None)  # a wrong option or command: the parser explains it
         if show is None:
             raise
         show()

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from enum import StrEnum
 from pathlib import Path
 
 from nipc.errors import InputError
@@ -81,32 +82,82 @@ def rates(t, x, xi, parameters):
     return [x[1], -parameters[0] * x[0] + xi[0]]
 '''
 
+PROGRAM = '''\
+#!/usr/bin/env python3
+"""A program that knows nothing of nipc: reads motion.in and forcing.dat, writes motion.out."""
+
+with open("motion.in") as file:
+    x, v, stiffness, *times = (float(word) for word in file.read().split())
+with open("forcing.dat") as file:
+    table = [tuple(map(float, line.split())) for line in file]  # time, force
+step = table[1][0] - table[0][0]
+with open("motion.out", "w") as out:
+    for (t, a), (_, b) in zip(table, table[1:] + table[-1:]):
+        if times and t > times[0] - step / 2:
+            print(times.pop(0), x, v, file=out)
+        v += 0.5 * step * (a - stiffness * x)  # leapfrog
+        x += step * v
+        v += 0.5 * step * (b - stiffness * x)
+'''
+
+DECK = "$x $v $stiffness\n$times\n"
+
+PROGRAM_SETTINGS = """\
+adapter = "executable"
+command = ["motion.py"]        # the program and its arguments; beside this file, or on the path
+
+[[propagator.inputs]]          # each run has a folder of its own; this is written into it
+file = "motion.in"
+template = "motion.in"         # $x, $v, $stiffness, $times and others are filled in
+
+[propagator.forcing]           # a table: time, then one value a noise source
+file = "forcing.dat"
+step = 0.02                    # the program's own step
+
+[propagator.output]            # a row an output time, the start first
+file = "motion.out"
+time_column = 1
+columns = [2, 3]               # x and v
+"""
+
+
+class Flavour(StrEnum):
+    """What the propagator is."""
+
+    FUNCTION = "function"
+    ODE = "ode"
+    EXECUTABLE = "executable"
+
+
+# the [propagator] table, and the files beside the study
 FLAVOURS = {
-    "function": (
+    Flavour.FUNCTION: (
         'adapter = "function"\nfunction = "motion:propagate"  # in motion.py beside this file\n',
-        FUNCTION,
+        {"motion.py": FUNCTION},
     ),
-    "ode": (
+    Flavour.ODE: (
         'adapter = "ode"\nrhs = "motion:rates"           # in motion.py beside this file\n',
-        ODE,
+        {"motion.py": ODE},
     ),
+    Flavour.EXECUTABLE: (PROGRAM_SETTINGS, {"motion.py": PROGRAM, "motion.in": DECK}),
 }
 
 
-def write_starter(folder: Path, flavour: str) -> Path:
-    """Write study.toml and motion.py to a new folder; the study file's path.
+def write_starter(folder: Path, flavour: Flavour) -> Path:
+    """Write study.toml and what it names to a new folder; the study file's path.
 
-    InputError when the flavour is unknown or something is there already.
+    InputError when something is there already, or nothing can be written.
     """
-    if flavour not in FLAVOURS:
-        raise InputError(f"no flavour {flavour!r}; there are: {', '.join(FLAVOURS)}")
     if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
         raise InputError(f"{folder} is there already and not empty; name a new folder")
-    settings, code = FLAVOURS[flavour]
+    settings, files = FLAVOURS[flavour]
+    study = folder / "study.toml"
     try:
         folder.mkdir(parents=True, exist_ok=True)
-        (folder / "motion.py").write_text(code, encoding="utf-8")
-        study = folder / "study.toml"
+        for name, text in files.items():
+            (folder / name).write_text(text, encoding="utf-8")
+            if text.startswith("#!"):
+                (folder / name).chmod(0o755)
         study.write_text(STUDY.format(propagator=settings), encoding="utf-8")
     except OSError as error:
         raise InputError(f"cannot write to {folder}: {error.strerror}") from None

@@ -3,14 +3,25 @@
 from __future__ import annotations
 
 import sys
+from pathlib import Path
 
+import numpy as np
+import xarray as xr
 from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
-from nipc.answers.result import Result
+from nipc.answers.result import DATA, SUMMARY, Result
 from nipc.chain.plan import Plan
-from nipc.problem.study import Study
+from nipc.problem.study import NoiseSettings, QuantitySettings, Study
+from nipc.report import reading
+from nipc.report.headline import rows, split
+from nipc.report.numbers import THIN, amount, percent, probability, with_spread
+
+MARKS = {
+    "†": "† past the trust horizon of single paths, the distribution still agrees",
+    "‡": "‡ past every trust horizon, or not checked: do not rely on it",
+}
 
 
 def console() -> Console:
@@ -22,24 +33,45 @@ def show_study(out: Console, study: Study) -> None:
     """What a study that has passed its checks is made of."""
     out.print(Text(study.title, style="bold"))
     clock = study.clock
-    rows = [
-        ("propagator", study.propagator.adapter),
-        ("clock", f"{clock.start:g} to {clock.end:g} {clock.unit}, {clock.times.size} outputs"),
-        ("state", ", ".join(study.state_names)),
-        ("parameters", ", ".join(study.parameter_names) or "none"),
-        ("noise sources", ", ".join(study.source_names) or "none"),
-        (
-            "quantities",
-            ", ".join(q.name + (" (box)" if q.box else "") for q in study.quantity),
-        ),
-    ]
     table = Table.grid(padding=(0, 2))
-    for name, value in rows:
-        table.add_row(name, Text(value))
+    for head, lines in (
+        ("propagator", [f"adapter {study.propagator.adapter}"]),
+        ("clock", [f"{clock.start:g} to {clock.end:g} {clock.unit}, {clock.times.size} outputs"]),
+        ("state", _state(study)),
+        ("parameters", list(study.parameter_names) or ["none"]),
+        ("noise", [_source(noise) for noise in study.noise] or ["none"]),
+        ("quantities", [_quantity(quantity) for quantity in study.quantity]),
+        ("arcs", [str(study.chain.arcs)]),
+        ("chart", ["none" if study.chart is None else study.chart.name]),
+    ):
+        table.add_row(head, Text("\n".join(lines)))
     out.print(table)
 
 
-def show_plan(out: Console, plan: Plan, unit: str) -> None:
+def _state(study: Study) -> list[str]:
+    law = study.start_law()
+    deviation = np.linalg.norm(law.factor, axis=1)
+    return [
+        f"{c.name} = {c.mean:g}" + (f" ± {s:g}" if s else "") + f" {c.unit}".rstrip()
+        for c, s in zip(study.state, deviation, strict=True)
+    ]
+
+
+def _source(noise: NoiseSettings) -> str:
+    memory = "" if noise.time_constant is None else f", time constant {noise.time_constant:g}"
+    strength = f"{noise.intensity:g} {noise.unit}".strip()
+    return f"{noise.name}: {noise.kind}{memory}, {strength}, {noise.basis} basis"
+
+
+def _quantity(quantity: QuantitySettings) -> str:
+    unit = f" {quantity.unit}" if quantity.unit else ""
+    if quantity.box is None:
+        return quantity.name + (f" ({quantity.unit})" if unit else "")
+    low, high = quantity.box
+    return f"{quantity.name}, box {low:g} to {high:g}{unit}"
+
+
+def show_plan(out: Console, plan: Plan) -> None:
     """Germ variables, terms, runs, and what each noise basis would lose."""
     out.print(Text(plan.title, style="bold"))
     table = Table(title="Germ of one arc", title_justify="left", box=None, header_style="bold")
@@ -89,17 +121,78 @@ def _losses(plan: Plan) -> Table:
     return table
 
 
-def show_result(out: Console, result: Result, page: str | None) -> None:
-    """The findings, what they cost, and where everything is."""
-    out.print(Text(str(result.dataset.attrs["title"]), style="bold"))
-    for finding in result.findings:
-        out.print(Text("- " + finding))
-    failed = int(result.dataset.attrs.get("failed_runs", 0))
-    if failed:
-        out.print(Text(f"- {failed} runs failed: `nipc status` tells why.", style="bold"))
+def show_result(out: Console, result: Result, page: Path | None, study: Path) -> None:
+    """What each quantity does, what that rests on, where everything is and what comes next."""
+    data = result.dataset
+    out.print(Text(str(data.attrs["title"]), style="bold"))
+    out.print(_answers(data))
+    marks = {_mark(data, name) for name in reading.quantities(data)}
+    legend = [text for mark, text in MARKS.items() if mark in marks]
+    if legend:
+        out.print(Text("; ".join(legend)))
+    for sentence in [*_spreading(data), *_general(result), *_notes(data)]:
+        out.print(_item(sentence))
+    if int(data.attrs.get("failed_runs", 0)):
+        out.print(_item(f"Why runs failed: nipc status {study}"))
     out.print()
-    where = [("data", result.folder / "results.nc"), ("figures", result.folder / "summary.json")]
-    for label, path in where:
-        out.print(Text(f"{label:8} {path}"), soft_wrap=True)
-    if page is not None:
-        out.print(Text(f"{'page':8} {page}"), soft_wrap=True)
+    places = {"page": page, "data": result.folder / DATA, "summary": result.folder / SUMMARY}
+    for label, path in places.items():
+        if path is not None:
+            out.print(Text(f"{label:8} {path}"), soft_wrap=True)
+    end = "open the page in a browser; " if page else ""
+    out.print(Text(f"Next: {end}figures as files: nipc report {study} --figures"), soft_wrap=True)
+
+
+def _answers(data: xr.Dataset) -> Table:
+    """One row a quantity, of the end of the horizon."""
+    end = amount(float(reading.times(data)[-1]), reading.time_unit(data))
+    table = Table(box=None, header_style="bold", padding=(0, 1))
+    for head in (f"at {end}", "mean ± std", "stayed in box", "main driver", "trusted to"):
+        table.add_column(head.replace(THIN, " "), overflow="fold")
+    for row in rows(data):
+        name = row.quantity
+        mark = _mark(data, name)
+        mean, std = (reading.last(data, key, name) for key in ("mean", "std"))
+        stayed = reading.last(data, "survival_probability", name)
+        driver = reading.main_driver(data, name)
+        cells = [
+            name,
+            f"{with_spread(mean, std)} {row.unit}".rstrip() + mark,
+            "-" if np.isnan(stayed) else probability(stayed) + mark,
+            "-" if driver is None else f"{driver[0]} {percent(driver[1])}{mark}",
+            row.cells[-1].main,
+        ]
+        table.add_row(*(Text(cell.replace(THIN, " ")) for cell in cells))
+    for joint in reading.joints(data):
+        found = reading.joint_series(data, "joint_survival_probability", joint)
+        if found is not None:
+            mark = reading.trust(data, None).mark(float(reading.times(data)[-1]))
+            table.add_row(Text(joint), "", Text(probability(float(found[-1])) + mark))
+    return table
+
+
+def _mark(data: xr.Dataset, quantity: str) -> str:
+    trust = reading.trust(data, quantity)
+    return trust.mark(trust.end)
+
+
+def _spreading(data: xr.Dataset) -> list[str]:
+    """`Spreading: x bounded, energy diffusive.`"""
+    pairs = [(n, reading.text(data, "spreading_verdict", n)) for n in reading.quantities(data)]
+    told = [f"{name} {verdict}" for name, verdict in pairs if verdict]
+    return [f"Spreading: {', '.join(told)}."] if told else []
+
+
+def _general(result: Result) -> list[str]:
+    """Findings on the whole study; those on one quantity end with its trust horizon in brackets."""
+    return [text for text, clause in map(split, result.findings) if not clause]
+
+
+def _notes(data: xr.Dataset) -> list[str]:
+    return [str(note) for note in reading.listed(data, "notes") or []]
+
+
+def _item(sentence: str) -> Table:
+    table = Table.grid(padding=(0, 1))
+    table.add_row("-", Text(sentence))
+    return table

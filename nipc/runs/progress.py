@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import sys
 import time
 from typing import Protocol, TextIO
@@ -77,30 +78,40 @@ def duration(seconds: float) -> str:
 
 
 class Lines:
-    """A line at the start, one now and then, one at the end: for logs of batch queues."""
+    """Lines for the logs of batch queues: starts and ends, but of short batches only some.
+
+    A start is told when nothing was told for `every` seconds, an end when its start was or when
+    runs have failed.
+    """
 
     def __init__(self, out: TextIO | None = None, every: float = 10.0) -> None:
         self._out = sys.stderr if out is None else out
         self._every = every
+        self._last = -math.inf
 
     def start(self, label: str, total: int, reused: int) -> None:
         self._label, self._total = label, total
         self._rate = Rate(total - reused)
-        self._last = time.monotonic()
-        kept = f", {reused} kept from before" if reused else ""
-        self._say(f"{total} runs{kept}")
+        self._told = self._due()
+        if self._told:
+            kept = f", {reused} kept from before" if reused else ""
+            self._say(f"{total} runs{kept}")
 
     def advance(self, done: int, failed: int) -> None:
         self._rate.advance(done, failed)
-        if time.monotonic() - self._last >= self._every:
-            self._last = time.monotonic()
+        if self._due():
+            self._told = True
             self._say(f"{self._total - self._rate.left} of {self._total}, {self._rate}")
 
     def finish(self) -> None:
-        if self._rate.done:
+        if self._rate.failed or (self._told and self._rate.done):
             self._say(f"{self._total - self._rate.left} of {self._total} finished, {self._rate}")
 
+    def _due(self) -> bool:
+        return time.monotonic() - self._last >= self._every
+
     def _say(self, text: str) -> None:
+        self._last = time.monotonic()
         print(f"{self._label}: {text}", file=self._out, flush=True)
 
 

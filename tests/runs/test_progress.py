@@ -29,6 +29,18 @@ def test_lines_say_what_happened(tmp_path):
     )
 
 
+def test_a_chain_of_short_batches_does_not_flood_a_log():
+    out = io.StringIO()
+    lines = Lines(out, every=600.0)
+    for arc in range(50):
+        lines.start(f"arc {arc}", 8, 0)
+        lines.advance(8, 1 if arc == 30 else 0)
+        lines.finish()
+    told = out.getvalue().splitlines()
+    # the first start and its end, and the end of the batch in which a run failed
+    assert [line.split(":")[0] for line in told] == ["arc 0", "arc 0", "arc 30"]
+
+
 def test_a_second_start_says_what_is_kept(tmp_path):
     run_with(Lines(io.StringIO()), tmp_path, 4)
     out = io.StringIO()

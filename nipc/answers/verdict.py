@@ -22,8 +22,8 @@ def findings(dataset: xr.Dataset) -> list[str]:
     for view in views:
         if view.trust.index == 0:
             sentences.append(
-                f"Nothing can be said of {view.name} beyond the start: held-out direct runs differ from"
-                f" the expansion there. {view.trust.clause}"
+                f"Nothing can be said of {view.name} beyond the start: held-out direct runs differ"
+                f" from the expansion there. {view.trust.clause}"
             )
             continue
         parts = (_confinement, _spread, _law, _driver, _allowance, _nonlinear)

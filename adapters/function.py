@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from pathlib import Path
 from typing import Any
 
@@ -17,7 +18,7 @@ from nipc.adapters.reference import (
     load_function,
 )
 from nipc.arrays import FloatArray
-from nipc.errors import Ended, PropagatorError
+from nipc.errors import Ended, InputError, PropagatorError
 from nipc.problem.noise import Forcing
 from nipc.runs.propagator import AdapterContext, Batch, Propagator, Trajectories
 
@@ -60,6 +61,12 @@ class FunctionPropagator(Propagator):
     def __init__(self, settings: FunctionSettings, folder: Path) -> None:
         self.settings, self.folder = settings, folder
         self.vectorised = settings.batch
+
+    def __setstate__(self, state: dict[str, Any]) -> None:
+        # a worker imports the user's module as it starts, before any run's time limit counts
+        self.__dict__.update(state)
+        with contextlib.suppress(InputError):
+            load_function(self.folder, self.settings.function)
 
     def propagate(self, batch: Batch) -> Trajectories:
         function = load_function(self.folder, self.settings.function)

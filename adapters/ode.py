@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 from collections.abc import Callable
 from pathlib import Path
 from typing import Annotated, Any, Literal
@@ -71,6 +72,12 @@ class OdePropagator(Propagator):
     def __init__(self, settings: OdeSettings, folder: Path) -> None:
         self.settings, self.folder = settings, folder
         self.vectorised = settings.batch
+
+    def __setstate__(self, state: dict[str, Any]) -> None:
+        # a worker imports the user's module as it starts, before any run's time limit counts
+        self.__dict__.update(state)
+        with contextlib.suppress(InputError):
+            load_function(self.folder, self.settings.rhs)
 
     def propagate(self, batch: Batch) -> Trajectories:
         settings = self.settings

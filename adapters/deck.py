@@ -124,7 +124,8 @@ class Deck:
     def fill(self, shared: Mapping[str, str], own: Sequence[Mapping[str, str]]) -> str:
         """The file's text for these runs, plain."""
         if not self.file.repeat:
-            return _Plain(self.source).substitute(shared | own[0] if len(own) == 1 else shared)
+            words = {**shared, **own[0]} if len(own) == 1 else shared
+            return _Plain(self.source).substitute(words)
         cards = [_Plain(self.source).substitute({**shared, **words}) for words in own]
         head, tail = (_Plain(t).substitute(shared) for t in (self.file.head, self.file.tail))
         return head + "".join(cards) + tail

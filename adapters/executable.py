@@ -18,6 +18,7 @@ from nipc.adapters.forcing_grid import forcing_grid, grid_table
 from nipc.adapters.legs import by_legs
 from nipc.adapters.outputs import OutputTable, end_between
 from nipc.adapters.program import call, failure, files_digest, program_of
+from nipc.arrays import FloatArray
 from nipc.errors import InputError, PropagatorError
 from nipc.runs.propagator import AdapterContext, Batch, Propagator, Trajectories
 
@@ -147,8 +148,8 @@ class ExecutablePropagator(Propagator):
             "times": "\n".join(shown(t, "times") for t in times),
             "n_runs": str(len(batch)),
         }
-        tables = np.empty((len(batch), 0, 0))
-        grid = np.empty(0)
+        tables: FloatArray = np.empty((len(batch), 0, 0))
+        grid: FloatArray = np.empty(0)
         if settings.forcing is not None:
             grid = forcing_grid(batch.times[0], batch.times[-1], settings.forcing.step)
             tables = grid_table(batch.forcing, grid)
@@ -246,12 +247,13 @@ class ExecutablePropagator(Propagator):
                 found = output.read(self._target(folder, output.file), times, n, lost, scale)
             for i, rows in enumerate(found):
                 states[i, rows.first : rows.reach, places] = rows.values.T
-                reach[i] = min(reach[i], rows.reach)
+                reach[i] = min(int(reach[i]), rows.reach)
                 told[i] = min(told[i], np.inf if rows.lost is None else rows.lost)
         ended = np.full(n, np.nan)
-        for i in np.flatnonzero((reach < times.size) | (code != 0)):
-            ended[i] = end_between(times, int(reach[i]), told[i] if np.isfinite(told[i]) else None)
-            states[i] = until(states[i], times, ended[i])
+        for row in np.flatnonzero((reach < times.size) | (code != 0)):
+            end = told[row] if np.isfinite(told[row]) else None
+            ended[row] = end_between(times, int(reach[row]), end)
+            states[row] = until(states[row], times, ended[row])
         return Trajectories(states, ended)
 
     def fingerprint(self) -> str:

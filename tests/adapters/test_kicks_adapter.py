@@ -1,0 +1,246 @@
+"""Kicks between legs: convergence, closed forms of both calculi, axes, endings, wrong settings."""
+
+from textwrap import dedent
+
+import numpy as np
+import pytest
+from adapters_samples import build, context, one_by_one, oscillator, oscillator_batch
+
+from nipc.adapters import load_adapter
+from nipc.adapters.kick_axes import orbit_axis
+from nipc.adapters.kick_times import KickTimes
+from nipc.errors import InputError
+from nipc.problem.noise import Legendre, NoiseModel, Source
+from nipc.runs.propagator import Batch
+
+CODE = """
+    import numpy as np
+    def swing(x0, times, forcing, p):
+        assert forcing.names == ()
+        w, t = np.sqrt(p[0]), times - times[0]
+        c, s = np.cos(w * t), np.sin(w * t)
+        return np.stack([x0[0] * c + x0[1] / w * s, x0[1] * c - w * x0[0] * s], axis=1)
+    def swing_many(x0, times, forcing, p):
+        w, t = np.sqrt(p), times - times[0]
+        c, s = np.cos(w * t), np.sin(w * t)
+        return np.stack([x0[:, :1] * c + x0[:, 1:] / w * s, x0[:, 1:] * c - w * x0[:, :1] * s], 2)
+    def rest(x0, times, forcing, p):
+        return np.repeat(x0[:, None], len(times), axis=1)
+    def proportional(t, x, p):
+        return x * [1.0, 0.0]
+    def push(t, x, p):
+        return np.broadcast_to([0.0, 1.0], x.shape)
+    def until_two(x0, times, forcing, p):
+        ended = np.where(np.zeros(len(x0)) + times[-1] > 2.0, max(2.0, times[0]), np.nan)
+        states = np.repeat(x0[:, None], len(times), axis=1)
+        states[:, times > 2.0] = np.nan
+        return states, ended
+"""
+KICK = ({"source": "push1", "component": "v"},)
+
+
+@pytest.fixture
+def folder(tmp_path):
+    (tmp_path / "inner.py").write_text(dedent(CODE))
+    return tmp_path
+
+
+def kicked(folder, function="swing_many", kick=KICK, where=None, batch=True, **more):
+    inner = {"adapter": "function", "function": f"inner:{function}", "batch": batch}
+    return build("kicks", folder, where, propagator=inner, kick=kick, **more)
+
+
+def test_order_four_towards_the_forced_motion(folder):
+    """Two kicks a cell have two moments of the path: a linear motion errs by h^4."""
+    batch = oscillator_batch(6, times=2)
+    exact = oscillator(batch)
+    errors = [
+        np.abs(kicked(folder, legs=legs).propagate(batch).states - exact).max()
+        for legs in (8, 16, 32)
+    ]
+    rates = np.log2(np.array(errors[:-1]) / errors[1:])
+    np.testing.assert_allclose(rates, 4.0, atol=0.3)
+
+
+def test_single_kicks_are_of_order_two(folder):
+    """With an output time for each leg there is one kick, in the middle."""
+    errors = []
+    for times in (9, 17, 33):
+        batch = oscillator_batch(6, times=times)
+        found = kicked(folder, legs=times - 1).propagate(batch)
+        errors.append(np.abs(found.states - oscillator(batch)).max())
+    rates = np.log2(np.array(errors[:-1]) / errors[1:])
+    np.testing.assert_allclose(rates, 2.0, atol=0.2)
+
+
+def test_kicks_have_the_moments_of_the_path():
+    batch = oscillator_batch(3, terms=6)
+    plan = KickTimes.over(np.array([1.0, 2.0, 2.5, 4.0]), 5)
+    assert plan.edges.tolist() == [1.0, 2.0, 2.5, 3.25, 4.0]
+    assert plan.paired.tolist() == [True, False, True, True]
+    sizes = plan.sizes(batch.forcing)[:, :, 0]
+    assert sizes.shape == (3, 7)
+    np.testing.assert_allclose(plan.shares.sum(), 3.0)
+    nodes, weights = np.polynomial.legendre.leggauss(20)
+    for first, last, which in ((1.0, 2.0, slice(0, 2)), (3.25, 4.0, slice(5, 7))):
+        t = 0.5 * (first + last) + 0.5 * (last - first) * nodes
+        xi = batch.forcing.table(t)[:, :, 0] * weights * 0.5 * (last - first)
+        np.testing.assert_allclose(sizes[:, which].sum(axis=1), xi.sum(axis=1))
+        np.testing.assert_allclose(sizes[:, which] @ plan.times[which], xi @ t, atol=1e-12)
+
+
+def test_single_runs_and_batches_agree_and_outputs_lie_between_kicks(folder):
+    batch = oscillator_batch(4, times=7)
+    many = kicked(folder, legs=12).propagate(batch).states
+    single, _ = one_by_one(kicked(folder, "swing", batch=False, legs=12), batch)
+    np.testing.assert_allclose(single, many, rtol=0, atol=1e-14)
+    np.testing.assert_allclose(many, oscillator(batch), atol=2e-2)
+
+
+def test_legs_are_doubled_until_nothing_changes(folder):
+    batch = oscillator_batch(5, times=3)
+    exact = oscillator(batch)
+    free = kicked(folder, legs=1).inner.propagate(batch.take(slice(0, 5))).states
+    effect = np.abs(exact - free).max(axis=1)
+    for tolerance in (1e-2, 1e-4):
+        found = kicked(folder, tolerance=tolerance).propagate(batch)
+        error = np.abs(found.states - exact).max(axis=1) / effect
+        # second order: what is left is a third of the last change
+        assert error.max() < tolerance / 2
+        assert np.isnan(found.ended).all()
+
+
+def test_each_run_chooses_its_legs_by_itself(folder):
+    batch = oscillator_batch(5, times=3)
+    propagator = kicked(folder, tolerance=1e-3)
+    whole = propagator.propagate(batch).states
+    for i in range(5):
+        alone = propagator.propagate(batch.take(slice(i, i + 1))).states
+        np.testing.assert_allclose(alone[0], whole[i], rtol=0, atol=1e-14)
+
+
+@pytest.mark.parametrize("ito", [True, False])
+def test_multiplicative_noise_in_both_readings(ito, folder):
+    """dx = s x dW: x exp(s W - s^2 t / 2) in Ito's sense, x exp(s W) in Stratonovich's.
+
+    Closed forms of geometric Brownian motion (Oksendal, Stochastic Differential Equations, ch. 5).
+    """
+    batch = oscillator_batch(5, times=3, intensity=0.4)
+    where = context(folder, ito=("push1",) if ito else ())
+    kick = ({"source": "push1", "function": "inner:proportional"},)
+    found = kicked(folder, "rest", kick, where, legs=40).propagate(batch).states[:, :, 0]
+    path = np.cumsum(batch.forcing.increments(batch.times)[:, :, 0], axis=1)
+    drift = -0.5 * 0.4**2 * (batch.times[1:] - batch.times[0]) if ito else 0.0
+    exact = batch.states[:, :1] * np.exp(path + drift)
+    np.testing.assert_allclose(found[:, 1:], exact, rtol=1e-6)
+
+
+def test_a_source_without_a_kick_goes_to_the_propagator_itself(tmp_path):
+    (tmp_path / "inner.py").write_text(
+        "import numpy as np\n"
+        "def rates(t, x, xi, p):\n"
+        "    return np.stack([x[:, 1], -p[:, 0] * x[:, 0] + xi[:, 0]], axis=1)\n"
+    )
+    batch = oscillator_batch(3, sources=2)
+    where = context(tmp_path, sources=("push1", "push2"))
+    inner = {"adapter": "ode", "rhs": "inner:rates", "batch": True, "method": "rk8", "step": 0.1}
+    kick = ({"source": "push2", "component": "v", "scale": 0.0},)
+    found = build("kicks", tmp_path, where, propagator=inner, kick=kick, legs=3).propagate(batch)
+    np.testing.assert_allclose(found.states, oscillator(batch), atol=1e-9)
+
+
+def test_runs_that_end_between_kicks(folder):
+    batch = oscillator_batch(3)
+    found = kicked(folder, "until_two", legs=5).propagate(batch)
+    assert found.ended.tolist() == [2.0] * 3
+    assert np.isfinite(found.states[:, :, 0]).tolist() == [[True] * 3 + [False] * 4] * 3
+
+
+def test_axes_of_an_orbit():
+    r, v = np.array([[0.0, 2.0, 0.0]]), np.array([[-3.0, 1.0, 0.0]])
+    assert orbit_axis("radial", r, v).tolist() == [[0, 1, 0]]
+    assert orbit_axis("normal", r, v).tolist() == [[0, 0, 1]]
+    assert orbit_axis("transverse", r, v).tolist() == [[-1, 0, 0]]
+    np.testing.assert_allclose(orbit_axis("velocity", r, v), v / np.sqrt(10))
+    # in a plane; and the other way round, transverse follows the motion
+    assert orbit_axis("transverse", r[:, :2], v[:, :2]).tolist() == [[-1, 0]]
+    assert orbit_axis("transverse", r[:, :2], -v[:, :2]).tolist() == [[1, 0]]
+    assert orbit_axis("transverse", r, -v).tolist() == [[1, 0, 0]]
+
+
+def test_clohessy_wiltshire_covariance(tmp_path):
+    """Covariance of the forced relative motion, within 1 % with 8 legs a quarter period.
+
+    Clohessy & Wiltshire (1960); the forced covariance by Van Loan's block exponential (1978), with
+    white accelerations along both axes; here through the mean square over the germ, in closed form.
+    """
+    from scipy.linalg import expm
+
+    n = 1.0
+    a = np.array([[0, 0, 1, 0], [0, 0, 0, 1], [3 * n**2, 0, 0, 2 * n], [0, 0, -2 * n, 0]], float)
+    (tmp_path / "cw.py").write_text(
+        "import numpy as np\nfrom scipy.linalg import expm\n"
+        f"A = np.array({a.tolist()})\n"
+        "def move(x0, times, forcing, p):\n"
+        "    return np.stack([x0 @ expm(A * (t - times[0])).T for t in times], axis=1)\n"
+    )
+    terms, end = 20, np.pi / 2
+    model = NoiseModel(
+        (Source("radial", "", 0.7), Source("along", "", 0.4)), (Legendre(terms),) * 2, 0.0, end
+    )
+    germ = np.eye(2 * terms)  # the motion is linear: unit germs give the covariance exactly
+    batch = Batch(np.zeros((2 * terms, 4)), np.array([0.0, end]), model.realise(germ), germ[:, :0])
+    where = context(tmp_path, ("x", "y", "vx", "vy"), (), ("radial", "along"))
+    kick = ({"source": "radial", "component": "vx"}, {"source": "along", "component": "vy"})
+    inner = {"adapter": "function", "function": "cw:move", "batch": True}
+    found = build("kicks", tmp_path, where, propagator=inner, kick=kick, legs=8).propagate(batch)
+    covariance = found.states[:, -1].T @ found.states[:, -1]
+    b = np.zeros((4, 2))
+    b[2, 0], b[3, 1] = 0.7, 0.4
+    block = np.zeros((8, 8))
+    block[:4, :4], block[:4, 4:], block[4:, 4:] = -a, b @ b.T, a.T
+    big = expm(block * end)
+    exact = big[4:, 4:].T @ big[:4, 4:]
+    scale = np.sqrt(np.outer(np.diag(exact), np.diag(exact)))
+    assert np.abs(covariance - exact).max() > 0
+    np.testing.assert_allclose(covariance / scale, exact / scale, atol=0.01)
+
+
+@pytest.mark.parametrize(
+    ("change", "said"),
+    [
+        ({"kick": ({"source": "wind", "component": "v"},)}, "there is no noise source 'wind'"),
+        ({"kick": ({"source": "push1", "component": "y"},)}, "'y' is no state component"),
+        ({"kick": KICK + KICK}, "has two kicks"),
+        ({"propagator": {"adapter": "rocket"}}, "no adapter 'rocket'"),
+        ({"propagator": {"adapter": "function"}}, r"propagator\.propagator: function: Field"),
+        (
+            {"kick": ({"source": "push1", "function": "gone:f"},)}, "there is no module 'gone'",
+        ),
+    ],
+)  # fmt: skip
+def test_what_cannot_work_is_refused(change, said, folder):
+    adapter = load_adapter("kicks")
+    inner = {"adapter": "function", "function": "inner:swing"}
+    settings = adapter.Settings.model_validate({"propagator": inner, "kick": KICK} | change)
+    with pytest.raises(InputError, match=said):
+        adapter.check(settings, context(folder))
+
+
+@pytest.mark.parametrize(
+    ("kick", "said"),
+    [
+        ({}, "give one of component, axis, function"),
+        ({"component": "v", "axis": "radial"}, "give one of"),
+        ({"axis": "radial", "velocity": ("x", "v")}, "needs position"),
+        (
+            {"axis": "normal", "position": ("x", "y"), "velocity": ("u", "v")},
+            "has no normal axis",
+        ),
+        ({"component": "v", "size": 3}, "size"),
+    ],
+)
+def test_kicks_that_cannot_be(kick, said):
+    inner = {"adapter": "function", "function": "inner:swing"}
+    with pytest.raises(ValueError, match=said):
+        load_adapter("kicks").Settings(propagator=inner, kick=({"source": "push1", **kick},))

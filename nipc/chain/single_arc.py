@@ -14,11 +14,15 @@ from nipc.chain.plan import noise_terms
 from nipc.errors import FitError, InputError
 from nipc.expansion import (
     Expansion,
+    LatinHypercube,
     ProductBasis,
+    SobolDesign,
     christoffel_weights,
     hyperbolic,
     least_squares,
     near_optimal_subset,
+    quantiles,
+    sparse_grid,
 )
 from nipc.problem.germ import Germ
 from nipc.problem.noise.projection import restrict
@@ -94,8 +98,6 @@ def design_of(study: Study, germ: Germ) -> Design:
     nodes: FloatArray
     weights: FloatArray
     if settings.kind == "sparse-grid":
-        from nipc.expansion.designs import sparse_grid
-
         grid = sparse_grid(germ.distributions(), settings.level)
         nodes, weights = grid.nodes, np.ones(grid.nodes.shape[0])
         words = f"sparse grid of level {settings.level}"
@@ -105,10 +107,9 @@ def design_of(study: Study, germ: Germ) -> Design:
         nodes, weights = candidates[subset.rows], subset.weights
         words = "near D-optimal subset"
     else:
-        from nipc.expansion import designs
-
-        make: Any = {"sobol": designs.sobol, "latin-hypercube": designs.latin_hypercube}
-        nodes = make[settings.kind](germ.distributions(), count, study.seed)
+        family = SobolDesign if settings.kind == "sobol" else LatinHypercube
+        points = family(germ.size, study.seed).start(count)
+        nodes = quantiles(points, germ.distributions())
         weights = np.ones(count)
         words = {"sobol": "Sobol' points", "latin-hypercube": "Latin hypercube"}[settings.kind]
     nodes, first = np.unique(nodes, axis=0, return_index=True)

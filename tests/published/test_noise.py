@@ -1,8 +1,9 @@
 """Noise bases against the theory of the Wiener process.
 
 Sources: Loeve (1978), Probability Theory II, and Ghanem & Spanos (1991), Stochastic Finite
-Elements, for the Karhunen-Loeve expansion of the Wiener process (eigenvalues T^2 / ((k - 1/2)^2 pi^2), from
-memory); Uhlenbeck & Ornstein (1930) for the Gauss-Markov process; scipy's quadrature throughout.
+Elements, for the Karhunen-Loeve expansion of the Wiener process (eigenvalues
+T^2 / ((k - 1/2)^2 pi^2), from memory); Uhlenbeck & Ornstein (1930) for the Gauss-Markov process;
+scipy's quadrature throughout.
 """
 
 from __future__ import annotations

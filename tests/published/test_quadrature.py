@@ -12,7 +12,7 @@ import chaospy
 import numpy as np
 import pytest
 
-from nipc.expansion.designs import latin_hypercube, sobol, sparse_grid
+from nipc.expansion import LatinHypercube, SobolDesign, quantiles, sparse_grid
 from nipc.expansion.recurrence import hermite, legendre
 
 # 25.10, weight exp(-x^2): positive abscissas and weights
@@ -52,7 +52,7 @@ def test_gauss_legendre_nodes(count):
     assert 2 * weights[keep] == pytest.approx(printed, abs=1e-12)
 
 
-@pytest.mark.parametrize("d", [1, 2, 4, 14])
+@pytest.mark.parametrize("d", [2, 4, 14])
 def test_sparse_grid_node_counts(d):
     """Level 1: the centre and two nodes an axis. Level 2: also two more an axis and 4 a pair."""
     normal = [chaospy.Normal(0, 1)] * d
@@ -85,6 +85,8 @@ def test_sparse_grid_agrees_with_chaospy():
 
 def test_quasi_random_nodes_can_be_extended_and_stratify():
     laws = [chaospy.Normal(0, 1), chaospy.Uniform(0, 2)]
-    assert np.array_equal(sobol(laws, 64, 3)[:32], sobol(laws, 32, 3))
-    cells = np.floor(latin_hypercube(laws, 50, 3)[:, 1] / 2 * 50)
+    first = SobolDesign(2, 3).start(32)
+    assert np.array_equal(SobolDesign(2, 3).start(64)[:32], first)
+    nodes = quantiles(LatinHypercube(2, 3).start(50), laws)
+    cells = np.floor(nodes[:, 1] / 2 * 50)
     assert sorted(cells) == list(range(50))

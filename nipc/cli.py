@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from nipc.errors import InputError, NipcError
+from nipc.errors import InputError, NipcError, RunsError
 from nipc.starter import Flavour
 
 if TYPE_CHECKING:
@@ -109,7 +109,11 @@ def run(
     if jobs == 0:
         raise InputError("--jobs 0: give 1 or more, or -1 for one a processor")
     loaded = load_study(study)
-    result = run_study(loaded, n_jobs=jobs, progress=_progress(quiet or as_json))
+    try:
+        result = run_study(loaded, n_jobs=jobs, progress=_progress(quiet or as_json))
+    except RunsError as error:
+        remedy = f"Mend it and start again; all reasons so far: nipc status {study}"
+        raise RunsError(f"{error}\n{remedy}") from error
     written = report(result) if page else None
     if as_json:
         print(json.dumps(result.summary))
@@ -192,7 +196,7 @@ def main() -> None:
         if isinstance(stream, TextIOWrapper):
             stream.reconfigure(errors="replace")  # a terminal that cannot show a letter
     try:
-        sys.exit(app(standalone_mode=False) or 0)
+        sys.exit(app(prog_name="nipc", standalone_mode=False) or 0)
     except NipcError as error:
         print(f"nipc: {error}", file=sys.stderr)
         sys.exit(error.exit_code)

@@ -16,9 +16,9 @@ tolerance = 0.02               # how far held-out direct runs may differ, over t
 [propagator]                   # the black box
 {propagator}
 [clock]
-end = 12.0
+end = 6.0
 unit = "s"
-outputs = 61                   # how many evenly spaced times, or a list of them
+outputs = 31                   # how many evenly spaced times, or a list of them
 period = 6.283                 # a characteristic period: tells how many noise terms are needed
 
 [[state]]                      # one table a state component, in the propagator's order

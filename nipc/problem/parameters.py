@@ -12,7 +12,7 @@ Finite = Annotated[float, Field(allow_inf_nan=False)]
 
 
 class _Law(BaseModel):
-    model_config = ConfigDict(extra="forbid", frozen=True)
+    model_config = ConfigDict(extra="forbid", frozen=True, strict=True)
 
     name: Name
     unit: str = ""

@@ -21,7 +21,8 @@ Share = Annotated[float, Field(gt=0, lt=1)]
 
 
 class _Section(BaseModel):
-    model_config = ConfigDict(extra="forbid", frozen=True)
+    # strict: 0.1 in quotes or `true` where a number belongs is a mistake, not a number
+    model_config = ConfigDict(extra="forbid", frozen=True, strict=True)
 
 
 class PropagatorSettings(BaseModel):

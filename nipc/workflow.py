@@ -27,6 +27,7 @@ if TYPE_CHECKING:
     from nipc.chain.horizon import Horizon
     from nipc.runs.engine import Engine
     from nipc.runs.outcomes import Outcomes
+    from nipc.runs.probe import ProbeReport
     from nipc.runs.progress import Progress
     from nipc.runs.propagator import AdapterContext, Propagator
 
@@ -179,6 +180,38 @@ def _chain_plan(study: Study) -> Plan:
             f"{(design + check) / arcs:.0f} run-equivalents if every arc is nearly linear; where "
             "held-out runs disagree the degree is raised and more runs are made.",
         ),
+    )
+
+
+def probe(study: Study) -> ProbeReport:
+    """A handful of runs that find the usual mistakes: see `nipc.runs.probe`.
+
+    They cover the first two arcs of a chain, or the whole of a single arc.
+    """
+    from nipc.chain.horizon import cell_count
+    from nipc.chain.single_arc import generator, run_times
+    from nipc.problem.germ import Germ
+    from nipc.runs.probe import probe as ask
+    from nipc.runs.propagator import Batch
+
+    times, _ = run_times(study)
+    arcs = cell_count(study)
+    if arcs > 1:
+        edges = np.linspace(study.clock.start, study.clock.end, arcs + 1)[:3]
+        inner = times[(times > edges[0]) & (times < edges[2])]
+        times = np.unique(np.concatenate([edges, inner]))
+    else:
+        times = times[np.unique(np.linspace(0, times.size - 1, 9).round().astype(int))]
+    terms = noise_terms(study, float(times[-1] - times[0]))
+    germ = Germ.of(study, terms, float(times[0]), float(times[-1]))
+    nodes = germ.sample(generator(study, "probe"), 4)
+    batch = Batch(germ.states(nodes), times, germ.forcing(nodes), germ.parameters(nodes))
+    return ask(
+        build_propagator(study),
+        batch,
+        study.state_names,
+        tolerance=study.tolerance,
+        time_limit=study.runs.time_limit,
     )
 
 

@@ -8,7 +8,7 @@ if TYPE_CHECKING:
     from nipc.answers.result import Result, load_result
     from nipc.errors import Ended, NipcError
     from nipc.problem.study import Study
-    from nipc.workflow import load_study, plan, report, run
+    from nipc.workflow import load_study, plan, probe, report, run
 
 __version__ = "0.1.0"
 
@@ -20,6 +20,7 @@ _HOMES = {
     "load_result": "nipc.answers.result",
     "load_study": "nipc.workflow",
     "plan": "nipc.workflow",
+    "probe": "nipc.workflow",
     "report": "nipc.workflow",
     "run": "nipc.workflow",
 }
@@ -32,6 +33,7 @@ __all__ = [
     "load_result",
     "load_study",
     "plan",
+    "probe",
     "report",
     "run",
 ]

@@ -22,7 +22,8 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 80},
     help="Tell how noise and an uncertain start spread a motion, by running your own propagator "
-    "as a black box.\n\nBegin with `nipc new FOLDER`, then go on in this order: check, plan, run.",
+    "as a black box.\n\nBegin with `nipc new FOLDER`, then go on in this order: check, plan, "
+    "probe, run.",
 )
 
 StudyFile = Annotated[
@@ -85,7 +86,32 @@ def plan(study: StudyFile, as_json: AsJson = False) -> None:
         print(json.dumps(made.as_dict()))
         return
     show_plan(console(), made)
-    print(f"\nNext: nipc run {study} --jobs {os.cpu_count() or 1}")
+    print(f"\nNext: nipc probe {study}, then nipc run {study} --jobs {os.cpu_count() or 1}")
+
+
+@app.command()
+def probe(study: StudyFile, as_json: AsJson = False) -> None:
+    """Try your propagator with a handful of runs before a night of them.
+
+    Tells the time of a run, whether it gives the same twice, whether the
+    noise is felt, whether a restart from the middle goes on as an undisturbed
+    run does, and how many digits its output carries. This runs the program
+    that the study names. The exit code is 1 when something needs a look.
+    """
+    from dataclasses import asdict
+
+    from nipc.terminal import console, show_probe
+    from nipc.workflow import load_study
+    from nipc.workflow import probe as make_probe
+
+    found = make_probe(load_study(study))
+    if as_json:
+        print(json.dumps({"good": found.good, **asdict(found)}))
+    else:
+        show_probe(console(), found)
+        print(f"\nNext: nipc run {study}" if found.good else "\nLook at these before running.")
+    if not found.good:
+        raise typer.Exit(1)
 
 
 @app.command()
@@ -200,6 +226,8 @@ def main() -> None:
     except NipcError as error:
         print(f"nipc: {error}", file=sys.stderr)
         sys.exit(error.exit_code)
+    except typer.Exit as left:
+        sys.exit(left.exit_code)
     except (KeyboardInterrupt, typer.Abort):
         print(
             "nipc: stopped; what is finished is kept, and the same command goes on from there",

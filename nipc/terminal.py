@@ -17,6 +17,7 @@ from nipc.problem.study import NoiseSettings, QuantitySettings, Study
 from nipc.report import reading
 from nipc.report.headline import rows, split
 from nipc.report.numbers import THIN, amount, percent, probability, with_spread
+from nipc.runs.probe import ProbeReport
 
 MARKS = {
     "†": "† past the trust horizon of single paths, the distribution still agrees",
@@ -119,6 +120,16 @@ def _losses(plan: Plan) -> Table:
     table.caption = "* chosen; response: the velocity of an oscillator of the study's period"
     table.caption_justify = "left"
     return table
+
+
+def show_probe(out: Console, report: ProbeReport) -> None:
+    """What a probe found, topic by topic."""
+    table = Table.grid(padding=(0, 1))
+    for finding in report.findings:
+        mark = Text("good") if finding.good else Text("LOOK", style="bold")
+        told = f"{finding.topic}: {finding.found} {finding.advice}".rstrip()
+        table.add_row(mark, Text(told))
+    out.print(table)
 
 
 def show_result(out: Console, result: Result, page: Path | None, study: Path) -> None:

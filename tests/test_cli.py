@@ -10,7 +10,7 @@ import pytest
 
 import nipc
 
-COMMANDS = ["check", "plan", "run", "report", "status", "new"]
+COMMANDS = ["check", "plan", "probe", "run", "report", "status", "new"]
 
 
 def widest(text: str, *paths: object) -> int:
@@ -108,6 +108,24 @@ def test_what_a_run_shows(command, tmp_path):
     shown = command("status", study).out
     assert "nobody at work" in shown
     assert widest(shown) <= 80
+
+
+def test_a_probe_finds_noise_that_is_not_heard(command, tmp_path):
+    command("new", tmp_path / "a", "--flavour", "ode")
+    study, motion = tmp_path / "a" / "study.toml", tmp_path / "a" / "motion.py"
+    done = command("probe", study)
+    assert done.code == 0, done.out
+    assert "good noise force: " in done.out
+    assert "LOOK" not in done.out
+    assert widest(done.out, tmp_path) <= 80
+    text = motion.read_text()
+    assert "+ xi[0]" in text
+    motion.write_text(text.replace("+ xi[0]", ""))
+    done = command("probe", study, "--json")
+    assert done.code == 1
+    found = json.loads(done.out)
+    assert not found["good"]
+    assert [f["topic"] for f in found["findings"] if not f["good"]] == ["noise force"]
 
 
 def test_new_does_not_overwrite(command, tmp_path):

@@ -1,0 +1,70 @@
+"""Noise histories by cells: any cutting into arcs sees the same Brownian paths."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from nipc.chain.history import BLOCK, NoiseHistory
+from nipc.problem.noise import BASES, Legendre, Source
+
+WHITE, COLOURED = Source("w", "", 1.0), Source("g", "", 2.0, "gauss-markov", 0.5)
+
+
+def history(cell_terms: int = 8) -> NoiseHistory:
+    edges = np.array([0.0, 1.0, 2.5, 3.0, 4.0])
+    return NoiseHistory(5, ("a", "a"), (WHITE, COLOURED), edges, cell_terms, np.ones(2))
+
+
+def test_increments_over_an_arc_are_the_sums_of_its_cells():
+    paths = history()
+    arc = paths.white(0, Legendre(6), 0, 4, 0, 100)
+    widths = np.diff(paths.edges)
+    cells = sum(np.sqrt(w) * paths.cell(0, k, 0, 100, 8)[0] for k, w in enumerate(widths))
+    assert 2.0 * arc[:, 0] == pytest.approx(cells, abs=1e-12)
+
+
+@pytest.mark.parametrize("name", sorted(BASES))
+def test_coefficients_are_standard_and_independent(name):
+    """4,096 members: a covariance entry has standard error 1/64 (variance 1/45): 4.5 of them."""
+    drawn = history().white(0, BASES[name](5), 0, 4, 0, BLOCK)
+    assert np.cov(drawn.T) == pytest.approx(np.eye(5), abs=0.1)
+
+
+def test_members_and_rows_do_not_depend_on_how_many_are_asked_for():
+    paths = history()
+    few = paths.white(0, Legendre(3), 1, 2, 7, 10)
+    assert np.array_equal(few, paths.white(0, Legendre(6), 1, 2, 7, 50)[:10, :3])
+
+
+def test_streams_and_scales():
+    paths = history()
+    other = paths.with_stream(1, "b")
+    assert np.array_equal(paths.cell(0, 0, 0, 9, 3), other.cell(0, 0, 0, 9, 3))
+    assert not np.allclose(paths.cell(1, 0, 0, 9, 3), other.cell(1, 0, 0, 9, 3))
+    half = paths.scaled(np.array([0.5, 1.0]))
+    arc = Legendre(4)
+    assert half.white(0, arc, 0, 3, 0, 9) == pytest.approx(0.5 * paths.white(0, arc, 0, 3, 0, 9))
+
+
+def test_carried_values_keep_their_law():
+    """Stationary, with correlation exp(-h/tau) across each cell; 4.5 standard errors of 1/45."""
+    paths = history(cell_terms=2)
+    now = paths.initial(1, 0, BLOCK)
+    for cell, width in enumerate(np.diff(paths.edges)):
+        after = paths.carry(1, now, cell, cell + 1, 0)
+        assert np.var(after) == pytest.approx(1.0, abs=0.1)
+        assert np.mean(now * after) == pytest.approx(np.exp(-width / 0.5), abs=0.075)
+        now = after
+    # the kernel times the noise: within one cell the end value is what its coefficients say
+    rich = history(cell_terms=30)
+    start = np.zeros(50)
+    gains = np.sqrt(2 / 0.5) * np.array(
+        [
+            np.trapezoid(np.exp(-(1 - t) / 0.5) * f, t)
+            for t in [np.linspace(0, 1, 20_001)]
+            for f in Legendre(30).values(t)
+        ]
+    )
+    drawn = rich.cell(1, 0, 0, 50, 30)
+    assert rich.carry(1, start, 0, 1, 0) == pytest.approx(gains @ drawn, abs=1e-4)

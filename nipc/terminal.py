@@ -188,10 +188,10 @@ def _mark(data: xr.Dataset, quantity: str) -> str:
 
 
 def _spreading(data: xr.Dataset) -> list[str]:
-    """`Spreading: x bounded, energy diffusive.`"""
+    """`Spreading of x: bounded; of energy: diffusive.`"""
     pairs = [(n, reading.text(data, "spreading_verdict", n)) for n in reading.quantities(data)]
-    told = [f"{name} {verdict}" for name, verdict in pairs if verdict]
-    return [f"Spreading: {', '.join(told)}."] if told else []
+    told = [f"of {name}: {verdict}" for name, verdict in pairs if verdict not in ("", "nan")]
+    return [f"Spreading {'; '.join(told)}."] if told else []
 
 
 def _general(result: Result) -> list[str]:

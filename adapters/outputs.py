@@ -26,7 +26,7 @@ class OutputTable(BaseModel):
     whose time_column agrees are taken; "final", one, the end of the run (the program is then called
     from one output time to the next). `first_row`: the first of them is the start. In a batch the
     rows come run after run, or `run_column` numbers them from 1. `short_is_lost`: a run whose rows
-    stop early ended there for a physical reason.
+    stop early ended there for a physical reason; with first_row, none at all is a failure.
     """
 
     model_config = ConfigDict(extra="forbid", frozen=True)
@@ -97,11 +97,12 @@ class OutputTable(BaseModel):
                 )
             parts = [np.flatnonzero(numbers == k) for k in range(1, runs + 1)]
         first = times.size - wanted.size
-        short = lost or self.short_is_lost
         result = []
         for k, part in enumerate(parts, start=1):
             name = path.name if runs == 1 else f"{path.name}, run {k}"
             own = None if stamps is None else stamps[part]
+            # a table without even its start tells of a program that failed, not of a loss
+            short = lost or (self.short_is_lost and (first > 0 or part.size > 0))
             result.append(self._pick(name, values[part], own, wanted, times, short, first))
         return result
 
@@ -119,6 +120,12 @@ class OutputTable(BaseModel):
         )  # fmt: skip
         values, rest = rows[:, : len(self.columns)], rows[:, len(self.columns) :]
         stamps = (rest[:, 0] - scale[0]) / scale[1] if self.time_column is not None else None
+        # NaN compares as neither near nor far, and argmin takes it for the nearest
+        if stamps is not None and not np.isfinite(stamps).all():
+            row = int(np.argmin(np.isfinite(stamps)))
+            raise PropagatorError(
+                f"{path.name}, row {row + 1}: its time is {rest[row, 0]:g}; a number is expected"
+            )
         return values, stamps, rest[:, -1] if self.run_column is not None else None
 
     def _pick(

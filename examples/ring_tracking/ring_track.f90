@@ -1,12 +1,13 @@
 ! RING_TRACK: tracks one particle through a small storage ring, turn by turn.
 ! An invented machine and program, written as such programs are: namelist in, tables in and out.
 !
-! The ring is one linear turn of phase advance 2 pi nu and a thin sextupole. In normalised
-! coordinates (x, p) a turn is
-!     p <- p + kick(t) + s x**2           sextupole and dipole noise at the end of the turn
-!     (x, p) <- rotation by 2 pi (nu + ripple(t))
-! with kick and ripple read from a table of time (in turns) and interpolated linearly, averaged
-! over the turn as ten slices would see them. The particle is lost beyond the aperture.
+! The ring is one linear turn of phase advance 2 pi nu, cut into ten slices, and a thin sextupole
+! of strength s at its end. In normalised coordinates (x, p), with t the middle of a slice,
+!     ten times a turn:  p <- p + kick(t) / 10,  (x, p) <- rotation by 2 pi (nu + ripple(t)) / 10
+!     once a turn:       p <- p + s x**2
+! kick and ripple are read from a table of time (in turns) and interpolated linearly. The particle is
+! lost when it is beyond the aperture at the end of a turn. Rows are printed every so many whole
+! turns, and a run may start at any whole turn.
 program ring_track
   implicit none
   integer, parameter :: dp = kind(1.0d0)

@@ -11,6 +11,7 @@ import numpy as np
 import pytest
 
 import nipc
+from nipc.errors import PropagatorError
 from nipc.problem.germ import Germ
 from nipc.runs.propagator import Batch
 from nipc.workflow import build_propagator
@@ -57,6 +58,33 @@ def test_a_run_is_the_map_to_rounding(ring):
     batch = Batch(np.array([[0.12, 0.01]]), times, forcing, np.empty((1, 0)))
     states = build_propagator(study).propagate(batch).states[0]
     assert states == pytest.approx(tracked(0.12, 0.01, forcing, 5), abs=1e-12)
+
+
+@needs_fortran
+def test_a_run_cut_into_arcs_is_the_run_in_one(ring):
+    """What a chain rests on: the deck's numbers and the forcing table restart it to rounding."""
+    study = nipc.load_study(ring / "study.toml")
+    germ = Germ.of(study, (4, 2), 0.0, 20.0)
+    forcing = germ.noise.realise(np.random.default_rng(5).standard_normal((1, germ.noise.size)))
+    propagator = build_propagator(study)
+    times, start = np.arange(0.0, 21.0, 5.0), np.array([[0.12, 0.01]])
+    whole = propagator.propagate(Batch(start, times, forcing, np.empty((1, 0)))).states[0]
+    cut = [start]
+    for k in range(4):
+        arc = Batch(cut[-1], times[k : k + 2], forcing, np.empty((1, 0)))
+        cut.append(propagator.propagate(arc).states[0, -1:])
+    # errors of rounding grow with the 20 turns at most: 200 slices of 1e-16 each, times ten
+    assert np.concatenate(cut) == pytest.approx(whole, abs=2e-13)
+
+
+@needs_fortran
+def test_output_times_that_are_no_whole_turns_are_refused(ring):
+    study = nipc.load_study(ring / "study.toml")
+    germ = Germ.of(study, (4, 2), 0.0, 5.0)
+    forcing = germ.noise.realise(np.zeros((1, germ.noise.size)))
+    batch = Batch(np.array([[0.1, 0.0]]), np.array([0.0, 2.5, 5.0]), forcing, np.empty((1, 0)))
+    with pytest.raises(PropagatorError, match=r"row 2: its time is 2; 2\.5 is expected"):
+        build_propagator(study).propagate(batch)
 
 
 @needs_fortran

@@ -253,7 +253,9 @@ def run(
     ):
         ledger.expect(forecast.total_runs)
         solved = (_one_arc if study.chain.arcs == 1 else _many_arcs)(study, engine, quantities)
-        notes = [*ledger.notes, *engine.notes, *solved.notes, *forecast.notes]
+        # what a chain's plan says of its runs is a forecast, and the arcs have told since
+        told = forecast.notes if study.chain.arcs == 1 else ()
+        notes = [*ledger.notes, *engine.notes, *solved.notes, *told]
     attributes = _provenance(study, solved.outcomes, began, n_jobs) | {
         "run_equivalents": solved.cost,
         "notes": json.dumps(notes),

@@ -251,7 +251,8 @@ def run(
             backend=backend,
         ) as engine,
     ):
-        ledger.expect(forecast.total_runs)
+        if study.chain.arcs == 1:  # how many runs a chain takes is only known arc by arc
+            ledger.expect(forecast.total_runs)
         solved = (_one_arc if study.chain.arcs == 1 else _many_arcs)(study, engine, quantities)
         # what a chain's plan says of its runs is a forecast, and the arcs have told since
         told = forecast.notes if study.chain.arcs == 1 else ()

@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     from nipc.answers.result import Result
     from nipc.answers.table import ResultTable
     from nipc.chain.horizon import Horizon
+    from nipc.problem.germ import Germ
     from nipc.runs.engine import Engine
     from nipc.runs.outcomes import Outcomes
     from nipc.runs.probe import ProbeReport
@@ -125,6 +126,8 @@ def plan(study: Study) -> Plan:
     if study.chain.arcs != 1:
         return _chain_plan(study)
     germ = germ_of(study)
+    if study.expansion.degree == "auto":
+        return _open_plan(study, germ)
     design = design_of(study, germ)
     terms = noise_terms(study, study.clock.length)
     runs = design.nodes.shape[0]
@@ -146,6 +149,32 @@ def plan(study: Study) -> Plan:
         study.budget,
         basis_losses(study, terms, study.clock.length),
         tuple(notes),
+    )
+
+
+def _open_plan(study: Study, germ: Germ) -> Plan:
+    """A design that is enriched until the tolerance is kept: the most that it may take."""
+    from nipc.chain.single_arc import auto_budget
+
+    terms = noise_terms(study, study.clock.length)
+    most = auto_budget(study)
+    if most < 2 * germ.size + 2:
+        raise InputError(
+            f"the budget leaves {most} runs for a design in {germ.size} germ variables; at least "
+            f"{2 * germ.size + 2} are needed: raise the budget or give fewer noise terms"
+        )
+    return Plan(
+        study.title,
+        group_sizes(germ),
+        1,
+        germ.size + 1,
+        "enriched until the tolerance is kept",
+        most,
+        study.check.runs,
+        most + study.check.runs,
+        study.budget,
+        basis_losses(study, terms, study.clock.length),
+        ("The runs are the most that may be made; they end when the error keeps the tolerance.",),
     )
 
 
@@ -251,7 +280,9 @@ def run(
             backend=backend,
         ) as engine,
     ):
-        if study.chain.arcs == 1:  # how many runs a chain takes is only known arc by arc
+        if (
+            study.chain.arcs == 1 and study.expansion.degree != "auto"
+        ):  # how many runs a chain takes is only known arc by arc
             ledger.expect(forecast.total_runs)
         solved = (_one_arc if study.chain.arcs == 1 else _many_arcs)(study, engine, quantities)
         # what a chain's plan says of its runs is a forecast, and the arcs have told since

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -14,11 +15,13 @@ from nipc.chain.plan import noise_terms
 from nipc.errors import FitError, InputError
 from nipc.expansion import (
     Expansion,
+    Fit,
     LatinHypercube,
     ProductBasis,
     SobolDesign,
-    christoffel_weights,
+    enrich,
     hyperbolic,
+    least_angle,
     least_squares,
     near_optimal_subset,
     quantiles,
@@ -32,8 +35,8 @@ from nipc.runs.engine import Engine
 from nipc.runs.outcomes import Outcomes
 from nipc.runs.propagator import Batch
 
-AUTO_DEGREES = (1, 2, 3, 4, 5)
 AUTO_RUNS = 600
+AUTO_BATCH = 8  # not the number of workers, on which no number may depend
 
 
 def generator(study: Study, purpose: str) -> np.random.Generator:
@@ -93,7 +96,8 @@ def design_of(study: Study, germ: Germ) -> Design:
     """Choose the nodes; InputError when they cannot carry the expansion or pass the budget."""
     settings = study.design
     rng = generator(study, "design")
-    degree, basis = _degree(study, germ)
+    degree = settings_degree(study)
+    basis = basis_of(study, germ, degree)
     count = settings.runs or math.ceil(settings.oversampling * basis.n_terms)
     nodes: FloatArray
     weights: FloatArray
@@ -119,18 +123,12 @@ def design_of(study: Study, germ: Germ) -> Design:
     return Design(nodes, weights, basis, words)
 
 
-def _degree(study: Study, germ: Germ) -> tuple[int, ProductBasis]:
-    settings = study.expansion
-    if settings.degree != "auto":
-        return settings.degree, basis_of(study, germ, settings.degree)
-    room = min(study.budget or AUTO_RUNS, AUTO_RUNS) - study.check.runs
-    best = (0, basis_of(study, germ, 0))
-    for degree in AUTO_DEGREES:
-        basis = basis_of(study, germ, degree)
-        if study.design.oversampling * basis.n_terms > room and degree > 1:
-            break
-        best = (degree, basis)
-    return best
+def settings_degree(study: Study) -> int:
+    """The degree that the study fixes."""
+    degree = study.expansion.degree
+    if degree == "auto":
+        raise InputError("expansion.degree is chosen while the runs are made; it is not known yet")
+    return degree
 
 
 def _refuse(study: Study, basis: ProductBasis, degree: int, runs: int) -> None:
@@ -152,11 +150,18 @@ def _refuse(study: Study, basis: ProductBasis, degree: int, runs: int) -> None:
 def solve(study: Study, engine: Engine, quantities: QuantitySet) -> SingleArc:
     """Run the design, fit it, and check it against held-out direct runs."""
     germ = germ_of(study)
-    design = design_of(study, germ)
     times, rows = run_times(study)
-    outcomes = engine.run(_batch(germ, design.nodes, times), "design")
-    values = _values(germ, design.nodes, times, rows, outcomes, quantities)
-    expansion, error, notes = _fit(study, design, values)
+    made: list[Outcomes] = []
+
+    def values_at(nodes: FloatArray, label: str) -> FloatArray:
+        made.append(engine.run(_batch(germ, nodes, times), label))
+        return _values(germ, nodes, times, rows, made[-1], quantities)
+
+    if study.expansion.degree == "auto":
+        design, expansion, error, notes = _enriched(study, germ, values_at)
+    else:
+        design = design_of(study, germ)
+        expansion, error, notes = _fit(study, design, values_at(design.nodes, "design"))
 
     rich = germ_of(study, study.check.richness)
     fresh = rich.sample(generator(study, "check"), study.check.runs)
@@ -170,8 +175,48 @@ def solve(study: Study, engine: Engine, quantities: QuantitySet) -> SingleArc:
     )
     check = HeldOut(times[rows], direct, expansion.evaluate(seen), expansion.std)
     return SingleArc(
-        study, germ, times[rows], expansion, error, check, design, (outcomes, checked), notes
+        study, germ, times[rows], expansion, error, check, design, (*made, checked), notes
     )
+
+
+def _enriched(
+    study: Study, germ: Germ, values_at: Callable[[FloatArray, str], FloatArray]
+) -> tuple[Design, Expansion, FloatArray, tuple[str, ...]]:
+    """Start small; add runs and degrees until the error estimate keeps the tolerance."""
+    family = LatinHypercube if study.design.kind == "latin-hypercube" else SobolDesign
+    shape: list[tuple[int, ...]] = []
+
+    def run(nodes: FloatArray) -> FloatArray:
+        values = values_at(nodes, "design")
+        shape.append(values.shape[1:])
+        return values
+
+    found = enrich(
+        run,
+        germ.distributions(),
+        family(germ.size, study.seed),
+        study.tolerance,
+        auto_budget(study),
+        AUTO_BATCH,
+        fitter=least_angle if study.expansion.fit == "least-angle" else _sound_least_squares,
+    )
+    expansion = found.fit.expansion(found.basis, shape[0])
+    error = found.fit.relative_error.reshape(shape[0])
+    design = Design(found.nodes, np.ones(found.nodes.shape[0]), found.basis, "enriched")
+    sentence = f"The design was enriched: {found.reason}."
+    return design, expansion, error, (sentence,)
+
+
+def _sound_least_squares(matrix: FloatArray, outputs: FloatArray) -> Fit:
+    """Least squares that is refused below a sound number of runs a term."""
+    if matrix.shape[1] < 1.2 * matrix.shape[0]:
+        raise FitError(f"{matrix.shape[1]} runs are too few for {matrix.shape[0]} terms")
+    return least_squares(matrix, outputs)
+
+
+def auto_budget(study: Study) -> int:
+    """The most design runs of a study whose degree is chosen for it."""
+    return int(min(study.budget or AUTO_RUNS, AUTO_RUNS) - study.check.runs)
 
 
 def run_times(study: Study) -> tuple[FloatArray, FloatArray | slice]:
@@ -237,8 +282,6 @@ def _fit_group(
     matrix = design.basis.evaluate(design.nodes[pattern])
     everything = np.arange(design.basis.n_terms)
     if study.expansion.fit == "least-angle":
-        from nipc.expansion.fits.least_angle import least_angle
-
         return least_angle(matrix, outputs), everything
     weights = design.weights[pattern]
     if pattern.sum() <= matrix.shape[0]:
@@ -246,17 +289,4 @@ def _fit_group(
             f"only {int(pattern.sum())} of {pattern.size} design runs can be used, and the "
             f"expansion has {matrix.shape[0]} terms: see why the runs failed with `nipc status`"
         )
-    if study.expansion.degree != "auto":
-        return least_squares(matrix, outputs, weights), everything
-    # the degree with the least leave-one-out error, all on the same runs
-    best: tuple[float, Any, IntArray] | None = None
-    degrees = design.basis.degrees
-    for degree in range(int(degrees.max()) + 1):
-        part = np.flatnonzero(degrees <= degree)
-        block = matrix[part]
-        fit = least_squares(block, outputs, christoffel_weights(block))
-        worst = float(np.max(fit.relative_error, initial=0.0))
-        if best is None or worst < best[0]:
-            best = (worst, fit, part)
-    assert best is not None
-    return best[1], best[2]
+    return least_squares(matrix, outputs, weights), everything

@@ -181,7 +181,8 @@ class ExpansionSettings(_Section):
     """How a single arc is expanded and fitted.
 
     A term is kept when (sum_i degree_i^norm)^(1/norm) <= degree, and at most `interactions` of
-    its variables differ from degree zero.
+    its variables differ from degree zero. Degree "auto" starts with few runs and adds runs and
+    degrees until the error estimate keeps the study's tolerance or the budget is spent.
     """
 
     degree: Annotated[int, Field(ge=0, le=12)] | Literal["auto"] = 2

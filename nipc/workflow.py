@@ -280,9 +280,8 @@ def run(
             backend=backend,
         ) as engine,
     ):
-        if (
-            study.chain.arcs == 1 and study.expansion.degree != "auto"
-        ):  # how many runs a chain takes is only known arc by arc
+        # a chain or an enriched design knows how many runs it takes only as they are made
+        if study.chain.arcs == 1 and study.expansion.degree != "auto":
             ledger.expect(forecast.total_runs)
         solved = (_one_arc if study.chain.arcs == 1 else _many_arcs)(study, engine, quantities)
         # what a chain's plan says of its runs is a forecast, and the arcs have told since

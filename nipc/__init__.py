@@ -8,7 +8,7 @@ if TYPE_CHECKING:
     from nipc.answers.result import Result, load_result
     from nipc.errors import Ended, NipcError
     from nipc.problem.study import Study
-    from nipc.workflow import load_study, plan, probe, report, run
+    from nipc.workflow import load_study, plan, probe, run, write_report
 
 __version__ = "0.1.0"
 
@@ -21,8 +21,8 @@ _HOMES = {
     "load_study": "nipc.workflow",
     "plan": "nipc.workflow",
     "probe": "nipc.workflow",
-    "report": "nipc.workflow",
     "run": "nipc.workflow",
+    "write_report": "nipc.workflow",
 }
 
 __all__ = [
@@ -34,8 +34,8 @@ __all__ = [
     "load_study",
     "plan",
     "probe",
-    "report",
     "run",
+    "write_report",
 ]
 
 

@@ -129,7 +129,7 @@ def run(
     goes on where it was.
     """
     from nipc.terminal import console, show_result
-    from nipc.workflow import load_study, report
+    from nipc.workflow import load_study, write_report
     from nipc.workflow import run as run_study
 
     if jobs == 0:
@@ -140,7 +140,7 @@ def run(
     except RunsError as error:
         remedy = f"Mend it and start again; all reasons so far: nipc status {study}"
         raise RunsError(f"{error}\n{remedy}") from error
-    written = report(result) if page else None
+    written = write_report(result) if page else None
     if as_json:
         print(json.dumps(result.summary))
     elif not quiet:
@@ -157,7 +157,7 @@ def report(
     """Write the page again from the results that are kept; nothing is run."""
     from nipc.answers.result import load_result
     from nipc.workflow import load_study, work_folder
-    from nipc.workflow import report as write
+    from nipc.workflow import write_report as write
 
     folder = work_folder(load_study(study))
     page = write(load_result(folder), figures=figures)

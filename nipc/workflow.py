@@ -395,7 +395,7 @@ def _provenance(
     }
 
 
-def report(result: Result, *, figures: bool = False) -> Path:
+def write_report(result: Result, *, figures: bool = False) -> Path:
     """Write the page, and the figures as files when asked; returns the page's path."""
     from nipc.answers.result import PAGE
     from nipc.report import save_figures, write_page

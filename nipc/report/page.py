@@ -139,8 +139,12 @@ def _sections(dataset: xr.Dataset) -> list[Section]:
         elif key == "trust":  # all quantities first, then each
             chosen.sort(key=lambda e: kinds.index(e.name))
         for entry in chosen:
+            try:
+                axes = entry.draw()
+            except KeyError:
+                # there, but empty: a chain that stopped at once has a check of the start only
+                continue
             counter += 1
-            axes = entry.draw()
             first = axes[0] if isinstance(axes, tuple) else axes
             drawing = inline(first.figure, f"f{counter}")
             lines = hover.lines(dataset, entry.name, entry.quantity) if drawing.frame else []

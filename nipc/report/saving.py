@@ -19,7 +19,10 @@ def save_figures(
     written: list[Path] = []
     stems: set[str] = set()
     for entry in catalogue(dataset):
-        axes = entry.draw()
+        try:
+            axes = entry.draw()
+        except KeyError:  # the variable is there, but empty
+            continue
         first = axes[0] if isinstance(axes, tuple) else axes
         stem = _file_name(entry.name, entry.of)
         while stem in stems:  # names that differ only in what a file name cannot hold

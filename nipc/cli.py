@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import shlex
 import sys
 from io import TextIOWrapper
 from pathlib import Path
@@ -67,7 +68,8 @@ def check(study: StudyFile, as_json: AsJson = False) -> None:
         print(json.dumps({"file": str(study), "ok": True, "title": loaded.title}))
         return
     show_study(console(), loaded)
-    print(f"\nNothing is wrong. Next: nipc plan {study}")
+    print("\nNothing is wrong.")
+    _next(f"nipc plan {_quoted(study)}")
 
 
 @app.command()
@@ -86,7 +88,9 @@ def plan(study: StudyFile, as_json: AsJson = False) -> None:
         print(json.dumps(made.as_dict()))
         return
     show_plan(console(), made)
-    print(f"\nNext: nipc probe {study}, then nipc run {study} --jobs {os.cpu_count() or 1}")
+    print()
+    file = _quoted(study)
+    _next(f"nipc probe {file}", f"nipc run {file} --jobs {os.cpu_count() or 1}")
 
 
 @app.command()
@@ -109,7 +113,11 @@ def probe(study: StudyFile, as_json: AsJson = False) -> None:
         print(json.dumps({"good": found.good, **asdict(found)}))
     else:
         show_probe(console(), found)
-        print(f"\nNext: nipc run {study}" if found.good else "\nLook at these before running.")
+        print()
+        if found.good:
+            _next(f"nipc run {_quoted(study)}")
+        else:
+            print("Look at these before running.")
     if not found.good:
         raise typer.Exit(1)
 
@@ -138,13 +146,15 @@ def run(
     try:
         result = run_study(loaded, n_jobs=jobs, progress=_progress(quiet or as_json))
     except RunsError as error:
-        remedy = f"Mend it and start again; all reasons so far: nipc status {study}"
+        remedy = f"Mend it and start again; all reasons so far: nipc status {_quoted(study)}"
         raise RunsError(f"{error}\n{remedy}") from error
     written = write_report(result) if page else None
     if as_json:
         print(json.dumps(result.summary))
     elif not quiet:
-        show_result(console(), result, written, study)
+        show_result(console(), result, written, _quoted(study))
+        figures = f"nipc report {_quoted(study)} --figures"
+        _next(*["open the page in a browser"] * page, f"{figures}  # as files")
 
 
 @app.command()
@@ -206,8 +216,19 @@ def new(
     from nipc.starter import write_starter
 
     study = write_starter(folder, flavour)
-    print(f"Written: {', '.join(sorted(str(p) for p in folder.iterdir()))}")
-    print(f"Next: nipc check {study}, then nipc run {study}")
+    print(f"Written to {folder}: {', '.join(sorted(p.name for p in folder.iterdir()))}")
+    _next(f"nipc check {_quoted(study)}", f"nipc run {_quoted(study)}")
+
+
+def _next(*steps: str) -> None:
+    """What comes next, a line each: only a path can make one long, and each can be copied."""
+    for head, step in zip(("Next:", *[""] * len(steps)), steps, strict=False):
+        print(f"{head:5} {step}")
+
+
+def _quoted(path: Path) -> str:
+    """The path as a shell takes it, blanks and all."""
+    return shlex.quote(str(path))
 
 
 def _progress(quiet: bool) -> Progress:

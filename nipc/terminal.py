@@ -132,8 +132,8 @@ def show_probe(out: Console, report: ProbeReport) -> None:
     out.print(table)
 
 
-def show_result(out: Console, result: Result, page: Path | None, study: Path) -> None:
-    """What each quantity does, what that rests on, where everything is and what comes next."""
+def show_result(out: Console, result: Result, page: Path | None, study: str) -> None:
+    """What each quantity does, what that rests on, and where everything is."""
     data = result.dataset
     out.print(Text(str(data.attrs["title"]), style="bold"))
     out.print(_answers(data))
@@ -150,8 +150,6 @@ def show_result(out: Console, result: Result, page: Path | None, study: Path) ->
     for label, path in places.items():
         if path is not None:
             out.print(Text(f"{label:8} {path}"), soft_wrap=True)
-    end = "open the page in a browser; " if page else ""
-    out.print(Text(f"Next: {end}figures as files: nipc report {study} --figures"), soft_wrap=True)
 
 
 def _answers(data: xr.Dataset) -> Table:

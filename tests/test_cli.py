@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import shlex
 import subprocess
 import sys
 
@@ -108,6 +109,30 @@ def test_what_a_run_shows(command, tmp_path):
     shown = command("status", study).out
     assert "nobody at work" in shown
     assert widest(shown) <= 80
+
+
+def test_nothing_but_a_path_of_the_user_is_wider_than_eighty_columns(
+    command, tmp_path, monkeypatch
+):
+    """With a short relative path only the three places of the results may be long."""
+    monkeypatch.chdir(tmp_path)
+    file = "my study/study.toml"
+    shown = command("new", "my study", "--flavour", "executable").out
+    text = (tmp_path / file).read_text()
+    (tmp_path / file).write_text(text.replace("end = 6.0", "end = 1.0"))
+    for words in (("check",), ("plan",), ("run", "--jobs", "2"), ("status",)):
+        done = command(words[0], file, *words[1:])
+        assert done.code == 0, done.err
+        shown += done.out + done.err
+    places = [
+        line for line in shown.splitlines() if line.startswith(("page ", "data ", "summary "))
+    ]
+    assert len(places) == 3
+    assert max(len(line) for line in shown.splitlines() if line not in places) <= 80
+    # each next step is a line that a shell takes as it stands, the blank in the path included
+    steps = [line[5:] for line in shown.splitlines() if "nipc " in line]
+    assert len(steps) == 6
+    assert all(shlex.split(step)[2] == file for step in steps), steps
 
 
 def test_a_probe_finds_noise_that_is_not_heard(command, tmp_path):

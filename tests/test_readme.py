@@ -46,7 +46,7 @@ def test_its_commands_can_be_taken_out(mark):
 def test_the_commands_it_names_exist():
     from nipc.cli import app
 
-    known = {command.callback.__name__ for command in app.registered_commands}
+    known = {command.name or command.callback.__name__ for command in app.registered_commands}
     named = set(re.findall(r"(?:`|^    |bin/)nipc ([a-z]+)", README, re.MULTILINE))
     assert named == known
 

@@ -1,0 +1,1 @@
+"""The commands, one a file, in the order in which they are used."""

@@ -328,13 +328,13 @@ def _many_arcs(study: Study, engine: Engine, quantities: QuantitySet) -> _Solved
     notes = []
     for _ in range(study.chain.rounds):
         error = answers.path_error()
-        if error <= study.tolerance or chain.notes or study.chain.state_degree != "auto":
+        if error <= study.tolerance or chain.stopped or study.chain.state_degree != "auto":
             break
         # what the arcs' errors add up to is known only now: tighten those that are too coarse
         builder = builder.tightened(max(0.2, 0.6 * study.tolerance / error))
         notes.append(
-            f"The held-out paths were off by {error:.1%} of the spread, so arcs with an error "
-            f"above {builder.tolerance:.1e} were done again."
+            f"The held-out paths were off by {error:.1%} of the spread, so the coarser arcs were "
+            "done again."
         )
         chain = builder.build(chain)
         answers = ChainAnswers(horizon, chain, quantities)
@@ -345,7 +345,7 @@ def _many_arcs(study: Study, engine: Engine, quantities: QuantitySet) -> _Solved
             f"{answers.far} passages of members through an arc lay far outside the arc's design; "
             "there only the linear part of its expansion was used."
         )
-    return _Solved(table, tuple(horizon.outcomes), chain.cost, tuple(notes))
+    return _Solved(table, tuple(horizon.outcomes), horizon.cost, tuple(notes))
 
 
 def build_horizon(study: Study, engine: Engine) -> Horizon:
@@ -361,7 +361,7 @@ def build_horizon(study: Study, engine: Engine) -> Horizon:
     chart = build_chart(
         study.chart, study.state_names, units, germ.start.mean, study.clock.start, study.folder
     )
-    horizon = Horizon(study, engine, germ, chart, terms)
+    horizon = Horizon(study, engine, germ, chart)
     some = germ.states(germ.sample(generator(study, "chart"), 200))
     chart.check(some, study.clock.start * horizon.chart_time)
     return horizon

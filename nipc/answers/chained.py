@@ -39,25 +39,37 @@ class ChainAnswers:
             return self.quantities(self.times, states, parameters)
 
     def members(
-        self, history: NoiseHistory, streams: tuple[str, ...], block: int, count: int
+        self,
+        history: NoiseHistory,
+        streams: tuple[str, ...],
+        block: int,
+        count: int,
+        direct: bool = False,
     ) -> FloatArray:
-        """Quantities (n, T, Q) of a block of members; NaN beyond what the chain reached."""
+        """Quantities (n, T, Q) of a block of members; NaN beyond what the chain reached.
+
+        With `direct`, members far outside an arc's design are run by the propagator, and those
+        that went on where the arcs stopped have their values: for the ensemble itself.
+        """
         horizon = self.horizon
         nodes = horizon.nodes(streams, block, count)
         members = horizon.members_of(nodes, history, block)
         values = np.full((count, self.times.size, members.values.shape[1]), np.nan)
         values[:, self.times <= horizon.edges[0]] = members.values[:, None]
         for arc in self.chain.maps:
-            steps, members, far = horizon.advance(arc, members, history, block)
+            steps, members, far = horizon.advance(arc, members, history, block, direct)
             values[:, horizon.output_rows(arc)] = steps[:, horizon.inner_times(arc)]
             self.far += far
+        if direct and block == 0 and (beyond := self.chain.continued) is not None:
+            some = min(count, beyond.values.shape[0])
+            values[:some, beyond.rows] = beyond.values[:some]
         return self.of_values(values, members.parameters)
 
     def plain(self) -> Iterator[tuple[FloatArray, None]]:
         """The ensemble, block by block."""
         streams = self.horizon.streams("a")
         for block, count in blocks_of(self.horizon.study.ensemble.members):
-            yield self.members(self.horizon.history, streams, block, count), None
+            yield self.members(self.horizon.history, streams, block, count, direct=True), None
 
     def table(self) -> ResultTable:
         """All answers of the chain."""
@@ -109,8 +121,13 @@ class ChainAnswers:
     def _spread(self) -> FloatArray:
         """(T, Q) standard deviations of the first block, to read the trust horizon from."""
         count = min(self.horizon.study.ensemble.members, BLOCK)
-        values = self.members(self.horizon.history, self.horizon.streams("a"), 0, count)
-        return np.asarray(np.std(values, axis=0))
+        streams = self.horizon.streams("a")
+        values = self.members(self.horizon.history, streams, 0, count, direct=True)
+        known = np.isfinite(values)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            mean = np.where(known, values, 0.0).sum(axis=0) / known.sum(axis=0)
+            away = np.where(known, values - mean, 0.0)
+            return np.asarray(np.sqrt((away**2).sum(axis=0) / known.sum(axis=0)))
 
     def _drivers(self, table: ResultTable) -> None:
         """Pick and freeze: each group in turn drawn from an independent ensemble."""
@@ -201,6 +218,8 @@ class ChainAnswers:
             ("degree", "1", "degree of the arc's expansion"),
             ("terms", "1", "terms of the arc's expansion"),
             ("runs", "1", "runs of the arc's design"),
+            ("failed", "1", "of them failed"),
+            ("direct", "1", "members of the arc's pool that were run directly, being far outside"),
             ("error", "1", "held-out error at the arc's end over the spread there"),
             ("note", "", "why the arc is as it is"),
         ):

@@ -63,9 +63,9 @@ class ArcBasis:
 class ArcMap:
     """Chart states at an arc's times as polynomials of what goes into the arc.
 
-    Cells first ... last - 1; times (m,) after the arc's start, the last being its end;
-    coefficients (terms, m d). `reach` is the largest Christoffel value among the design's runs;
-    `linear` the terms of degree at most one.
+    Ticks first ... last; times (m,) after the arc's start, the last being its end; coefficients
+    (terms, m d). `reach` is the largest Christoffel value among the design's runs. Members whose
+    leverage passes `direct_reach` are worth a direct run.
     """
 
     first: int
@@ -78,36 +78,41 @@ class ArcMap:
     reach: float
     degree: int
     components: int
+    direct_reach: float = float("inf")
 
     def __call__(self, germ: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Chart states (n, m, d) of germ rows (n, c + K), and which rows were held back (n,).
+        """Chart states (n, m, d) of germ rows (n, c + K), and the rows' leverage (n,).
 
-        Where the Christoffel function passes `REACH` times its largest value in the design, the
-        polynomial would be extrapolated: the parts beyond degree one are scaled down there, so
-        that a far member moves by the linear map and nothing explodes.
+        Leverage is the Christoffel function over its largest value in the design. Where it passes
+        `REACH` the polynomial would be extrapolated: the parts beyond degree one are scaled down
+        there, so that a far member moves by the linear map and nothing explodes.
         """
         matrix = self.basis.evaluate(germ)
-        christoffel = np.einsum("tn,tn->n", matrix, matrix)
-        far = christoffel > REACH * self.reach
+        leverage = np.einsum("tn,tn->n", matrix, matrix) / self.reach
+        far = leverage > REACH
         if np.any(far):
             nonlinear = self.basis.indices.sum(axis=1) > 1
-            damp = REACH * self.reach / christoffel[far]
-            matrix[np.ix_(nonlinear, far)] *= damp
+            matrix[np.ix_(nonlinear, far)] *= REACH / leverage[far]
         values = (matrix.T @ self.coefficients).reshape(germ.shape[0], -1, self.components)
-        return values, far
+        return values, leverage
 
     def sizes(self, spread: FloatArray) -> FloatArray:
         """(K,) largest linear effect of each noise variable over the spread (d,) at the end."""
+        with np.errstate(invalid="ignore", divide="ignore"):
+            effect = np.abs(self.linear_response) / spread
+        return np.asarray(np.max(np.where(spread > 0, effect, 0.0), axis=1, initial=0.0))
+
+    @property
+    def linear_response(self) -> FloatArray:
+        """(K, d) linear effect of each white coefficient at the arc's end."""
         indices = self.basis.indices
         count = sum(family.terms for family in self.noise.bases)
-        result = np.zeros(count)
+        result = np.zeros((count, self.components))
         last = self.coefficients.reshape(indices.shape[0], self.times.size, -1)[:, -1]
-        with np.errstate(invalid="ignore", divide="ignore"):
-            share = np.max(np.where(spread > 0, np.abs(last) / spread, 0.0), axis=1)
         for term in np.flatnonzero(indices.sum(axis=1) == 1):
             variable = int(indices[term].argmax()) - (indices.shape[1] - count)
             if variable >= 0:
-                result[variable] = share[term]
+                result[variable] = last[term]
         return result
 
 

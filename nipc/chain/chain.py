@@ -2,25 +2,30 @@
 
 from __future__ import annotations
 
-import math
-from dataclasses import dataclass, field, replace
+from collections.abc import Callable
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from nipc.arrays import FloatArray
-from nipc.chain.arc import ArcBasis, ArcMap
+from nipc.chain.arc import REACH, ArcMap
+from nipc.chain.arc_fit import ArcFit, Trial
+from nipc.chain.direct import Continued, continue_directly
 from nipc.chain.horizon import Horizon, Members
-from nipc.errors import FitError
-from nipc.expansion import TensorBasis, christoffel_weights, least_squares, near_optimal_subset
+from nipc.chain.steering import Steering, Step, Tried
+from nipc.chain.ticks import TICKS
 
 POOL = 4096
-USELESS = 0.5  # a held-out error of half the spread: the arc's polynomial says nothing
-GUESS = 0.3  # relative size of a noise variable before any arc has told it
+KEPT_FOR_DIRECT = 0.3  # of a budget that the arcs would overdraw, for going on by direct runs
 
 
 @dataclass(frozen=True)
 class ArcRecord:
-    """Why an arc is as it is. `error` is held out, at the arc's end, over the spread there."""
+    """Why an arc is as it is.
+
+    `error` is held out, at the arc's end, over the spread there; `runs` are the design's, `failed`
+    of them gave nothing; `direct` members of the pool were run directly.
+    """
 
     start: float
     end: float
@@ -29,14 +34,16 @@ class ArcRecord:
     runs: int
     error: float
     note: str
+    failed: int = 0
+    direct: int = 0
 
 
 @dataclass(frozen=True, eq=False)
 class Chain:
     """The arcs up to `reached`, and the check's members at all output times.
 
-    direct, predicted (C, T, d) are chart values, NaN beyond what was reached; `cost` is in
-    run-equivalents: runs times the share of the horizon that each covers.
+    direct, predicted (C, T, d) are chart values, NaN beyond what was reached. `stopped` before the
+    horizon's end: `continued` are then the members that went on by direct runs, if any.
     """
 
     maps: tuple[ArcMap, ...]
@@ -44,22 +51,19 @@ class Chain:
     direct: FloatArray
     predicted: FloatArray
     check_nodes: FloatArray
-    cost: float
     reached: float
+    stopped: bool
     notes: tuple[str, ...]
+    continued: Continued | None = None
 
 
-@dataclass
-class _Arc:
-    """One arc under construction: its nodes and runs only ever grow."""
+@dataclass(frozen=True, eq=False)
+class _Built:
+    """An arc as built: its map (None when it failed), record and held-out truth."""
 
-    first: int
-    last: int
-    pool: FloatArray
-    nodes: FloatArray
-    outputs: FloatArray
-    runs: int = 0
-    tried: list[tuple[int, float]] = field(default_factory=list)
+    map: ArcMap | None
+    record: ArcRecord
+    truth: FloatArray
 
 
 class ChainBuilder:
@@ -68,26 +72,30 @@ class ChainBuilder:
     The pool (the ensemble's first block) gives each arc its basis and the candidates of its
     design. The check's members are run directly through every arc; they are each arc's held-out
     runs too: their states are true ones, their noise paths richer than the expansion sees.
+    `told` hears of the records whenever an arc is done.
     """
 
-    def __init__(self, horizon: Horizon) -> None:
+    def __init__(
+        self,
+        horizon: Horizon,
+        told: Callable[[list[ArcRecord]], None] | None = None,
+        tolerance: float | None = None,
+    ) -> None:
         self.horizon = horizon
         self.study = study = horizon.study
-        self.tolerance = study.chain.arc_tolerance or study.tolerance / math.sqrt(horizon.cells)
+        self.told = told
+        self.tolerance = tolerance or study.tolerance
         self.checked = horizon.history.restreamed("check")
-        asked = study.chain.state_degree
-        self.fixed = asked if isinstance(asked, int) else None
-        self.degree = self.fixed or 1
+        self.steering = Steering.of(study.chain, self.tolerance)
         self.sizes: FloatArray | None = None
+        self.notes: list[str] = []
 
     def tightened(self, factor: float) -> ChainBuilder:
         """A builder whose arcs must agree `factor` times better."""
-        other = ChainBuilder(self.horizon)
-        other.tolerance = self.tolerance * factor
-        return other
+        return ChainBuilder(self.horizon, self.told, self.tolerance * factor)
 
     def build(self, before: Chain | None = None) -> Chain:
-        """All arcs, or those up to where the polynomials fail.
+        """All arcs, or those up to where the polynomials fail or the budget is spent.
 
         Arcs of a chain built `before` that keep this builder's tolerance are taken over as they
         are, and their runs are not made again.
@@ -102,188 +110,192 @@ class ChainBuilder:
         seen[:, at_start] = predicted[:, at_start] = direct.values[:, None]
         maps: list[ArcMap] = []
         records: list[ArcRecord] = []
-        notes: list[str] = []
-        cost = 0.0 if before is None else before.cost
-        for first in range(horizon.cells):
-            arc, record, values, spent = self._arc_or_kept(first, pool, direct, before)
-            cost += spent * (record.end - record.start) / study.clock.length
-            records.append(record)
-            if arc is None:
-                notes.append(
-                    f"The chain stops at t = {record.start:g} {study.clock.unit}: {record.note}."
-                )
+        at, stopped = 0, ""
+        while at < horizon.end:
+            if stopped := self._overdrawn(records):
                 break
-            maps.append(arc)
-            rows = horizon.output_rows(arc)
-            inside = horizon.inner_times(arc)
-            _, pool, _ = horizon.advance(arc, pool, horizon.history, 0)
-            steps, chained, _ = horizon.advance(arc, chained, self.checked, 0)
-            seen[:, rows] = values[:, inside]
+            built = self._arc_or_kept(at, pool, direct, before)
+            records.append(built.record)
+            if self.told is not None:
+                self.told(records)
+            if built.map is None:
+                stopped = built.record.note
+                break
+            arc = built.map
+            rows, inside = horizon.output_rows(arc), horizon.inner_times(arc)
+            pool = self._moved(arc, pool, built.record.direct)
+            steps, chained, _ = horizon.advance(arc, chained, self.checked, 0, direct=True)
+            seen[:, rows] = built.truth[:, inside]
             predicted[:, rows] = steps[:, inside]
-            direct = replace(
-                direct,
-                values=values[:, -1],
-                carried=chained.carried,
-            )
-        reached = maps[-1].times[-1] if maps else study.clock.start
+            direct = replace(direct, values=built.truth[:, -1], carried=chained.carried)
+            maps.append(arc)
+            at = arc.last
+        reached = float(horizon.ticks[at])
+        continued = None
+        if stopped:
+            where = f"t = {reached:g} {study.clock.unit}"
+            self.notes.append(f"The chain stops at {where}: {stopped}.")
+            continued, words = continue_directly(horizon, pool, at)
+            self.notes.append(words)
         return Chain(
-            tuple(maps), tuple(records), seen, predicted, nodes, cost, float(reached),
-            tuple(notes),
+            tuple(maps), tuple(records), seen, predicted, nodes, reached, bool(stopped),
+            tuple(self.notes), continued,
         )  # fmt: skip
 
-    def _arc_or_kept(
-        self, first: int, pool: Members, direct: Members, before: Chain | None
-    ) -> tuple[ArcMap | None, ArcRecord, FloatArray, int]:
-        kept = before is not None and first < len(before.maps)
-        if before is None or not kept or before.records[first].error > self.tolerance:
-            if before is not None and kept:
-                self.degree = max(self.degree, before.records[first].degree)
-            return self._arc(first, first + 1, pool, direct)
-        arc, record = before.maps[first], before.records[first]
-        rich = self.horizon.model(first, first + 1, self.study.check.richness)
+    def _overdrawn(self, records: list[ArcRecord]) -> str:
+        """Why the budget ends the chain here, or nothing."""
+        budget = self.study.budget
+        if budget is None or not records:
+            return ""
+        clock, last, cost = self.study.clock, records[-1], self.horizon.cost
+        rate = last.runs + self.study.check.runs  # run-equivalents, were the whole horizon so
+        left = cost + rate * (clock.end - last.end) / clock.length
+        cost += rate * (last.end - last.start) / clock.length
+        if left > budget and cost > (1.0 - KEPT_FOR_DIRECT) * budget:
+            return (
+                f"all arcs would take some {left:.0f} run-equivalents, and the budget is {budget:g}"
+            )
+        return ""
+
+    def _moved(self, arc: ArcMap, pool: Members, direct: int) -> Members:
+        """The pool at the arc's end, its farthest members by direct runs."""
+        horizon = self.horizon
+        if direct == 0:
+            return horizon.advance(arc, pool, horizon.history, 0)[1]
+        white = horizon.fresh(
+            arc.noise, horizon.history, arc.first, arc.last, 0, pool.values.shape[0]
+        )
+        values, leverage = arc(np.hstack([pool.correlated, white]))
+        rows = np.sort(np.argsort(leverage)[-direct:])
+        horizon.substitute(arc, values, pool, white, rows)
+        carried = horizon.carry(pool.carried, horizon.history, arc.first, arc.last, 0)
+        return Members(values[:, -1], carried, pool.law, pool.parameters)
+
+    def _arc_or_kept(self, at: int, pool: Members, direct: Members, before: Chain | None) -> _Built:
+        limit = self.horizon.end
+        if before is not None:
+            known = [(arc.first, i) for i, arc in enumerate(before.maps)]
+            for first, i in known:
+                if first == at and self._good_enough(before, i):
+                    return self._kept(before, i, direct)
+                if first == at:
+                    # no longer than it was, and no easier: the arcs after it may be kept
+                    arc = before.maps[i]
+                    degree = max(self.steering.degree, arc.degree)
+                    self.steering = replace(
+                        self.steering, degree=degree, length=arc.last - arc.first, rested=False
+                    )
+            limit = min([first for first, _ in known if first > at], default=limit)
+        return self._arc(at, limit, pool, direct)
+
+    def _good_enough(self, before: Chain, i: int) -> bool:
+        arc = before.maps[i]
+        share = self.horizon.share(arc.first, arc.last)
+        return before.records[i].error <= self.steering.allowed(share)
+
+    def _kept(self, before: Chain, i: int, direct: Members) -> _Built:
+        """An arc of an earlier chain; its held-out runs go on from where the others now stand."""
+        horizon, arc = self.horizon, before.maps[i]
+        terms = tuple(b.terms for b in arc.noise.bases)
+        rich = horizon.model(arc.first, arc.last, self.study.check.richness, terms)
         count = direct.values.shape[0]
-        white = self.horizon.fresh(rich, self.checked, first, first + 1, 0, count)
-        label = f"arc {first + 1} of {self.horizon.cells}, check"
-        truth, _ = self.horizon.run(direct, rich, white, arc.times, label)
-        self.degree, self.sizes = arc.degree, None
-        return arc, record, truth, 0
+        white = horizon.fresh(rich, self.checked, arc.first, arc.last, 0, count)
+        label = f"t = {arc.start:.6g} to {arc.times[-1]:.6g}, check"
+        truth, _ = horizon.run(direct, rich, white, arc.times, label)
+        self.steering = replace(self.steering, degree=arc.degree, length=arc.last - arc.first)
+        self.sizes = None
+        return _Built(arc, before.records[i], truth)
 
     # -- one arc ---------------------------------------------------------------------------------
 
-    def _arc(
-        self, first: int, last: int, pool: Members, direct: Members
-    ) -> tuple[ArcMap | None, ArcRecord, FloatArray, int]:
-        """Raise the degree until the held-out runs agree; the map, why, held-out values, runs."""
-        horizon, study = self.horizon, self.study
-        model = horizon.model(first, last)
-        rich = horizon.model(first, last, study.check.richness)
-        times = horizon.arc_times(first, last)
-        count = direct.values.shape[0]
-        held_white = horizon.fresh(rich, self.checked, first, last, 0, count)
-        label = f"arc {first + 1} of {horizon.cells}"
-        truth, good = horizon.run(direct, rich, held_white, times, f"{label}, check")
-        white = horizon.fresh(model, horizon.history, first, last, 0, pool.values.shape[0])
-        held = np.hstack(
-            [direct.correlated, horizon.fresh(model, self.checked, first, last, 0, count)]
-        )
-        candidates = np.hstack([pool.correlated, white])
-        state = _Arc(
-            first, last, candidates, np.empty((0, candidates.shape[1])),
-            np.empty((0, times.size * truth.shape[2])),
-        )  # fmt: skip
-        note, best = "", None
-        degree = self.degree
+    def _arc(self, at: int, limit: int, pool: Members, direct: Members) -> _Built:
+        """Raise the degree, then shorten, until the held-out runs agree or nothing helps."""
+        horizon = self.horizon
+        longer, words = list[Tried](), list[str]()
+        pilot = at == 0 and any(horizon.terms.open)
         while True:
-            sizes = np.full(white.shape[1], GUESS) if self.sizes is None else self.sizes
-            # noise that multiplies the state may have no linear effect, and yet matter
-            sizes = np.where(horizon.multiplies(model), 1.0, sizes)
-            basis = ArcBasis.of(pool.correlated, sizes, max(degree, 1), study.chain.noise_degree)
-            self._extend(state, basis.full, pool, model, times, label)
-            arc, spread = self._fit(state, basis.full, model, times, degree)
-            error = self._error(arc, held[good], truth[good], spread)
-            lower = self._lower_error(state, basis, arc, held[good], truth[good], spread)
-            self.sizes = arc.sizes(spread)
-            state.tried.append((degree, error))
-            if best is None or error < best[1]:
-                best = (arc, error)
-            if error <= self.tolerance or self.fixed is not None:
+            last = self.steering.span(at, limit)
+            share = horizon.share(at, last)
+            terms = horizon.terms.piloted if pilot else None
+            fit = ArcFit(horizon, at, last, pool, direct, self.checked, terms)
+            step, reason, best, tried = self._raised(fit, share, longer)
+            if pilot:
+                self._learn(best)
+                pilot = False
+            if step is not Step.HALVE:
                 break
-            if degree >= study.chain.largest_degree:
-                note = "the largest degree is not enough"
-                break
-            if len(state.tried) > 1 and error > 0.7 * state.tried[-2][1]:
-                note = "a higher degree brings nothing: the noise terms set the error"
-                break
-            degree += 1
-        arc, error = best
+            longer.append(min(tried, key=lambda t: t.error))
+            words.append(f"halved at degree {longer[-1].degree} ({longer[-1].error:.1%} off)")
+            self.steering, self.sizes = self.steering.shorter(last - at), None
+        words += [reason] if reason else []
+        beyond, reach = self._far(best.map, fit, pool)
+        arc = replace(best.map, direct_reach=reach)
+        allowed = self.steering.allowed(share)
+        self.steering, word = self.steering.after(
+            best.degree, best.error / allowed, best.lower / allowed, last - at,
+            self._dearer((last - at) / TICKS, fit.width),
+        )  # fmt: skip
+        words += [word] if word else []
         record = ArcRecord(
-            float(horizon.edges[first]), float(horizon.edges[last]), arc.degree,
-            arc.basis.n_terms, state.runs, error, note,
+            float(horizon.ticks[at]), float(horizon.ticks[last]), best.degree,
+            best.map.basis.n_terms, fit.runs, best.error, "; ".join(words), fit.failed, beyond,
         )  # fmt: skip
-        if self.fixed is None:
-            easy = arc.degree > 1 and lower <= 0.5 * self.tolerance
-            self.degree = arc.degree - 1 if easy else arc.degree
-        if not math.isfinite(error) or error > USELESS:
-            record = replace(
-                record, note=f"held-out runs of the arc miss by {error:.0%} of the spread"
-            )
-            return None, record, truth, state.runs + count
-        return arc, record, truth, state.runs + count
+        if step is Step.STOP:
+            return _Built(None, replace(record, note=reason, direct=0), fit.truth)
+        return _Built(arc, record, fit.truth)
 
-    def _extend(
-        self,
-        state: _Arc,
-        basis: TensorBasis,
-        pool: Members,
-        model: object,
-        times: FloatArray,
-        label: str,
-    ) -> None:
-        """Add nodes, chosen beside those that are there, and run them."""
-        from nipc.problem.noise import NoiseModel
+    def _dearer(self, cells: float, width: int) -> float:
+        """How many times the linear terms an arc of twice as many cells has."""
+        short, long = (1 + width + sum(self.horizon.terms.at(k * cells)) for k in (1.0, 2.0))
+        return long / short
 
-        assert isinstance(model, NoiseModel)
-        wanted = (
-            max(math.ceil(self.study.chain.oversampling * basis.n_terms), basis.n_terms + 4)
-            - state.nodes.shape[0]
+    def _raised(
+        self, fit: ArcFit, share: float, longer: list[Tried]
+    ) -> tuple[Step, str, Trial, list[Tried]]:
+        """Trials of rising degree until it is clear what to do; the best of them."""
+        allowed = self.steering.allowed(share)
+        tried: list[Tried] = []
+        best: Trial | None = None
+        degree = self.steering.degree
+        while True:
+            trial = fit.trial(degree, self.sizes)
+            self.sizes = trial.map.sizes(trial.spread)
+            terms = trial.map.basis.n_terms
+            tried.append(Tried(degree, trial.error / allowed, trial.error, terms))
+            if best is None or trial.error < best.error:
+                best = trial
+            step, reason = self.steering.judge(tried, fit.last - fit.first, longer)
+            if step is not Step.RAISE:
+                return step, reason, best, tried
+            degree += 1
+
+    def _learn(self, trial: Trial) -> None:
+        """Keep as many noise terms as the first arc's response uses."""
+        horizon = self.horizon
+        before = horizon.terms.piloted
+        # a hundredth of the tolerance in the standard deviation, as lost variance
+        loss = (0.25 * self.study.tolerance) ** 2
+        horizon.terms = horizon.terms.kept(trial.map.linear_response, loss)
+        kept = ", ".join(
+            f"{k} of {n} for {s.name}"
+            for k, n, s in zip(horizon.terms.cell, before, horizon.germ.noise.sources, strict=True)
+            if k != n
         )
-        if wanted <= 0:
-            return
-        rng = np.random.default_rng([self.study.seed, state.first, state.last, state.runs])
-        taken = state.nodes if state.nodes.shape[0] else None
-        subset = near_optimal_subset(basis, state.pool, wanted, rng, taken)
-        width = pool.correlated.shape[1]
-        members = pool.take(subset.rows)
-        white = state.pool[subset.rows, width:]
-        values, good = self.horizon.run(members, model, white, times, f"{label}, design")
-        state.runs += wanted
-        state.nodes = np.vstack([state.nodes, state.pool[subset.rows][good]])
-        state.outputs = np.vstack([state.outputs, values[good].reshape(int(good.sum()), -1)])
+        if kept:
+            self.notes.append(f"Noise terms that the first arc's response uses: {kept}.")
+        self.sizes = None
 
-    def _fit(
-        self, state: _Arc, basis: TensorBasis, model: object, times: FloatArray, degree: int
-    ) -> tuple[ArcMap, FloatArray]:
-        from nipc.problem.noise import NoiseModel
+    def _far(self, arc: ArcMap, fit: ArcFit, pool: Members) -> tuple[int, float]:
+        """How many of the pool go directly, and the leverage beyond which the ensemble does.
 
-        assert isinstance(model, NoiseModel)
-        matrix = basis.evaluate(state.nodes)
-        if matrix.shape[1] <= matrix.shape[0]:
-            raise FitError(
-                f"arc {state.first + 1}: {matrix.shape[1]} of its {state.runs} runs can be used, "
-                f"and its expansion has {matrix.shape[0]} terms"
-            )
-        fit = least_squares(matrix, state.outputs, christoffel_weights(matrix))
-        components = state.outputs.shape[1] // times.size
-        reach = float(np.max(np.einsum("tn,tn->n", matrix, matrix)))
-        arc = ArcMap(
-            state.first, state.last, float(model.start), times, model, basis,
-            fit.coefficients, reach, degree, components,
-        )  # fmt: skip
-        shaped = fit.coefficients.reshape(matrix.shape[0], times.size, components)
-        return arc, np.sqrt(np.sum(shaped[1:, -1] ** 2, axis=0))
-
-    def _error(self, arc: ArcMap, held: FloatArray, truth: FloatArray, spread: FloatArray) -> float:
-        """Largest over components of the held-out error at the arc's end over the spread."""
-        if held.shape[0] == 0:
-            return float("inf")
-        gap = arc(held)[0][:, -1] - truth[:, -1]
-        rms = np.sqrt(np.mean(gap**2, axis=0))
-        size = np.max(np.abs(truth[:, -1]), axis=0)
-        live = spread > 1e-12 * size
-        return float(np.max(rms[live] / spread[live], initial=0.0))
-
-    def _lower_error(
-        self,
-        state: _Arc,
-        basis: ArcBasis,
-        arc: ArcMap,
-        held: FloatArray,
-        truth: FloatArray,
-        spread: FloatArray,
-    ) -> float:
-        """The same for one degree less on the same runs: it costs nothing to know."""
-        if arc.degree <= 1:
-            return float("inf")
-        part = basis.up_to(arc.degree - 1)
-        lower, _ = self._fit(state, part, arc.noise, arc.times, arc.degree - 1)
-        return self._error(lower, held, truth, spread)
+        Of either, direct runs may be the study's share of the arc's own.
+        """
+        _, leverage = arc(fit.candidates)
+        far = np.sort(leverage[leverage > REACH])[::-1]
+        most = self.study.chain.direct_share * fit.runs
+        in_pool = int(min(far.size, most))
+        part = pool.values.shape[0] / max(self.study.ensemble.members, 1)
+        in_ensemble = int(min(far.size, most * part))
+        if in_ensemble == far.size:
+            return in_pool, REACH
+        return in_pool, float("inf") if in_ensemble == 0 else float(far[in_ensemble - 1])

@@ -3,7 +3,11 @@
 The horizon is divided into cells. On each cell a source's white noise has independent standard
 coefficients on Legendre polynomials, drawn from a stream of their own (counter-based, keyed by
 seed, source, cell and block of members), so nothing is stored and any member's history can be
-drawn again. An arc is a run of cells; its coefficients on any basis are projections of the cells'.
+drawn again. An arc is a run of cells, or a dyadic part of one (see `Ticks`): its coefficients on
+any basis are projections of the cells', or those of the part given the cell's.
+
+Half a cell: with P (K, 2 K) the coefficients of a cell's polynomials on its halves', the halves
+have P' z + (1 - P' P) g, g fresh and standard; so they are standard, and P of them is z again.
 """
 
 from __future__ import annotations
@@ -15,6 +19,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from nipc.arrays import FloatArray
+from nipc.chain.ticks import Piece, pieces
 from nipc.problem.noise import Legendre, NoiseBasis, Source
 
 BLOCK = 4096
@@ -75,34 +80,60 @@ class NoiseHistory:
         stream = f"{self.sources[source].name}:{self.streams[source]}:initial"
         return self._generator(stream, 0, block).standard_normal(BLOCK)[:count]
 
+    def piece(
+        self, source: int, piece: Piece, block: int, count: int, terms: int | None = None
+    ) -> FloatArray:
+        """Coefficients (terms, count) on a cell or a dyadic part of one."""
+        terms = self.cell_terms if terms is None else terms
+        if piece.level == 0:
+            return self.cell(source, piece.cell, block, count, terms)
+        whole = self.piece(source, piece.parent, block, count)
+        key = f"{piece.cell}/{piece.level}/{piece.index // 2}"
+        fresh = self._drawn(source, key, block, count, 2 * self.cell_terms)
+        split = self._projection(Legendre(self.cell_terms), np.array([0.5, 0.5]))
+        split = split.transpose(1, 0, 2).reshape(self.cell_terms, -1)
+        both = fresh + split.T @ (whole - split @ fresh)
+        first = (piece.index % 2) * self.cell_terms
+        return both[first : first + terms]
+
+    def _drawn(self, source: int, key: str, block: int, count: int, terms: int) -> FloatArray:
+        stream = f"{self.sources[source].name}:{self.streams[source]}:{key}"
+        return self._generator(stream, 0, block).standard_normal((terms, BLOCK))[:, :count]
+
+    def _width(self, piece: Piece) -> float:
+        return float(self.edges[piece.cell + 1] - self.edges[piece.cell]) / 2.0**piece.level
+
     def white(
         self, source: int, basis: NoiseBasis, first: int, last: int, block: int, count: int
     ) -> FloatArray:
-        """Coefficients (count, basis.terms) on the arc of cells first ... last - 1."""
-        if last - first == 1 and isinstance(basis, Legendre) and basis.terms <= self.cell_terms:
-            return self.cell(source, first, block, count, basis.terms).T * self.scales[source]
+        """Coefficients (count, basis.terms) on the arc of ticks first ... last."""
+        parts = pieces(first, last)
+        scale = self.scales[source]
+        if len(parts) == 1 and isinstance(basis, Legendre) and basis.terms <= self.cell_terms:
+            return self.piece(source, parts[0], block, count, basis.terms).T * scale
         total = np.zeros((count, basis.terms))
-        matrix = self._projection(basis, first, last)
-        for i, cell in enumerate(range(first, last)):
-            drawn = self.cell(source, cell, block, count, matrix.shape[2])
-            total += drawn.T @ matrix[i].T
-        return total * self.scales[source]
+        matrix = self._projection(basis, np.array([self._width(part) for part in parts]))
+        for i, part in enumerate(parts):
+            total += self.piece(source, part, block, count).T @ matrix[i].T
+        return total * scale
 
-    def _projection(self, basis: NoiseBasis, first: int, last: int) -> FloatArray:
-        """(cells, basis.terms, cell terms) inner products, rows made orthonormal together."""
-        widths = np.diff(self.edges[first : last + 1])
-        key = (basis.name, basis.terms, tuple(np.round(widths / widths.sum(), 12)))
+    def _projection(self, basis: NoiseBasis, widths: FloatArray) -> FloatArray:
+        """(pieces, basis.terms, cell terms) inner products, rows made orthonormal together.
+
+        `widths` are those of successive pieces.
+        """
+        edges = np.concatenate([[0.0], np.cumsum(widths)]) / widths.sum()
+        key = (basis.name, basis.terms, tuple(np.round(edges, 12)))
         if key not in self._projections:
             inner = Legendre(self.cell_terms)
             nodes, weights = np.polynomial.legendre.leggauss(16 + self.cell_terms + 2 * basis.terms)
             u, w = 0.5 * (nodes + 1.0), 0.5 * weights
-            start, span = self.edges[first], self.edges[last] - self.edges[first]
             blocks = []
-            for a, width in zip(self.edges[first:last], widths, strict=True):
-                outer = basis.values((a + width * u - start) / span)
-                blocks.append(np.sqrt(width / span) * (outer * w) @ inner.values(u).T)
+            for a, width in zip(edges[:-1], np.diff(edges), strict=True):
+                outer = basis.values(a + width * u)
+                blocks.append(np.sqrt(width) * (outer * w) @ inner.values(u).T)
             matrix = np.array(blocks)
-            # the cells' finite terms lose a trace of variance; give it back
+            # the pieces' finite terms lose a trace of variance; give it back
             flat = matrix.transpose(1, 0, 2).reshape(basis.terms, -1)
             factor = np.linalg.cholesky(flat @ flat.T)
             flat = np.linalg.solve(factor, flat)
@@ -113,22 +144,33 @@ class NoiseHistory:
     def carry(
         self, source: int, values: FloatArray, first: int, last: int, block: int
     ) -> FloatArray:
-        """Standardised Gauss-Markov values (count,) at the end of cells first ... last - 1.
+        """Standardised Gauss-Markov values (count,) at the end of the arc of ticks first ... last.
 
-        u_b = exp(-h/tau) u_a + sqrt(2/tau) int exp(-(b-s)/tau) dW; what the cell's terms miss of
-        the integral's variance is made up by one independent normal, so that the law at every cell
+        u_b = exp(-h/tau) u_a + sqrt(2/tau) int exp(-(b-s)/tau) dW; what a piece's terms miss of
+        the integral's variance is made up by one independent normal, so that the law at every
         boundary is exact.
         """
         law = self.sources[source]
         assert law.time_constant is not None
-        for cell in range(first, last):
-            width = self.edges[cell + 1] - self.edges[cell]
+        for part in pieces(first, last):
+            width = self._width(part)
             gains = _end_gains(law.time_constant, width, self.cell_terms)
-            drawn = self.cell(source, cell, block, values.size, self.cell_terms + 1)
+            drawn, rest = self._with_rest(source, part, block, values.size)
             missing = -np.expm1(-2.0 * width / law.time_constant) - gains @ gains
-            fresh = gains @ drawn[:-1] + np.sqrt(max(missing, 0.0)) * drawn[-1]
+            fresh = gains @ drawn + np.sqrt(max(missing, 0.0)) * rest
             values = np.exp(-width / law.time_constant) * values + self.scales[source] * fresh
         return values
+
+    def _with_rest(
+        self, source: int, part: Piece, block: int, count: int
+    ) -> tuple[FloatArray, FloatArray]:
+        """A piece's coefficients (cell_terms, count), and a normal (count,) apart from them."""
+        if part.level == 0:
+            drawn = self.cell(source, part.cell, block, count, self.cell_terms + 1)
+            return drawn[:-1], drawn[-1]
+        key = f"{part.cell}/{part.level}/{part.index}/rest"
+        rest = self._drawn(source, key, block, count, 1)[0]
+        return self.piece(source, part, block, count), rest
 
 
 def _end_gains(time_constant: float, width: float, terms: int) -> FloatArray:

@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
+import hashlib
 import math
 from dataclasses import dataclass, replace
 
 import numpy as np
 
 from nipc.arrays import BoolArray, FloatArray, IntArray
-from nipc.chain.arc import ArcMap
+from nipc.chain import ticks
+from nipc.chain.arc import REACH, ArcMap
 from nipc.chain.history import BLOCK, NoiseHistory
+from nipc.chain.noise_terms import NoiseTerms
+from nipc.chain.ticks import TICKS
 from nipc.problem.charts import Chart
 from nipc.problem.germ import Germ
 from nipc.problem.noise import NoiseModel
@@ -43,22 +47,28 @@ class Members:
 
 
 class Horizon:
-    """The cells of a horizon, the noise histories on them, and members moving through arcs."""
+    """The cells of a horizon, the noise histories on them, and members moving through arcs.
 
-    def __init__(
-        self, study: Study, engine: Engine, germ: Germ, chart: Chart, terms: tuple[int, ...]
-    ) -> None:
+    An arc is told by its first and last tick (see `nipc.chain.ticks`); `terms` may be replaced once,
+    by what a pilot has shown, before any arc but the first is built.
+    """
+
+    def __init__(self, study: Study, engine: Engine, germ: Germ, chart: Chart) -> None:
         self.study, self.engine, self.germ, self.chart = study, engine, germ, chart
-        self.terms = terms
         units = [c.unit for c in study.state]
         self.chart_time = chart_time_scale(study.clock.unit, units)
         self.outputs = study.clock.times
         self.cells = cell_count(study)
+        self.terms = NoiseTerms.of(study, study.clock.length / self.cells)
         self.outcomes: list[Outcomes] = []
+        self.cost = 0.0  # in run-equivalents: different runs, each by the share that it covers
+        self._known: set[bytes] = set()
         self.edges = np.linspace(study.clock.start, study.clock.end, self.cells + 1)
+        self.ticks = ticks.times(self.edges)
+        self._snapped = ticks.snapped(self.outputs, self.ticks)
         sources = germ.noise.sources
         self.richness = study.check.richness
-        most = max([self.richness * n for n in terms], default=1)
+        most = max([self.richness * n for n in self.terms.piloted], default=1)
         self.history = NoiseHistory(
             study.seed, ("a",) * len(sources), sources, self.edges, most, np.ones(len(sources))
         )
@@ -103,13 +113,25 @@ class Horizon:
         span = slice(self.germ.first_parameter, self.germ.first_noise)
         return Members(values, carried, nodes[:, span], self.germ.parameters(nodes))
 
-    def model(self, first: int, last: int, richness: int = 1) -> NoiseModel:
-        """The noise on cells first ... last - 1."""
+    @property
+    def end(self) -> int:
+        """The horizon's last tick."""
+        return self.cells * TICKS
+
+    def share(self, first: int, last: int) -> float:
+        """Length of the arc from tick first to tick last over the horizon's."""
+        return float((self.ticks[last] - self.ticks[first]) / (self.ticks[-1] - self.ticks[0]))
+
+    def model(
+        self, first: int, last: int, richness: int = 1, terms: tuple[int, ...] | None = None
+    ) -> NoiseModel:
+        """The noise on the arc of ticks first ... last."""
+        terms = self.terms.at((last - first) / TICKS) if terms is None else terms
         bases = tuple(
-            n.expanded_on(richness * k) for n, k in zip(self.study.noise, self.terms, strict=True)
+            n.expanded_on(richness * k) for n, k in zip(self.study.noise, terms, strict=True)
         )
         sources = self.germ.noise.sources
-        return NoiseModel(sources, bases, self.edges[first], self.edges[last])
+        return NoiseModel(sources, bases, float(self.ticks[first]), float(self.ticks[last]))
 
     def multiplies(self, model: NoiseModel) -> BoolArray:
         """(K,) whether a white coefficient belongs to a source that multiplies the state."""
@@ -140,19 +162,26 @@ class Horizon:
 
     def arc_times(self, first: int, last: int) -> FloatArray:
         """Output times within (start, end] of an arc, and its end."""
-        start, end = self.edges[first], self.edges[last]
-        inner = self.outputs[(self.outputs > start) & (self.outputs < end)]
+        start, end = self.ticks[first], self.ticks[last]
+        inner = self._snapped[(self._snapped > start) & (self._snapped < end)]
         return np.append(inner, end)
 
-    def output_rows(self, arc: ArcMap) -> IntArray:
-        """Output times that an arc holds: those in (start, end]."""
-        inside = (self.outputs > arc.start) & (self.outputs <= arc.times[-1])
+    def rows_between(self, first: int, last: int) -> IntArray:
+        """Output times in (start, end] of the arc of ticks first ... last."""
+        inside = (self._snapped > self.ticks[first]) & (self._snapped <= self.ticks[last])
         return np.flatnonzero(inside)
+
+    def places(self, times: FloatArray, rows: IntArray) -> IntArray:
+        """Where output times `rows` stand among an arc's own times."""
+        return np.searchsorted(times, self._snapped[rows])
+
+    def output_rows(self, arc: ArcMap) -> IntArray:
+        """Output times that an arc holds."""
+        return self.rows_between(arc.first, arc.last)
 
     def inner_times(self, arc: ArcMap) -> IntArray:
         """Which of the arc's own times are output times."""
-        rows = self.output_rows(arc)
-        return np.searchsorted(arc.times, self.outputs[rows])
+        return self.places(arc.times, self.output_rows(arc))
 
     def run(
         self, members: Members, model: NoiseModel, white: FloatArray, times: FloatArray, label: str
@@ -162,7 +191,9 @@ class Horizon:
         grid = np.concatenate([[start], times])
         states = self.chart.to_state(members.values, start * self.chart_time)
         forcing = model.realise(self.forcing_columns(model, members.carried, white))
-        outcomes = self.engine.run(Batch(states, grid, forcing, members.parameters), label)
+        batch = Batch(states, grid, forcing, members.parameters)
+        self._count(batch)
+        outcomes = self.engine.run(batch, label)
         self.outcomes.append(replace(outcomes, states=outcomes.states[:, :0]))
         with np.errstate(invalid="ignore"):
             values = self.chart.from_state(outcomes.states, grid * self.chart_time)
@@ -170,26 +201,65 @@ class Horizon:
         values[good] = self.chart.unwrap(values[good], grid * self.chart_time, members.values[good])
         return values[:, 1:], good
 
+    def _count(self, batch: Batch) -> None:
+        """Add to the cost what has not been asked for before, in this session or an earlier one."""
+        common = batch.forcing.digest() + batch.times.tobytes()
+        share = (batch.times[-1] - batch.times[0]) / self.study.clock.length
+        columns = (batch.states, batch.forcing.coefficients, batch.parameters)
+        for row in np.hstack(columns):
+            key = hashlib.blake2b(common + row.tobytes(), digest_size=16).digest()
+            if key not in self._known:
+                self._known.add(key)
+                self.cost += float(share)
+
     def advance(
         self,
         arc: ArcMap,
         members: Members,
         history: NoiseHistory,
         block: int,
+        direct: bool = False,
     ) -> tuple[FloatArray, Members, int]:
-        """Members through an arc: chart values (n, m, d), where they then stand, how many far."""
+        """Members through an arc: chart values (n, m, d), where they then stand, how many far.
+
+        With `direct`, those beyond the arc's `direct_reach` are run by the propagator itself.
+        """
         n = members.values.shape[0]
         white = self.fresh(arc.noise, history, arc.first, arc.last, block, n)
-        values, far = arc(np.hstack([members.correlated, white]))
-        carried = np.empty_like(members.carried)
-        for i, j in enumerate(self.gauss_markov):
-            carried[:, i] = history.carry(j, members.carried[:, i], arc.first, arc.last, block)
+        values, leverage = arc(np.hstack([members.correlated, white]))
+        far = leverage > REACH
+        if direct and np.any(beyond := leverage > arc.direct_reach):
+            far &= ~self.substitute(arc, values, members, white, np.flatnonzero(beyond))
+        carried = self.carry(members.carried, history, arc.first, arc.last, block)
         after = Members(values[:, -1], carried, members.law, members.parameters)
         return values, after, int(far.sum())
 
+    def carry(
+        self, carried: FloatArray, history: NoiseHistory, first: int, last: int, block: int
+    ) -> FloatArray:
+        """Gauss-Markov values (n, G) at the end of the arc of ticks first ... last."""
+        after = np.empty_like(carried)
+        for i, j in enumerate(self.gauss_markov):
+            after[:, i] = history.carry(j, carried[:, i], first, last, block)
+        return after
+
+    def substitute(
+        self, arc: ArcMap, values: FloatArray, members: Members, white: FloatArray, rows: IntArray
+    ) -> BoolArray:
+        """Put direct runs of some members into values (n, m, d); which members were (n,)."""
+        label = f"members far outside, t = {arc.start:g} to {arc.times[-1]:g}"
+        found, good = self.run(members.take(rows), arc.noise, white[rows], arc.times, label)
+        values[rows[good]] = found[good]
+        done = np.zeros(values.shape[0], dtype=bool)
+        done[rows[good]] = True
+        return done
+
 
 def cell_count(study: Study) -> int:
-    """The study's number of arcs; "auto" is half a period an arc, or 32 without a period."""
+    """The number of cells: the study's arcs, or where they are "auto" one each half period.
+
+    Without a period 32, from which arcs are lengthened and shortened as they need.
+    """
     if isinstance(study.chain.arcs, int):
         return study.chain.arcs
     if study.clock.period is None:

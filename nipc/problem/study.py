@@ -194,9 +194,11 @@ class ExpansionSettings(_Section):
 class ChainSettings(_Section):
     """How the horizon is cut into arcs, and how far an arc's polynomial may go.
 
-    `arcs` is a number of equal arcs, or "auto": half a period each. Where the held-out paths over
-    the whole horizon are off by more than the tolerance, the coarser arcs are done again, at most
-    `rounds` times.
+    `arcs` is a number of equal arcs, or "auto": half a period each at first, then halved where a
+    higher degree does not bring the held-out runs within the tolerance, and longer where that is
+    easy. Where the held-out paths over the whole horizon are off by more than the tolerance, the
+    coarser arcs are done again, at most `rounds` times. Members far outside an arc's design are run
+    directly, up to `direct_share` of the arc's runs.
     """
 
     arcs: Count | Literal["auto"] = 1
@@ -206,6 +208,7 @@ class ChainSettings(_Section):
     oversampling: Annotated[float, Field(ge=1.05, le=20)] = 1.4
     arc_tolerance: Share | None = None
     rounds: Annotated[int, Field(ge=0, le=5)] = 2
+    direct_share: Annotated[float, Field(ge=0, le=10, allow_inf_nan=False)] = 0.1
 
 
 class EnsembleSettings(_Section):

@@ -1,0 +1,131 @@
+"""What is done next with an arc: accept it, raise its degree, halve it; and how long the next is.
+
+The tolerance is for the horizon. Errors of successive arcs add up like independent ones, so an arc
+that covers a share s of the horizon may have sqrt(s) of it.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, replace
+from enum import Enum
+
+from nipc.chain.ticks import TICKS
+from nipc.problem.study import ChainSettings
+
+USELESS = 0.5  # a held-out error of half the spread: the arc's polynomial says nothing
+NO_GAIN = 0.7  # a step that leaves more of the error than this was not worth its runs
+EASY = 0.2  # of the tolerance: an arc this good may be longer
+DEARER = 1.25  # a longer arc may have so many times the terms
+LONGEST = 8  # cells
+MANY_TERMS = 600  # beyond, a shorter arc is cheaper than a higher degree
+
+
+class Step(Enum):
+    """What comes next."""
+
+    ACCEPT = "accept"
+    RAISE = "raise"
+    HALVE = "halve"
+    STOP = "stop"
+
+
+@dataclass(frozen=True)
+class Tried:
+    """Degree, held-out error over the arc's tolerance, held-out error, and terms of a trial."""
+
+    degree: int
+    ratio: float
+    error: float
+    terms: int
+
+
+@dataclass(frozen=True)
+class Steering:
+    """Length (ticks) and degree with which the next arc is tried first."""
+
+    settings: ChainSettings
+    tolerance: float
+    degree: int
+    length: int = TICKS
+    rested: bool = True
+
+    @classmethod
+    def of(cls, settings: ChainSettings, tolerance: float) -> Steering:
+        asked = settings.state_degree
+        return cls(settings, tolerance, asked if isinstance(asked, int) else 1)
+
+    @property
+    def adaptive(self) -> bool:
+        """Whether arcs may be shortened and lengthened."""
+        return self.settings.arcs == "auto"
+
+    @property
+    def fixed_degree(self) -> bool:
+        return isinstance(self.settings.state_degree, int)
+
+    def allowed(self, share: float) -> float:
+        """Held-out error allowed to an arc that covers this share of the horizon."""
+        return self.settings.arc_tolerance or self.tolerance * math.sqrt(share)
+
+    def span(self, at: int, end: int) -> int:
+        """Last tick of an arc that starts at tick `at` and must not pass tick `end`."""
+        length = self.length
+        if length >= TICKS and at % TICKS == 0:
+            return min(at + length // TICKS * TICKS, end)
+        length = min(length, TICKS)
+        while at % length or at + length > end:  # a part of a cell, where it can lie
+            length //= 2
+        return at + length
+
+    def judge(self, tried: list[Tried], length: int, halved: list[Tried]) -> tuple[Step, str]:
+        """What to do after the trials of an arc of this length; `halved` are longer arcs' best."""
+        last, best = tried[-1], min(tried, key=lambda t: t.error)
+        if last.ratio <= 1.0:
+            return Step.ACCEPT, ""
+        reason = self._no_higher(tried)
+        if reason is None:
+            return Step.RAISE, ""
+        useless = not math.isfinite(best.error) or best.error > USELESS
+        gains = not halved or best.ratio <= NO_GAIN * halved[-1].ratio or useless
+        if self.adaptive and length > 1 and gains:
+            return Step.HALVE, reason
+        if useless:
+            return Step.STOP, f"held-out runs of the arc miss by {best.error:.0%} of the spread"
+        if self.adaptive and not gains:
+            reason = "neither a higher degree nor a shorter arc brings more"
+        return Step.ACCEPT, reason
+
+    def _no_higher(self, tried: list[Tried]) -> str | None:
+        """Why a higher degree is not tried, or None."""
+        last = tried[-1]
+        if self.fixed_degree:
+            return "the degree is fixed by the study"
+        if last.degree >= self.settings.largest_degree:
+            return "the largest degree is not enough"
+        if len(tried) > 1 and last.error > NO_GAIN * tried[-2].error:
+            return "a higher degree brings nothing: the noise terms set the error"
+        if self.adaptive and last.terms > MANY_TERMS:
+            return "a higher degree has too many terms"
+        return None
+
+    def shorter(self, length: int) -> Steering:
+        """After an arc of this length was too long: half of it, from the degree one lower."""
+        half = length // 2 if length <= TICKS else length // TICKS // 2 * TICKS
+        degree = self.degree if self.fixed_degree else max(1, self.degree - 1)
+        return replace(self, length=half, degree=degree, rested=False)
+
+    def after(
+        self, degree: int, ratio: float, lower: float, length: int, dearer: float
+    ) -> tuple[Steering, str]:
+        """For the arc that follows one accepted with this degree, length and error ratios.
+
+        `lower` is the error ratio at one degree less; `dearer` how many times the terms an arc of
+        twice the length would have. An arc just halved is followed by one of the same length.
+        """
+        easier = not self.fixed_degree and degree > 1 and lower <= 0.5
+        following = replace(self, degree=degree - easier, length=length, rested=True)
+        may = self.adaptive and self.rested and not easier and length < LONGEST * TICKS
+        if may and ratio <= EASY and (length < TICKS or dearer <= DEARER):
+            return replace(following, length=2 * length), "easy: the next may be twice as long"
+        return following, ""

@@ -1,4 +1,4 @@
-"""One arc under construction: its runs only ever grow, its degree rises until held-out runs agree."""
+"""One arc under construction: runs are only ever added, and fits judged by held-out runs."""
 
 from __future__ import annotations
 

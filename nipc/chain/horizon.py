@@ -49,8 +49,8 @@ class Members:
 class Horizon:
     """The cells of a horizon, the noise histories on them, and members moving through arcs.
 
-    An arc is told by its first and last tick (see `nipc.chain.ticks`); `terms` may be replaced once,
-    by what a pilot has shown, before any arc but the first is built.
+    An arc is told by its first and last tick (see `nipc.chain.ticks`); `terms` may be replaced by
+    what a pilot has shown, once the first arc is built.
     """
 
     def __init__(self, study: Study, engine: Engine, germ: Germ, chart: Chart) -> None:

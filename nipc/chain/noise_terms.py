@@ -56,9 +56,11 @@ class NoiseTerms:
         """What a pilot shows: the fewest leading terms that keep all but `loss` of the variance.
 
         response (K, d): each white coefficient's linear effect on each component at the arc's end,
-        source by source in the pilot's numbers of terms.
+        source by source in the pilot's numbers of terms. The variance is what all sources together
+        give a component.
         """
         found, first = [], 0
+        whole = np.sum(response**2, axis=0)
         for terms, n, judged in zip(self.piloted, self.cell, self.open, strict=True):
             power = response[first : first + terms] ** 2
             first += terms
@@ -68,6 +70,6 @@ class NoiseTerms:
             # tail[k] = what is lost by keeping the first k terms
             tail = np.vstack([np.cumsum(power[::-1], axis=0)[::-1], np.zeros_like(power[:1])])
             with np.errstate(invalid="ignore", divide="ignore"):
-                lost = np.max(np.where(tail[0] > 0, tail / tail[0], 0.0), axis=1)
+                lost = np.max(np.where(whole > 0, tail / whole, 0.0), axis=1)
             found.append(max(FEWEST, int(np.argmax(lost <= loss))))
         return replace(self, cell=tuple(found), open=(False,) * len(found))

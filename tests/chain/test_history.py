@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 
@@ -98,7 +100,7 @@ def test_increments_inside_a_cell_add_up():
     cuts = [0, 32, 48, 56, 64]
     parts = [
         np.sqrt((b - a) / TICKS) * paths.white(0, Legendre(2), a, b, 0, 7)[:, 0]
-        for a, b in zip(cuts[:-1], cuts[1:], strict=True)
+        for a, b in pairwise(cuts)
     ]
     assert sum(parts) == pytest.approx(whole, abs=1e-12)
 

@@ -64,8 +64,9 @@ class ArcMap:
     """Chart states at an arc's times as polynomials of what goes into the arc.
 
     Ticks first ... last; times (m,) after the arc's start, the last being its end; coefficients
-    (terms, m d). `reach` is the largest Christoffel value among the design's runs. Members whose
-    leverage passes `direct_reach` are worth a direct run.
+    (terms, m d). `reach` is the largest Christoffel value among the design's runs; low, high (m, d)
+    what its runs reached, widened by half. So many members of the ensemble as `direct_runs` may be
+    run directly, those farthest outside.
     """
 
     first: int
@@ -76,25 +77,41 @@ class ArcMap:
     basis: TensorBasis
     coefficients: FloatArray
     reach: float
+    low: FloatArray
+    high: FloatArray
     degree: int
     components: int
-    direct_reach: float = float("inf")
+    direct_runs: float = 0.0
 
     def __call__(self, germ: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Chart states (n, m, d) of germ rows (n, c + K), and the rows' leverage (n,).
+        """Chart states (n, m, d) of germ rows (n, c + K), and how far outside the rows are (n,).
 
-        Leverage is the Christoffel function over its largest value in the design. Where it passes
-        `REACH` the polynomial would be extrapolated: the parts beyond degree one are scaled down
-        there, so that a far member moves by the linear map and nothing explodes.
+        Far is what passes one. It is the larger of two: the Christoffel function over `REACH` times
+        its largest value in the design, where the polynomial is extrapolated; and the terms of the
+        highest degree over `STEEP` times the spread, at the arc's end, where it has not converged.
+        There the parts beyond degree one are scaled down, so that a far member moves by the linear
+        map; and none leaves what runs have reached by more than half of it: nothing explodes.
         """
         matrix = self.basis.evaluate(germ)
-        leverage = np.einsum("tn,tn->n", matrix, matrix) / self.reach
-        far = leverage > REACH
+        outside = np.einsum("tn,tn->n", matrix, matrix) / (REACH * self.reach)
+        order = self.basis.indices.sum(axis=1)
+        if self.degree > 1:
+            top = order == order.max()
+            last = self.coefficients.reshape(order.size, self.times.size, -1)[:, -1]
+            spread = np.sqrt(np.sum(last[1:] ** 2, axis=0))
+            steep = np.abs(matrix[top].T @ last[top])
+            with np.errstate(invalid="ignore", divide="ignore"):
+                steep = np.where(spread > 0, steep / (STEEP * spread), 0.0)
+            outside = np.maximum(outside, steep.max(axis=1))
+        far = outside > 1.0
         if np.any(far):
-            nonlinear = self.basis.indices.sum(axis=1) > 1
-            matrix[np.ix_(nonlinear, far)] *= REACH / leverage[far]
+            matrix[np.ix_(order > 1, far)] /= outside[far]
         values = (matrix.T @ self.coefficients).reshape(germ.shape[0], -1, self.components)
-        return values, leverage
+        beyond = np.any((values < self.low) | (values > self.high), axis=(1, 2))
+        if np.any(beyond):
+            values[beyond] = np.clip(values[beyond], self.low, self.high)
+            outside[beyond] = np.maximum(outside[beyond], 1.0 + 1e-9)
+        return values, outside
 
     def sizes(self, spread: FloatArray) -> FloatArray:
         """(K,) largest linear effect of each noise variable over the spread (d,) at the end."""
@@ -117,3 +134,4 @@ class ArcMap:
 
 
 REACH = 4.0
+STEEP = 0.3

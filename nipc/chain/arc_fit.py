@@ -9,7 +9,7 @@ import numpy as np
 
 from nipc.arrays import FloatArray
 from nipc.chain.arc import ArcBasis, ArcMap
-from nipc.chain.history import NoiseHistory
+from nipc.chain.history import BLOCK, NoiseHistory
 from nipc.chain.horizon import Horizon, Members
 from nipc.errors import FitError
 from nipc.expansion import TensorBasis, christoffel_weights, least_squares, near_optimal_subset
@@ -37,8 +37,9 @@ class Trial:
 class ArcFit:
     """Design, runs and fits of the arc of ticks first ... last.
 
-    `pool` gives the basis its law and the design its candidates; the `held` members, true states
-    at the arc's start, are run directly with noise from `checked` and judge the fits.
+    `pool` gives the basis its law (by its first members) and the design its candidates; the `held`
+    members, true states at the arc's start, are run directly with noise from `checked` and judge
+    the fits.
     """
 
     def __init__(
@@ -58,7 +59,8 @@ class ArcFit:
         start, end = horizon.ticks[first], horizon.ticks[last]
         self.label = f"t = {start:.6g} to {end:.6g} of {horizon.ticks[-1]:.6g}"
         white = horizon.fresh(self.model, horizon.history, first, last, 0, pool.values.shape[0])
-        self.candidates = np.hstack([pool.correlated, white])
+        self.rows = np.flatnonzero(~pool.lost)
+        self.candidates = np.hstack([pool.correlated, white])[self.rows]
         self.width = pool.correlated.shape[1]
         rich = horizon.model(first, last, self.study.check.richness, terms)
         count = held.values.shape[0]
@@ -82,7 +84,10 @@ class ArcFit:
         # noise that multiplies the state may have no linear effect, and yet matter
         sizes = np.where(self.horizon.multiplies(self.model), 1.0, sizes)
         basis = ArcBasis.of(
-            self.pool.correlated, sizes, max(degree, 1), self.study.chain.noise_degree
+            self.candidates[:BLOCK, : self.width],
+            sizes,
+            max(degree, 1),
+            self.study.chain.noise_degree,
         )
         self._extend(basis.full)
         arc, spread = self._fit(basis.full, degree)
@@ -103,7 +108,7 @@ class ArcFit:
         rows = near_optimal_subset(basis, self.candidates, wanted, rng, taken).rows
         white = self.candidates[rows, self.width :]
         values, good = self.horizon.run(
-            self.pool.take(rows), self.model, white, self.times, f"{self.label}, design"
+            self.pool.take(self.rows[rows]), self.model, white, self.times, f"{self.label}, design"
         )
         self.runs += wanted
         self.failed += int((~good).sum())
@@ -120,9 +125,12 @@ class ArcFit:
         fit = least_squares(matrix, self.outputs, christoffel_weights(matrix))
         components = self.truth.shape[2]
         reach = float(np.max(np.einsum("tn,tn->n", matrix, matrix)))
+        ran = self.outputs.reshape(-1, self.times.size, components)
+        low, high = ran.min(axis=0), ran.max(axis=0)
+        slack = 0.5 * (high - low)
         arc = ArcMap(
             self.first, self.last, float(self.model.start), self.times, self.model, basis,
-            fit.coefficients, reach, degree, components,
+            fit.coefficients, reach, low - slack, high + slack, degree, components,
         )  # fmt: skip
         shaped = fit.coefficients.reshape(matrix.shape[0], self.times.size, components)
         return arc, np.sqrt(np.sum(shaped[1:, -1] ** 2, axis=0))

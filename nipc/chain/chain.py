@@ -8,14 +8,14 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from nipc.arrays import FloatArray
-from nipc.chain.arc import REACH, ArcMap
+from nipc.chain.arc import ArcMap
 from nipc.chain.arc_fit import ArcFit, Trial
 from nipc.chain.direct import Continued, continue_directly
 from nipc.chain.horizon import Horizon, Members
 from nipc.chain.steering import Steering, Step, Tried
 from nipc.chain.ticks import TICKS
 
-POOL = 4096
+POOL = 16384  # members from which designs are picked: the more, the fewer lie outside them
 KEPT_FOR_DIRECT = 0.3  # of a budget that the arcs would overdraw, for going on by direct runs
 
 
@@ -69,7 +69,7 @@ class _Built:
 class ChainBuilder:
     """Builds the arcs of a study one after the other.
 
-    The pool (the ensemble's first block) gives each arc its basis and the candidates of its
+    The pool (the ensemble's first members) gives each arc its basis and the candidates of its
     design. The check's members are run directly through every arc; they are each arc's held-out
     runs too: their states are true ones, their noise paths richer than the expansion sees.
     `told` hears of the records whenever an arc is done.
@@ -88,6 +88,7 @@ class ChainBuilder:
         self.checked = horizon.history.restreamed("check")
         self.steering = Steering.of(study.chain, self.tolerance)
         self.sizes: FloatArray | None = None
+        self.saved = 0.0  # run-equivalents that the pool's far members may still take
         self.notes: list[str] = []
 
     def tightened(self, factor: float) -> ChainBuilder:
@@ -123,8 +124,8 @@ class ChainBuilder:
                 break
             arc = built.map
             rows, inside = horizon.output_rows(arc), horizon.inner_times(arc)
-            pool = self._moved(arc, pool, built.record.direct)
-            steps, chained, _ = horizon.advance(arc, chained, self.checked, 0, direct=True)
+            pool = horizon.advance(arc, pool, horizon.history, 0, built.record.direct)[1]
+            steps, chained = horizon.advance(arc, chained, self.checked, 0, study.check.runs)
             seen[:, rows] = built.truth[:, inside]
             predicted[:, rows] = steps[:, inside]
             direct = replace(direct, values=built.truth[:, -1], carried=chained.carried)
@@ -138,9 +139,19 @@ class ChainBuilder:
             continued, words = continue_directly(horizon, pool, at)
             self.notes.append(words)
         return Chain(
-            tuple(maps), tuple(records), seen, predicted, nodes, reached, bool(stopped),
-            tuple(self.notes), continued,
+            self._granted(maps, records), tuple(records), seen, predicted, nodes, reached,
+            bool(stopped), tuple(self.notes), continued,
         )  # fmt: skip
+
+    def _granted(self, maps: list[ArcMap], records: list[ArcRecord]) -> tuple[ArcMap, ...]:
+        """The arcs with the direct runs that their far members get: the study's share of all."""
+        share = [self.horizon.share(arc.first, arc.last) for arc in maps]
+        spent = sum(r.runs * s for r, s in zip(records, share, strict=False))
+        need = sum(arc.direct_runs * s for arc, s in zip(maps, share, strict=True))
+        part = min(1.0, self.study.chain.direct_share * spent / need) if need else 1.0
+        # the pool's count is a sample: leave room for three more than it has shown
+        room = 3.0 * self.study.ensemble.members / POOL
+        return tuple(replace(a, direct_runs=part * (a.direct_runs + room)) for a in maps)
 
     def _overdrawn(self, records: list[ArcRecord]) -> str:
         """Why the budget ends the chain here, or nothing."""
@@ -156,20 +167,6 @@ class ChainBuilder:
                 f"all arcs would take some {left:.0f} run-equivalents, and the budget is {budget:g}"
             )
         return ""
-
-    def _moved(self, arc: ArcMap, pool: Members, direct: int) -> Members:
-        """The pool at the arc's end, its farthest members by direct runs."""
-        horizon = self.horizon
-        if direct == 0:
-            return horizon.advance(arc, pool, horizon.history, 0)[1]
-        white = horizon.fresh(
-            arc.noise, horizon.history, arc.first, arc.last, 0, pool.values.shape[0]
-        )
-        values, leverage = arc(np.hstack([pool.correlated, white]))
-        rows = np.sort(np.argsort(leverage)[-direct:])
-        horizon.substitute(arc, values, pool, white, rows)
-        carried = horizon.carry(pool.carried, horizon.history, arc.first, arc.last, 0)
-        return Members(values[:, -1], carried, pool.law, pool.parameters)
 
     def _arc_or_kept(self, at: int, pool: Members, direct: Members, before: Chain | None) -> _Built:
         limit = self.horizon.end
@@ -228,8 +225,13 @@ class ChainBuilder:
             words.append(f"halved at degree {longer[-1].degree} ({longer[-1].error:.1%} off)")
             self.steering, self.sizes = self.steering.shorter(last - at), None
         words += [reason] if reason else []
-        beyond, reach = self._far(best.map, fit, pool)
-        arc = replace(best.map, direct_reach=reach)
+        # what the ensemble would need; `_granted` cuts it to what it may have
+        need = self._far(best.map, fit)
+        arc = replace(best.map, direct_runs=need)
+        self.saved += self.study.chain.direct_share * fit.runs * share
+        in_pool = need * fit.rows.size / self.study.ensemble.members
+        beyond = min(round(in_pool), int(self.saved / share))
+        self.saved -= beyond * share
         allowed = self.steering.allowed(share)
         self.steering, word = self.steering.after(
             best.degree, best.error / allowed, best.lower / allowed, last - at,
@@ -261,13 +263,29 @@ class ChainBuilder:
             trial = fit.trial(degree, self.sizes)
             self.sizes = trial.map.sizes(trial.spread)
             terms = trial.map.basis.n_terms
-            tried.append(Tried(degree, trial.error / allowed, trial.error, terms))
-            if best is None or trial.error < best.error:
+            # terms of degree p + 1 beside p in `width` variables: (p + 1 + width) / (p + 1) as many
+            dearer = self.study.chain.oversampling * terms * fit.width / (degree + 1)
+            tried.append(
+                Tried(
+                    degree,
+                    trial.error / allowed,
+                    trial.error,
+                    terms,
+                    self._far(trial.map, fit),
+                    dearer,
+                )
+            )
+            if best is None or trial.error < best.error or trial.error <= allowed:
                 best = trial
             step, reason = self.steering.judge(tried, fit.last - fit.first, longer)
             if step is not Step.RAISE:
                 return step, reason, best, tried
             degree += 1
+
+    def _far(self, arc: ArcMap, fit: ArcFit) -> float:
+        """How many members of the ensemble lie far outside an arc's design, by the pool's share."""
+        outside = arc(fit.candidates)[1]
+        return float(np.mean(outside > 1.0)) * self.study.ensemble.members
 
     def _learn(self, trial: Trial) -> None:
         """Keep as many noise terms as the first arc's response uses."""
@@ -284,18 +302,3 @@ class ChainBuilder:
         if kept:
             self.notes.append(f"Noise terms that the first arc's response uses: {kept}.")
         self.sizes = None
-
-    def _far(self, arc: ArcMap, fit: ArcFit, pool: Members) -> tuple[int, float]:
-        """How many of the pool go directly, and the leverage beyond which the ensemble does.
-
-        Of either, direct runs may be the study's share of the arc's own.
-        """
-        _, leverage = arc(fit.candidates)
-        far = np.sort(leverage[leverage > REACH])[::-1]
-        most = self.study.chain.direct_share * fit.runs
-        in_pool = int(min(far.size, most))
-        part = pool.values.shape[0] / max(self.study.ensemble.members, 1)
-        in_ensemble = int(min(far.size, most * part))
-        if in_ensemble == far.size:
-            return in_pool, REACH
-        return in_pool, float("inf") if in_ensemble == 0 else float(far[in_ensemble - 1])

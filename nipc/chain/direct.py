@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -63,7 +63,7 @@ def continue_directly(horizon: Horizon, pool: Members, at: int) -> tuple[Continu
         carried = np.empty((count, members.carried.shape[1]))
         carried[alive] = members.carried
         carried = horizon.carry(carried, horizon.history, first, last, 0)[alive]
-        members = Members(found[:, -1], carried, members.law, members.parameters)
+        members = replace(members, values=found[good, -1], carried=carried)
     words = (
         f"From there on {count} members of the ensemble went on by direct runs; what is said of "
         "later times rests on them alone."

@@ -69,16 +69,24 @@ class NoiseHistory:
     def cell(self, source: int, cell: int, block: int, count: int, terms: int) -> FloatArray:
         """Coefficients (terms, count) of the first `count` members of a block on one cell.
 
-        Row k is the same however many rows are asked for.
+        Row k is the same however many rows are asked for. More members than a block holds are
+        those of the blocks that follow.
         """
-        stream = f"{self.sources[source].name}:{self.streams[source]}"
-        rng = self._generator(stream, cell, block)
-        return rng.standard_normal((terms, BLOCK))[:, :count]
+        return self._normal(source, "", cell, block, count, terms)
 
     def initial(self, source: int, block: int, count: int) -> FloatArray:
         """A Gauss-Markov source's value at the start over its stationary deviation: (count,)."""
-        stream = f"{self.sources[source].name}:{self.streams[source]}:initial"
-        return self._generator(stream, 0, block).standard_normal(BLOCK)[:count]
+        return self._normal(source, ":initial", 0, block, count, 1)[0]
+
+    def _normal(
+        self, source: int, kind: str, cell: int, block: int, count: int, terms: int
+    ) -> FloatArray:
+        stream = f"{self.sources[source].name}:{self.streams[source]}{kind}"
+        parts = [
+            self._generator(stream, cell, block + b).standard_normal((terms, BLOCK))[:, :part]
+            for b, part in blocks_of(count)
+        ]
+        return parts[0] if len(parts) == 1 else np.hstack(parts)
 
     def piece(
         self, source: int, piece: Piece, block: int, count: int, terms: int | None = None
@@ -89,16 +97,12 @@ class NoiseHistory:
             return self.cell(source, piece.cell, block, count, terms)
         whole = self.piece(source, piece.parent, block, count)
         key = f"{piece.cell}/{piece.level}/{piece.index // 2}"
-        fresh = self._drawn(source, key, block, count, 2 * self.cell_terms)
+        fresh = self._normal(source, f":{key}", 0, block, count, 2 * self.cell_terms)
         split = self._projection(Legendre(self.cell_terms), np.array([0.5, 0.5]))
         split = split.transpose(1, 0, 2).reshape(self.cell_terms, -1)
         both = fresh + split.T @ (whole - split @ fresh)
         first = (piece.index % 2) * self.cell_terms
         return both[first : first + terms]
-
-    def _drawn(self, source: int, key: str, block: int, count: int, terms: int) -> FloatArray:
-        stream = f"{self.sources[source].name}:{self.streams[source]}:{key}"
-        return self._generator(stream, 0, block).standard_normal((terms, BLOCK))[:, :count]
 
     def _width(self, piece: Piece) -> float:
         return float(self.edges[piece.cell + 1] - self.edges[piece.cell]) / 2.0**piece.level
@@ -169,7 +173,7 @@ class NoiseHistory:
             drawn = self.cell(source, part.cell, block, count, self.cell_terms + 1)
             return drawn[:-1], drawn[-1]
         key = f"{part.cell}/{part.level}/{part.index}/rest"
-        rest = self._drawn(source, key, block, count, 1)[0]
+        rest = self._normal(source, f":{key}", 0, block, count, 1)[0]
         return self.piece(source, part, block, count), rest
 
 

@@ -10,8 +10,8 @@ import numpy as np
 
 from nipc.arrays import BoolArray, FloatArray, IntArray
 from nipc.chain import ticks
-from nipc.chain.arc import REACH, ArcMap
-from nipc.chain.history import BLOCK, NoiseHistory
+from nipc.chain.arc import ArcMap
+from nipc.chain.history import BLOCK, NoiseHistory, blocks_of
 from nipc.chain.noise_terms import NoiseTerms
 from nipc.chain.ticks import TICKS
 from nipc.problem.charts import Chart
@@ -29,13 +29,15 @@ class Members:
     """Where members stand at an arc's start.
 
     values (n, d) in the chart; carried (n, G) Gauss-Markov values over their stationary deviation;
-    law (n, P') uncertain parameters; parameters (n, P) all of them.
+    law (n, P') uncertain parameters; parameters (n, P) all of them; `lost` (n,) are those that were
+    far outside an arc's design and were not run: they move on, but where they are is a guess.
     """
 
     values: FloatArray
     carried: FloatArray
     law: FloatArray
     parameters: FloatArray
+    lost: BoolArray
 
     @property
     def correlated(self) -> FloatArray:
@@ -43,7 +45,10 @@ class Members:
         return np.hstack([self.values, self.carried, self.law])
 
     def take(self, rows: IntArray) -> Members:
-        return Members(self.values[rows], self.carried[rows], self.law[rows], self.parameters[rows])
+        return Members(
+            self.values[rows], self.carried[rows], self.law[rows], self.parameters[rows],
+            self.lost[rows],
+        )  # fmt: skip
 
 
 class Horizon:
@@ -77,11 +82,15 @@ class Horizon:
     # -- members ---------------------------------------------------------------------------------
 
     def nodes(self, streams: tuple[str, ...], block: int, count: int) -> FloatArray:
-        """Start and parameter variables (count, germ size) of members of a block.
+        """Start and parameter variables (count, germ size) of members of a block and the next.
 
         `streams`: one name for the start and one for each parameter, so that each can be frozen
         or drawn anew on its own.
         """
+        parts = [self._block_nodes(streams, block + b)[:part] for b, part in blocks_of(count)]
+        return parts[0] if len(parts) == 1 else np.vstack(parts)
+
+    def _block_nodes(self, streams: tuple[str, ...], block: int) -> FloatArray:
         result = np.empty((BLOCK, self.germ.size))
         result[:, self.germ.first_noise :] = 0.0
         labels = ("start", *self.germ.parameter_names)
@@ -94,7 +103,7 @@ class Horizon:
                 else slice(self.germ.first_parameter + i - 1, self.germ.first_parameter + i)
             )
             result[:, columns] = drawn[:, columns]
-        return result[:count]
+        return result
 
     def streams(self, name: str) -> tuple[str, ...]:
         """The same stream for the start and every parameter."""
@@ -111,7 +120,8 @@ class Horizon:
         for i, j in enumerate(self.gauss_markov):
             carried[:, i] = history.initial(j, block, count) * history.scales[j]
         span = slice(self.germ.first_parameter, self.germ.first_noise)
-        return Members(values, carried, nodes[:, span], self.germ.parameters(nodes))
+        lost = np.zeros(count, dtype=bool)
+        return Members(values, carried, nodes[:, span], self.germ.parameters(nodes), lost)
 
     @property
     def end(self) -> int:
@@ -184,16 +194,30 @@ class Horizon:
         return self.places(arc.times, self.output_rows(arc))
 
     def run(
-        self, members: Members, model: NoiseModel, white: FloatArray, times: FloatArray, label: str
+        self,
+        members: Members,
+        model: NoiseModel,
+        white: FloatArray,
+        times: FloatArray,
+        label: str,
+        lenient: bool = False,
     ) -> tuple[FloatArray, BoolArray]:
-        """Chart values (n, m, d) at the arc's times by direct runs, and which are usable (n,)."""
+        """Chart values (n, m, d) at the arc's times by direct runs, and which are usable (n,).
+
+        When `lenient`, all of them may fail.
+        """
         start = model.start
         grid = np.concatenate([[start], times])
         states = self.chart.to_state(members.values, start * self.chart_time)
         forcing = model.realise(self.forcing_columns(model, members.carried, white))
         batch = Batch(states, grid, forcing, members.parameters)
         self._count(batch)
-        outcomes = self.engine.run(batch, label)
+        policy = self.engine.policy
+        self.engine.policy = replace(policy, tolerated=1.0) if lenient else policy
+        try:
+            outcomes = self.engine.run(batch, label)
+        finally:
+            self.engine.policy = policy
         self.outcomes.append(replace(outcomes, states=outcomes.states[:, :0]))
         with np.errstate(invalid="ignore"):
             values = self.chart.from_state(outcomes.states, grid * self.chart_time)
@@ -218,21 +242,34 @@ class Horizon:
         members: Members,
         history: NoiseHistory,
         block: int,
-        direct: bool = False,
-    ) -> tuple[FloatArray, Members, int]:
-        """Members through an arc: chart values (n, m, d), where they then stand, how many far.
+        direct: float = 0.0,
+    ) -> tuple[FloatArray, Members]:
+        """Members through an arc: chart values (n, m, d), and where they then stand.
 
-        With `direct`, those beyond the arc's `direct_reach` are run by the propagator itself.
+        The farthest outside the arc's design, at most `direct` of them, are run by the propagator
+        itself; the others that are far are lost.
         """
         n = members.values.shape[0]
         white = self.fresh(arc.noise, history, arc.first, arc.last, block, n)
-        values, leverage = arc(np.hstack([members.correlated, white]))
-        far = leverage > REACH
-        if direct and np.any(beyond := leverage > arc.direct_reach):
-            far &= ~self.substitute(arc, values, members, white, np.flatnonzero(beyond))
+        values, outside = arc(np.hstack([members.correlated, white]))
+        far = (outside > 1.0) & ~members.lost
+        count = min(int(direct), int(far.sum()))
+        if count:
+            rows = np.sort(np.argsort(np.where(far, -outside, 0.0), kind="stable")[:count])
+            label = f"members far outside, t = {arc.start:g} to {arc.times[-1]:g}"
+            found, good = self.run(
+                members.take(rows), arc.noise, white[rows], arc.times, label, True
+            )
+            values[rows[good]] = found[good]
+            far[rows[good]] = False
         carried = self.carry(members.carried, history, arc.first, arc.last, block)
-        after = Members(values[:, -1], carried, members.law, members.parameters)
-        return values, after, int(far.sum())
+        lost = members.lost | far
+        return values, Members(values[:, -1], carried, members.law, members.parameters, lost)
+
+    def granted(self, arc: ArcMap, block: int) -> int:
+        """Direct runs that a block of the ensemble gets of those for all of it."""
+        each = arc.direct_runs * BLOCK / max(self.study.ensemble.members, BLOCK)
+        return math.floor(each * (block + 1)) - math.floor(each * block)
 
     def carry(
         self, carried: FloatArray, history: NoiseHistory, first: int, last: int, block: int
@@ -242,17 +279,6 @@ class Horizon:
         for i, j in enumerate(self.gauss_markov):
             after[:, i] = history.carry(j, carried[:, i], first, last, block)
         return after
-
-    def substitute(
-        self, arc: ArcMap, values: FloatArray, members: Members, white: FloatArray, rows: IntArray
-    ) -> BoolArray:
-        """Put direct runs of some members into values (n, m, d); which members were (n,)."""
-        label = f"members far outside, t = {arc.start:g} to {arc.times[-1]:g}"
-        found, good = self.run(members.take(rows), arc.noise, white[rows], arc.times, label)
-        values[rows[good]] = found[good]
-        done = np.zeros(values.shape[0], dtype=bool)
-        done[rows[good]] = True
-        return done
 
 
 def cell_count(study: Study) -> int:

@@ -32,12 +32,18 @@ class Step(Enum):
 
 @dataclass(frozen=True)
 class Tried:
-    """Degree, held-out error over the arc's tolerance, held-out error, and terms of a trial."""
+    """A trial: degree, held-out error over the arc's tolerance, held-out error, terms.
+
+    `far` is how many members of the ensemble would lie outside the design and want a direct run;
+    `dearer` how many runs the next degree would add.
+    """
 
     degree: int
     ratio: float
     error: float
     terms: int
+    far: float = 0.0
+    dearer: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -81,9 +87,11 @@ class Steering:
     def judge(self, tried: list[Tried], length: int, halved: list[Tried]) -> tuple[Step, str]:
         """What to do after the trials of an arc of this length; `halved` are longer arcs' best."""
         last, best = tried[-1], min(tried, key=lambda t: t.error)
-        if last.ratio <= 1.0:
-            return Step.ACCEPT, ""
         reason = self._no_higher(tried)
+        if last.ratio <= 1.0:
+            cheaper = self.settings.direct_share > 0.0 and last.far > last.dearer
+            helps = len(tried) == 1 or last.far < NO_GAIN * tried[-2].far
+            return (Step.RAISE if cheaper and helps and reason is None else Step.ACCEPT), ""
         if reason is None:
             return Step.RAISE, ""
         useless = not math.isfinite(best.error) or best.error > USELESS

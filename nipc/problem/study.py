@@ -198,7 +198,7 @@ class ChainSettings(_Section):
     higher degree does not bring the held-out runs within the tolerance, and longer where that is
     easy. Where the held-out paths over the whole horizon are off by more than the tolerance, the
     coarser arcs are done again, at most `rounds` times. Members far outside an arc's design are run
-    directly, up to `direct_share` of the arc's runs.
+    directly, at most as many as `direct_share` of the arcs' own runs.
     """
 
     arcs: Count | Literal["auto"] = 1
@@ -208,7 +208,7 @@ class ChainSettings(_Section):
     oversampling: Annotated[float, Field(ge=1.05, le=20)] = 1.4
     arc_tolerance: Share | None = None
     rounds: Annotated[int, Field(ge=0, le=5)] = 2
-    direct_share: Annotated[float, Field(ge=0, le=10, allow_inf_nan=False)] = 0.1
+    direct_share: Annotated[float, Field(ge=0, le=10, allow_inf_nan=False)] = 0.5
 
 
 class EnsembleSettings(_Section):

@@ -42,6 +42,40 @@ class TangentProduct:
         return np.asarray(self._logs / self.elapsed)
 
 
+class Stretching:
+    """ln sigma_max(J_K ... J_1) of n members: the growth in the direction that has grown most.
+
+    The product is kept at norm one and its size as a logarithm, so that nothing overflows; what
+    contracts is lost to rounding after a while, which the largest singular value does not mind.
+    """
+
+    def __init__(self, members: int, dimension: int) -> None:
+        self._product = np.broadcast_to(np.eye(dimension), (members, dimension, dimension)).copy()
+        self._logs = np.zeros(members)
+
+    def after(self, maps: FloatArray) -> FloatArray:
+        """(n,) after one more map (n, d, d), which is not kept; NaN where it is not finite."""
+        return np.asarray(self._logs + log_stretch(maps @ self._product))
+
+    def advance(self, maps: FloatArray) -> None:
+        """Compose with one more map (n, d, d)."""
+        product = maps @ self._product
+        size = np.linalg.norm(product, axis=(1, 2), keepdims=True)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            self._product = product / size
+            self._logs = self._logs + np.log(size[:, 0, 0])
+
+
+def log_stretch(maps: FloatArray) -> FloatArray:
+    """ln of the largest singular value of matrices (n, d, e); NaN where one is not finite."""
+    finite = np.isfinite(maps).all(axis=(1, 2))
+    found = np.full(maps.shape[0], np.nan)
+    largest = np.linalg.svd(maps[finite], compute_uv=False)[:, 0]
+    with np.errstate(divide="ignore"):
+        found[finite] = np.log(largest)
+    return found
+
+
 def lyapunov_exponents(
     maps: FloatArray, durations: FloatArray, scale: FloatArray | None = None
 ) -> FloatArray:

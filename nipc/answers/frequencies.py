@@ -47,6 +47,8 @@ def band_edges(elapsed: float, finest: float, centre: float | None = None) -> Fl
     for edge in anchor * RATIO ** np.arange(first, last + 1):
         if edge - edges[-1] >= (1.0 - 1e-9) / elapsed:
             edges.append(float(edge))
+    if len(edges) == 1:
+        edges.append(1.0 / elapsed)
     return np.array([*edges, np.inf])
 
 

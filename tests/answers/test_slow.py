@@ -61,3 +61,39 @@ def test_members_that_disagree_have_no_common_period():
     periods = np.linspace(1.0, 8.0, 9)[:, None]
     assert common_period(np.cos(2 * np.pi * TIMES / periods), TIMES) is None
     assert common_period(np.cos(2 * np.pi * TIMES / (0 * periods + 3.0)), TIMES) is not None
+
+
+def test_an_oscillation_that_spreads_is_judged_by_its_variance():
+    """x'' + W^2 x = s dW/dt: Var x = s^2 (t / 2 W^2 - sin(2 W t) / 4 W^3), D = s^2 / 4 W^2; its
+    mean
+    over a period hardly spreads.
+    """
+    rng = np.random.default_rng(52)
+    w, h, s = 2 * np.pi / 2.5, TIMES[1], 0.3
+    # exact: rotation, and the step's noise by its covariance
+    c, d = np.cos(w * h), np.sin(w * h)
+    xx = (h / 2 - np.sin(2 * w * h) / (4 * w)) / w**2
+    vv, xv = h / 2 + np.sin(2 * w * h) / (4 * w), d**2 / (2 * w**2)
+    factor = np.linalg.cholesky(s**2 * np.array([[xx, xv], [xv, vv]]))
+    state, values = np.zeros((2, 4000)), np.zeros((4000, TIMES.size, 1))
+    for k in range(1, TIMES.size):
+        state = np.array([[c, d / w], [-w * d, c]]) @ state
+        state += factor @ rng.standard_normal((2, 4000))
+        values[:, k, 0] = state[0]
+    for period in (2.5, None):
+        slow = SlowSpreading(TIMES, (period,))
+        slow.update(values)
+        law = slow.laws()[0]
+        assert slow.amplitude == [True]
+        assert law.verdict == "diffusive"
+        assert law.exponent.low < 1.0 < law.exponent.high
+        assert law.coefficient.low < s**2 / (4 * w**2) < law.coefficient.high
+        assert slow.used[0] == pytest.approx(2.5, rel=0.02)
+        assert slow.subjects("s")[0].startswith("an oscillation of period 2.")
+
+
+def test_one_that_is_not_slow_is_judged_as_it_is(paths):
+    slow = gathered(paths, (0.0, 0.0, None))
+    assert slow.used[:2] == (None, None)
+    assert slow.subjects("s")[:2] == ["", ""]
+    assert slow.subjects("s")[2].startswith("averaged over its period of 2.")

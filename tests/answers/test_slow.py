@@ -65,8 +65,7 @@ def test_members_that_disagree_have_no_common_period():
 
 def test_an_oscillation_that_spreads_is_judged_by_its_variance():
     """x'' + W^2 x = s dW/dt: Var x = s^2 (t / 2 W^2 - sin(2 W t) / 4 W^3), D = s^2 / 4 W^2; its
-    mean
-    over a period hardly spreads.
+    mean over a period hardly spreads.
     """
     rng = np.random.default_rng(52)
     w, h, s = 2 * np.pi / 2.5, TIMES[1], 0.3

@@ -44,7 +44,7 @@ def driver_bands(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> 
         handles.append(Patch(lw=0, **look))
         labels.append(frame.printable(name))
     ax.set_xlim(edges[0], edges[-1])
-    ax.set_ylim(0.0, 1.12 * max(float(bottom.max()), 1e-3))
+    ax.set_ylim(0.0, 1.3 * max(float(bottom.max()), 1e-3))
     log_labels(ax, "x")
     unit = reading.time_unit(dataset)
     ax.set_xlabel(frame.with_unit("frequency of the noise", f"1/{unit}" if unit else ""))

@@ -1,0 +1,6 @@
+"""Makes answer_problems importable for these tests."""
+
+import sys
+from pathlib import Path
+
+sys.path.insert(0, str(Path(__file__).parent))

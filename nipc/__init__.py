@@ -8,6 +8,7 @@ if TYPE_CHECKING:
     from nipc.answers.result import Result, load_result
     from nipc.errors import Ended, NipcError
     from nipc.problem.study import Study
+    from nipc.questions import allowance, sweep, whatif
     from nipc.workflow import load_study, plan, probe, run, write_report
 
 __version__ = "0.1.0"
@@ -17,11 +18,14 @@ _HOMES = {
     "NipcError": "nipc.errors",
     "Result": "nipc.answers.result",
     "Study": "nipc.problem.study",
+    "allowance": "nipc.questions",
     "load_result": "nipc.answers.result",
     "load_study": "nipc.workflow",
     "plan": "nipc.workflow",
     "probe": "nipc.workflow",
     "run": "nipc.workflow",
+    "sweep": "nipc.questions",
+    "whatif": "nipc.questions",
     "write_report": "nipc.workflow",
 }
 
@@ -30,11 +34,14 @@ __all__ = [
     "NipcError",
     "Result",
     "Study",
+    "allowance",
     "load_result",
     "load_study",
     "plan",
     "probe",
     "run",
+    "sweep",
+    "whatif",
     "write_report",
 ]
 

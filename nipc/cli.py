@@ -9,6 +9,7 @@ from typing import Annotated
 
 import typer
 
+from nipc.commands.allowance import allowance
 from nipc.commands.check import check
 from nipc.commands.new import new
 from nipc.commands.plan import plan
@@ -16,6 +17,8 @@ from nipc.commands.probe import probe
 from nipc.commands.report import report
 from nipc.commands.run import run
 from nipc.commands.status import status
+from nipc.commands.sweep import sweep
+from nipc.commands.whatif import whatif
 from nipc.errors import NipcError
 
 app = typer.Typer(
@@ -46,7 +49,9 @@ def _options(
 
 
 # in the order in which they are used; their names are their functions' unless told
-for _command in (new, check, plan, probe, run, status, report):
+for _command in (
+    new, check, plan, probe, run, status, report, whatif, sweep, allowance
+):  # fmt: skip
     app.command()(_command)
 
 

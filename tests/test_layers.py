@@ -19,7 +19,7 @@ BELOW = {
     "adapters": {"runs", "problem"},
     "commands": {
         "answers", "chain", "problem", "expansion", "runs", "report", "adapters",
-        "workflow", "terminal", "starter",
+        "workflow", "questions", "terminal", "starter",
     },
 }  # fmt: skip
 

@@ -44,8 +44,8 @@ class ExitDrivers:
         columns = [box.columns[0] for box in self.boxes]
         for suffix, values in (
             ("", result.total),
-            ("_low", result.total_interval.low),
-            ("_high", result.total_interval.high),
+            ("_low", np.clip(result.total_interval.low, 0.0, 1.0)),
+            ("_high", np.clip(result.total_interval.high, 0.0, 1.0)),
         ):
             full = np.full((values.shape[0], count), np.nan)
             full[:, columns] = values[:, 0]

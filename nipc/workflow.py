@@ -5,7 +5,6 @@ from __future__ import annotations
 import json
 import platform
 import time
-from collections import Counter
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
@@ -257,6 +256,7 @@ def run(
     Runs that the ledger in the work folder already holds are not made again. Results are saved
     there and returned. `backend` "inline" runs the propagator in this process.
     """
+    from nipc.answers.evidence import add_failures
     from nipc.answers.result import Result
     from nipc.answers.verdict import findings
     from nipc.runs.engine import Engine, FailurePolicy
@@ -291,6 +291,7 @@ def run(
         "run_equivalents": solved.cost,
         "notes": json.dumps(notes),
     }
+    add_failures(solved.table, engine.failed)
     dataset = solved.table.dataset(attributes)
     dataset.attrs["findings"] = json.dumps(findings(dataset))
     result = Result(dataset, place)
@@ -371,7 +372,9 @@ def _provenance(
     study: Study, outcomes: tuple[Outcomes, ...], began: float, n_jobs: int
 ) -> dict[str, Any]:
     """The attributes of a result: everything that tells where its numbers come from."""
-    reasons = Counter(r for o in outcomes for r in o.reasons if r is not None)
+    from nipc.runs.failures import causes
+
+    reasons = causes(r for o in outcomes for r in o.reasons)
     packages = ("nipc", "numpy", "scipy", "scikit-learn", "chaospy", "joblib", "xarray")
     versions = {p: version(p) for p in packages} | {"python": platform.python_version()}
     steps = np.diff(study.clock.times)
@@ -383,7 +386,7 @@ def _provenance(
         "propagator_runs": sum(len(o) for o in outcomes),
         "reused_runs": int(sum(o.reused.sum() for o in outcomes)),
         "failed_runs": int(sum((~o.ok).sum() for o in outcomes)),
-        "failures": json.dumps([{"reason": r, "count": c} for r, c in reasons.most_common()]),
+        "failures": json.dumps([{"reason": r, "count": c} for r, c in reasons]),
         "budget": study.budget if study.budget is not None else float("nan"),
         "members": study.ensemble.members,
         "wall_time": time.monotonic() - began,

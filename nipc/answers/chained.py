@@ -8,12 +8,14 @@ import numpy as np
 
 from nipc.answers.drivers import PickFreezeAccumulator
 from nipc.answers.ensemble import add_ensemble
+from nipc.answers.evidence import add_degree_norms, add_noise_bases, degree_norms
 from nipc.answers.exits import ExitDrivers
 from nipc.answers.intervals import Interval, normal_factor
 from nipc.answers.single import add_check
 from nipc.answers.spreading import spread_rate
 from nipc.answers.table import ResultTable
 from nipc.arrays import FloatArray
+from nipc.chain.arc import ArcMap
 from nipc.chain.chain import Chain
 from nipc.chain.check import HeldOut
 from nipc.chain.history import BLOCK, NoiseHistory, blocks_of
@@ -225,3 +227,14 @@ class ChainAnswers:
         ):
             values = [getattr(r, name) for r in records]
             table.add(f"arc_{name}", ("arc",), values, units, words)
+        norms = [_norms(arc) for arc in self.chain.maps]
+        # an arc at which the chain stopped has a record, and no map
+        add_degree_norms(table, norms + [np.empty(0)] * (len(records) - len(norms)))
+        add_noise_bases(table, [arc.noise for arc in self.chain.maps])
+
+
+def _norms(arc: ArcMap) -> FloatArray:
+    """Norms by degree of an arc's coefficients at its end."""
+    degrees = arc.basis.indices.sum(axis=1)
+    last = arc.coefficients.reshape(degrees.size, arc.times.size, -1)[:, -1]
+    return degree_norms(last, degrees)

@@ -63,14 +63,15 @@ class LawFit:
 class SpreadingLaw:
     """The verdict with what it rests on.
 
-    Var = A + 2 coefficient t^exponent, unit^2 per time^exponent. Where the verdict is diffusive the
-    coefficient is that of the straight line, unit^2 per time. `rate` is lambda of exp(2 lambda t),
-    `plateau` the variance at which the spread stays.
+    Var = offset + 2 coefficient t^exponent, unit^2 per time^exponent. Where the verdict is
+    diffusive, offset and coefficient are those of the straight line, unit^2 per time. `rate` is
+    lambda of exp(2 lambda t), `plateau` the variance at which the spread stays.
     """
 
     verdict: str
     reason: str
     coefficient: Estimate = UNKNOWN
+    offset: Estimate = UNKNOWN
     exponent: Estimate = UNKNOWN
     rate: Estimate = UNKNOWN
     plateau: Estimate = UNKNOWN
@@ -187,6 +188,7 @@ def _judge(
     exponent = power.estimate("alpha", student)
     line = min(named["linear"], named["linear from an offset"], key=lambda fit: fit.criterion)
     diffusion = _scaled(line.estimate("log_growth", student), 0.5 * end / horizon)
+    start = _offset(line, student, end), _offset(power, student, end)
     general = _scaled(power.estimate("log_growth", student), 0.5 * end / horizon**exponent.value)
 
     def found(verdict: str, reason: str, **numbers: Estimate) -> SpreadingLaw:
@@ -214,6 +216,7 @@ def _judge(
             f" variance about equally well (criteria apart by {lead:.1f}, below {CLEAR:g})",
             exponent=exponent,
             coefficient=general,
+            offset=start[1],
         )
     evidence = (
         f"{best.law.name} fits with {100 * best.misfit:.1f} % rms in variance; the next of another"
@@ -232,8 +235,14 @@ def _judge(
             f"the exponent {exponent.value:.2f} is known only to between {exponent.low:.2f} and"
             f" {exponent.high:.2f}"
         )
-    coefficient = diffusion if verdict == "diffusive" else general
-    return found(verdict, evidence, exponent=exponent, coefficient=coefficient)
+    straight = verdict == "diffusive"
+    return found(
+        verdict,
+        evidence,
+        exponent=exponent,
+        coefficient=diffusion if straight else general,
+        offset=start[0] if straight else start[1],
+    )
 
 
 def _word(exponent: Estimate) -> str:
@@ -245,6 +254,14 @@ def _word(exponent: Estimate) -> str:
     if exponent.low > 1.0:
         return "super-diffusive"
     return "diffusive" if exponent.high - exponent.low <= 0.4 else "cannot tell"
+
+
+def _offset(fit: LawFit, student: float, end: float) -> Estimate:
+    """A of a law in units of the variance; zero where the law has none."""
+    if "offset" not in fit.law.parameters:
+        return Estimate(0.0, 0.0, 0.0)
+    found = fit.estimate("offset", student)
+    return Estimate(end * found.value, max(end * found.low, 0.0), end * found.high)
 
 
 def _scaled(log: Estimate, by: float) -> Estimate:

@@ -16,7 +16,8 @@ from nipc.answers.table import LEVELS, ResultTable
 from nipc.arrays import FloatArray
 from nipc.problem.study import Study
 
-SHOWN = 60
+SHOWN = 60  # members whose whole paths are kept
+CLOUD, CLOUD_TIMES = 600, 25  # and more of them, at fewer times
 
 
 def boxes_of(study: Study) -> tuple[list[Box], list[Box]]:
@@ -47,8 +48,9 @@ def add_ensemble(
     times = study.clock.times
     confinement = ConfinementAccumulator(times, [*single, *joint], np.nan_to_num(margin))
     quantiles, moments = QuantileAccumulator(), MomentAccumulator()
-    slow = SlowSpreading(times, [study.clock.period if q.slow else None for q in study.quantity])
+    slow = SlowSpreading(times, [study.clock.period if q.slow else 0.0 for q in study.quantity])
     shown: FloatArray | None = None
+    at = np.arange(times.size - 1, -1, -max(1, -(-times.size // CLOUD_TIMES)))[::-1]
     for values, ended in blocks:
         confinement.update(values, ended)
         quantiles.update(values)
@@ -56,7 +58,7 @@ def add_ensemble(
         slow.update(values)
         if shown is None:
             _refuse_empty_boxes(single, values[:, 0])
-            shown = values[:SHOWN].copy()
+            shown, cloud = values[:SHOWN].copy(), values[:CLOUD, at]
     assert shown is not None
     names = "quantile of the quantity"
     table.add(
@@ -73,6 +75,15 @@ def add_ensemble(
         "as the quantity",
         "some members of the ensemble",
     )
+    table.add(
+        "cloud_quantity",
+        ("cloud_member", "quantity", "cloud_time"),
+        np.swapaxes(cloud, 1, 2),
+        "as the quantity",
+        "more members of the ensemble at fewer times",
+    )
+    clock = {"units": study.clock.unit, "long_name": "time"}
+    table.variables["cloud_time"] = (("cloud_time",), times[at], clock)
     result = confinement.result()
     _add_boxes(table, result, [b.columns[0] for b in single])
     if joint:
@@ -143,12 +154,21 @@ def _refuse_empty_boxes(boxes: list[Box], start: FloatArray) -> None:
 def _add_laws(table: ResultTable, slow: SlowSpreading, trust: FloatArray) -> None:
     """How each slow quantity spreads: verdict, evidence, coefficient and exponent."""
     laws = slow.laws(until=trust)
+    table.over_time(
+        "slow_std", slow.std(), "as the quantity",
+        "square root of the variance whose growth the law describes",
+    )  # fmt: skip
     table.by_quantity("spreading_verdict", [law.verdict for law in laws], "", "kind of spreading")
     table.by_quantity("spreading_evidence", [law.reason for law in laws], "", "why")
+    subjects = slow.subjects(table.study.clock.unit)
+    table.by_quantity("spreading_of", subjects, "", "what the law is of, where not the quantity")
+    periods = [np.nan if p is None else p for p in slow.used]
+    table.by_quantity("slow_period", periods, table.study.clock.unit, "period averaged over")
     unit = f"as the quantity squared per {table.study.clock.unit}^exponent"
     for name, units, words in (
         ("coefficient", unit, "D in Var = A + 2 D t^exponent"),
         ("exponent", "1", "exponent in Var = A + 2 D t^exponent"),
+        ("offset", "as the quantity squared", "A in Var = A + 2 D t^exponent"),
     ):
         estimates = [getattr(law, name) for law in laws]
         ends = Interval(np.array([e.low for e in estimates]), np.array([e.high for e in estimates]))

@@ -6,9 +6,12 @@ from collections.abc import Iterator
 
 import numpy as np
 
+from nipc.answers.bands import add_bands, arc_responses
 from nipc.answers.ensemble import add_ensemble
+from nipc.answers.evidence import add_degree_norms, add_noise_bases, degree_norms
 from nipc.answers.exits import EXIT_MEMBERS, ExitDrivers
 from nipc.answers.intervals import Interval, normal_factor
+from nipc.answers.separation import add_exponents, arc_logs, worst_error
 from nipc.answers.spreading import spread_rate
 from nipc.answers.table import ResultTable
 from nipc.arrays import FloatArray
@@ -28,7 +31,41 @@ def single_arc_table(arc: SingleArc) -> ResultTable:
     margin = normal_factor() * np.maximum(rms, np.nan_to_num(_residual(arc)))
     add_ensemble(table, _blocks(arc), margin, arc.check.trust_horizon(arc.study.tolerance))
     _add_exit_drivers(table, arc)
+    add_bands(
+        table, arc_responses(arc), arc.check.trust_horizon(arc.study.tolerance), arc.check.rms
+    )
+    if (logs := arc_logs(arc)) is not None:
+        add_exponents(table, logs, arc.study.clock.start, worst_error(arc.check))
+    _add_arc(table, arc)
     return table
+
+
+def _add_arc(table: ResultTable, arc: SingleArc) -> None:
+    """The one arc, as a chain tells its arcs, and what its coefficients and bases are like."""
+    degrees, germ = arc.expansion.basis.degrees, arc.germ
+    flat = arc.expansion.coefficients.reshape(degrees.size, -1)
+    add_degree_norms(table, [degree_norms(flat, degrees)])
+    add_noise_bases(table, [germ.noise])
+    *designed, _ = arc.outcomes
+    last = arc.relative_error[-1]
+    known = np.isfinite(last).any()
+    clock = arc.study.clock
+    for name, value, unit, words in (
+        ("start", clock.start, clock.unit, "start of the arc"),
+        ("end", clock.end, clock.unit, "end of the arc"),
+        ("degree", int(degrees.max(initial=0)), "1", "degree of the arc's expansion"),
+        ("terms", degrees.size, "1", "terms of the arc's expansion"),
+        ("runs", sum(len(o) for o in designed), "1", "runs of the arc's design"),
+        ("failed", sum(int((~o.ok).sum()) for o in designed), "1", "of them failed"),
+        (
+            "error",
+            float(np.nanmax(last)) if known else np.nan,
+            "1",
+            "leave-one-out error at the arc's end over the spread there",
+        ),
+        ("note", arc.design.words, "", "why the arc is as it is"),
+    ):
+        table.add(f"arc_{name}", ("arc",), [value], unit, words)
 
 
 def _blocks(arc: SingleArc) -> Iterator[tuple[FloatArray, None]]:

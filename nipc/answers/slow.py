@@ -65,10 +65,17 @@ class SlowSpreading:
         return period
 
     def std(self) -> FloatArray:
-        """Of the averaged quantities at the output times (T, Q); NaN where no average reaches."""
+        """Square root of the variance that each law is of, at the output times (T, Q).
+
+        After `laws`; NaN where no average reaches.
+        """
         spread = np.full((self.times.size, len(self.periods)), np.nan)
         for q, (moments, own) in enumerate(zip(self._moments, self._times, strict=True)):
-            spread[np.isin(self.times, own), q] = moments.std[:, 0]
+            variance = moments.variance[:, 0]
+            if self.amplitude[q]:
+                whole, period = self._whole[q].variance[None], self.used[q] or 0.0
+                variance = moving_average(whole, self.times, period)[0][0, :, 0]
+            spread[np.isin(self.times, own), q] = np.sqrt(np.maximum(variance, 0.0))
         return spread
 
     def laws(self, until: FloatArray | None = None, tolerance: float = 0.01) -> list[SpreadingLaw]:

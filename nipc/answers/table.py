@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -19,12 +20,13 @@ LEVELS = (0.025, 0.25, 0.5, 0.75, 0.975)
 class ResultTable:
     """Gathers the variables of `results.nc`; arrays come as (T, Q) and are stored (quantity, time).
 
-    `drivers` are (name, kind) of each source of spread.
+    `drivers` are (name, kind) of each source of spread; `attributes` are kept as JSON.
     """
 
     study: Study
     drivers: tuple[tuple[str, str], ...]
     variables: dict[str, Any] = field(default_factory=dict)
+    attributes: dict[str, Any] = field(default_factory=dict)
 
     def add(
         self, name: str, dims: tuple[str, ...], values: Any, units: str, long_name: str
@@ -100,4 +102,5 @@ class ResultTable:
         }
         if study.joint_box:
             coords["joint"] = ("joint", [box.name for box in study.joint_box])
-        return xr.Dataset(self.variables, coords=coords, attrs=attributes)
+        own = {name: json.dumps(value) for name, value in self.attributes.items()}
+        return xr.Dataset(self.variables, coords=coords, attrs=own | attributes)

@@ -3,13 +3,22 @@
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import xarray as xr
 
 from nipc.report import reading
-from nipc.report.numbers import amount, beside, interval, number, percent, probability, with_spread
+from nipc.report.numbers import (
+    amount,
+    beside,
+    interval,
+    number,
+    percent,
+    probability,
+    typeset,
+    with_spread,
+)
 
 
 @dataclass(frozen=True)
@@ -34,6 +43,28 @@ def split(finding: str) -> tuple[str, str]:
     """A finding and the note in brackets that ends it, if one does."""
     found = re.fullmatch(r"(.*\S)\s+\[([^\[\]]*)\]", finding, flags=re.DOTALL)
     return (found[1], found[2]) if found else (finding, "")
+
+
+@dataclass(frozen=True)
+class Group:
+    """Findings that follow each other and share their note; `first` is the first one's number."""
+
+    note: str
+    first: int
+    sentences: tuple[str, ...]
+
+
+def findings(dataset: xr.Dataset) -> list[Group]:
+    """The findings, a note said once for all that follow each other with it."""
+    told = [split(str(f)) for f in reading.listed(dataset, "findings") or []]
+    groups: list[Group] = []
+    for place, (sentence, note) in enumerate(told, 1):
+        words = typeset(sentence)
+        if groups and groups[-1].note == note:
+            groups[-1] = replace(groups[-1], sentences=(*groups[-1].sentences, words))
+        else:
+            groups.append(Group(note, place, (words,)))
+    return groups
 
 
 def columns(dataset: xr.Dataset) -> list[str]:
@@ -132,12 +163,17 @@ def _trust(dataset: xr.Dataset, trust: reading.Trust) -> Cell:
 
 
 def cost(dataset: xr.Dataset) -> str:
-    """One sentence on what it cost."""
+    """What it cost, as far as no finding says so."""
     held = dataset.attrs
+    arcs = dataset.sizes.get("arc", 1)
+    over = f"{arcs} arcs" if arcs > 1 else ""
+    if any(
+        str(f).startswith("These answers took") for f in reading.listed(dataset, "findings") or []
+    ):
+        return over
     parts = []
     if "propagator_runs" in held:
-        arcs = dataset.sizes.get("arc", 1)
-        over = f" over {arcs} arcs" if arcs > 1 else ""
+        over = f" over {over}" if over else ""
         parts.append(
             f"{int(held['propagator_runs']):,} runs of the propagator{over}".replace(",", "\u202f")
         )

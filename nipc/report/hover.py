@@ -18,11 +18,11 @@ from nipc.report import reading
 class Line:
     """One number that is read off a figure: what it is called, and its values over time.
 
-    `form`: "digits:3" significant ones, "decimals:2", or "percent".
+    `form`: "digits:3" significant ones, "decimals:2", "percent", or "text".
     """
 
     label: str
-    values: FloatArray
+    values: FloatArray | list[str]
     unit: str
     trust: reading.Trust
     form: str = "digits:3"
@@ -35,6 +35,8 @@ def lines(dataset: xr.Dataset, figure: str, quantity: str | None) -> list[Line]:
             lambda name: reading.joint_series(dataset, f"joint_{name}", quantity),
             reading.trust(dataset, None),
         )
+    if figure == "chain":
+        return _arcs(dataset)
     if quantity is None:
         form = "percent" if figure != "spread_rate" else "digits:3"
         names = {
@@ -42,7 +44,8 @@ def lines(dataset: xr.Dataset, figure: str, quantity: str | None) -> list[Line]:
             "nonlinear_share": "nonlinear_share",
             "check_error": "check_error",
         }
-        unit = f"1/{reading.time_unit(dataset)}" if figure == "spread_rate" else ""
+        clock = reading.time_unit(dataset)
+        unit = f"1/{clock}" if figure == "spread_rate" and clock else ""
         if figure not in names:
             return []
         found = []
@@ -116,9 +119,35 @@ def _variance(dataset: xr.Dataset, quantity: str) -> list[Line]:
     return [Line("standard deviation", spread, unit, trust)]
 
 
-def compact(values: FloatArray, form: str = "digits:5") -> list[float | None]:
+def _arcs(dataset: xr.Dataset) -> list[Line]:
+    """The arc at each time; not marked, since that is how it was and no answer."""
+    times = reading.times(dataset)
+    ends, end = np.asarray(dataset["arc_end"].values, float), float(times[-1])
+    arc = np.searchsorted(ends + 1e-12 * max(abs(end), abs(float(ends[-1]))), times)
+    inside = arc < ends.size
+    arc = np.minimum(arc, ends.size - 1)
+    known = reading.Trust(end, end, end)
+    found = [Line("arc", np.where(inside, arc + 1.0, np.nan), "", known, "digits:6")]
+    for name in ("degree", "terms", "runs", "failed", "error"):
+        if reading.has(dataset, f"arc_{name}"):
+            values = np.where(inside, np.asarray(dataset[f"arc_{name}"].values, float)[arc], np.nan)
+            form = "percent" if name == "error" else "digits:6"
+            found.append(Line(name, values, "", known, form))
+    if "arc_note" in dataset:
+        notes = [str(dataset["arc_note"].values[k]) for k in arc]
+        if any(notes):
+            shown = [note if there else "" for note, there in zip(notes, inside, strict=True)]
+            found.append(Line("note:", shown, "", known, "text"))
+    return found
+
+
+def compact(
+    values: FloatArray | list[str], form: str = "digits:5"
+) -> list[float | None] | list[str]:
     """No more digits than are shown; None where there is no number (JSON has no NaN)."""
     kind, _, digits = form.partition(":")
+    if kind == "text":
+        return [str(value) for value in values]
     wanted = f".{digits}f" if kind == "decimals" else f".{int(digits or 3) + 1}g"
     return [float(format(v, wanted)) if np.isfinite(v) else None for v in np.asarray(values, float)]
 

@@ -21,6 +21,20 @@ def pretty_unit(unit: str) -> str:
     return re.sub(r"(?:\^|\*\*)(-?\d+)(?![\d.])", lambda m: m[1].translate(_SUPERSCRIPT), unit)
 
 
+def typeset(sentence: str) -> str:
+    """A sentence's 1.92e-04 as 1.92 × 10⁻⁴, km^2 as km², t^a as t^α."""
+    text = re.sub(
+        r"(?<![\w.])(-?\d+(?:\.\d+)?)e([+-]?\d+)(?![\w.])",
+        lambda m: f"{m[1]}{THIN}×{THIN}{power_of_ten(int(m[2]))}",
+        sentence,
+    )
+    text = re.sub(
+        r"(?<=[^\W\d_]|\))\^(-?\d+)(?![\d.])", lambda m: m[1].translate(_SUPERSCRIPT), text
+    )
+    text = re.sub(r"(?<=\w)\^a\b", "^α", text)
+    return re.sub(r"\ba = (?=[-\d])", "α = ", text) if "^α" in text else text
+
+
 def squared(unit: str) -> str:
     """The square of a unit: km² of km, (km/s)² of km/s."""
     if not unit:

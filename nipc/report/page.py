@@ -22,14 +22,18 @@ SCRIPTS = ("clock.js", "chart.js", "panel.js")
 SECTIONS = (
     ("spread", "Where it goes", ("bands", "density")),
     ("stays", "Stays or leaves", ("confinement", "joint_confinement")),
-    ("drivers", "What drives it", ("driver_shares", "driver_ranking")),
-    ("kind", "Kind of spreading", ("diffusion", "spread_rate", "nonlinear_share")),
+    ("drivers", "What drives it", ("driver_shares", "driver_ranking", "driver_bands")),
+    (
+        "kind",
+        "Kind of spreading",
+        ("diffusion", "spread_rate", "lyapunov_exponents", "nonlinear_share"),
+    ),
     (
         "trust",
         "How far to trust it",
         ("check_error", "coefficient_decay", "direct_against_expansion", "noise_kept"),
     ),
-    ("cost", "What it cost", ("chain", "failures")),
+    ("cost", "What it cost", ("chain", "failures", "failure_places")),
 )
 
 
@@ -88,7 +92,7 @@ def render(dataset: xr.Dataset) -> str:
     templates = files("nipc.report") / "templates"
     return environment.get_template("page.html.j2").render(
         title=str(dataset.attrs.get("title") or "A study"),
-        findings=[headline.split(str(f)) for f in reading.listed(dataset, "findings") or []],
+        findings=headline.findings(dataset),
         columns=headline.columns(dataset),
         rows=headline.rows(dataset),
         cost=headline.cost(dataset),

@@ -58,6 +58,9 @@ def cautions(dataset: xr.Dataset) -> list[str]:
                 words += f", its distribution up to {amount(trust.distribution, unit, 3)}"
             said.append(words + "; what is shown later is marked, and not confirmed.")
     interval = dataset.attrs.get("monitoring_interval")
+    findings = reading.listed(dataset, "findings") or []
+    if any(str(f).startswith("Boxes are looked at") for f in findings):
+        interval = None  # said above
     if interval is not None and reading.has(dataset, "survival_probability"):
         said.append(
             f"Boxes are watched every {amount(float(interval), unit, 3)}; a motion that "

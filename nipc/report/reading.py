@@ -127,7 +127,9 @@ def main_driver(dataset: xr.Dataset, quantity: str) -> tuple[str, float, bool] |
         found = shares(dataset, name, quantity)
         if found is not None and not np.isnan(found[:, -1]).all():
             index = int(np.nanargmax(found[:, -1]))
-            return sources(dataset)[index], float(found[index, -1]), name == "driver_total"
+            # an estimate of a share may pass one, a share may not
+            share = min(float(found[index, -1]), 1.0)
+            return sources(dataset)[index], share, name == "driver_total"
     return None
 
 

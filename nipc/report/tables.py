@@ -103,19 +103,31 @@ def laws(dataset: xr.Dataset) -> Table | None:
     for quantity in reading.quantities(dataset):
         exponent = _estimate(dataset, "diffusion_exponent", quantity)
         coefficient = _estimate(dataset, "diffusion_coefficient", quantity)
-        unit = squared(reading.unit(dataset, quantity)) or "1"
-        per = f" {unit} per {clock or 'time'}^α" if coefficient != "–" else ""
+        unit = squared(reading.unit(dataset, quantity))
+        per = f" {unit} per {clock or 'unit of time'}".replace("  ", " ")
+        if reading.text(dataset, "spreading_verdict", quantity) != "diffusive":
+            per += "^α"
+        per = per if coefficient != "–" else ""
         rows.append(
             (
-                _marked(dataset, quantity),
+                quantity,
                 reading.text(dataset, "spreading_verdict", quantity) or "–",
                 exponent,
                 coefficient + per,
-                reading.text(dataset, "spreading_evidence", quantity) or "–",
+                _evidence(dataset, quantity),
             )
         )
     heads = ("quantity", "spreading", "exponent α", "coefficient D", "evidence")
-    return Table("Law of spreading, Var = A + 2 D t^α", heads, tuple(rows))
+    # what is past the trust horizon has no part in the law, so it bears no mark
+    caption = "Law of spreading within the trust horizon, Var = A + 2 D t^α"
+    return Table(caption, heads, tuple(rows))
+
+
+def _evidence(dataset: xr.Dataset, quantity: str) -> str:
+    """Why, and of what where the law is not of the quantity as it is."""
+    why = reading.text(dataset, "spreading_evidence", quantity) or "–"
+    subject = reading.text(dataset, "spreading_of", quantity)
+    return f"{subject}: {why}" if subject else why
 
 
 def _estimate(dataset: xr.Dataset, name: str, quantity: str) -> str:
@@ -137,10 +149,16 @@ def exits(dataset: xr.Dataset) -> Table | None:
         times = reading.series(dataset, "exit_time_quantile", quantity)
         if times is None:
             continue
-        cells = [amount(t, unit, 3) if np.isfinite(t) else "later" for t in times]
+        trust = reading.trust(dataset, quantity)
+        late = trust.mark(trust.end)
+        cells = [
+            "–" if np.isnan(t) else amount(t, unit, 3) + trust.mark(t) if t < np.inf
+            else "later" + late
+            for t in times
+        ]  # fmt: skip
         driver = reading.series(dataset, "exit_driver_total", quantity)
-        cells.append("–" if driver is None else _leader(driver, reading.sources(dataset)))
-        rows.append((_marked(dataset, quantity), *cells))
+        leader = "–" if driver is None else _leader(driver, reading.sources(dataset))
+        rows.append((quantity, *cells, leader + (late if leader != "–" else "")))
     heads = (
         "quantity",
         *(f"{100 * level:g} % have left by" for level in levels),

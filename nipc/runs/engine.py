@@ -20,6 +20,7 @@ from nipc.runs.progress import Progress, Silent
 from nipc.runs.propagator import Batch, Propagator
 from nipc.runs.record import Record, Status
 from nipc.runs.unit import Answer, Unit
+from nipc.runs.whereabouts import FailedBatch, failed_batch
 from nipc.runs.writer import Writer
 
 __all__ = ["BLOCK", "Engine", "FailurePolicy", "block_size"]
@@ -57,6 +58,7 @@ class Engine:
         self.ledger = ledger
         self.policy = FailurePolicy() if policy is None else policy
         self.notes: list[str] = []
+        self.failed: list[FailedBatch] = []
         self.runs_done = 0
         self.runs_reused = 0
         self._progress: Progress = Silent() if progress is None else progress
@@ -84,6 +86,8 @@ class Engine:
         if "missing" in found.kinds:  # found damaged while they were read
             self.ensure(batch, label)
             found = self.collect(batch)
+        if not found.ok.all():
+            self.failed.append(failed_batch(batch, found.ok))
         return found
 
     def ensure(self, batch: Batch, label: str) -> None:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 from collections import Counter
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -55,6 +55,21 @@ class FailureReport:
         if self.regions:
             text += ". They lie at " + ", ".join(str(region) for region in self.regions[:3])
         return text
+
+
+def causes(reasons: Iterable[str | None]) -> list[tuple[str, int]]:
+    """Reasons and how often each came, the most frequent first; None is no failure.
+
+    Reasons that differ in their numbers alone are one, told by the first of them.
+    """
+    counts: Counter[str] = Counter()
+    examples: dict[str, str] = {}
+    for reason in reasons:
+        if reason is not None:
+            cause = _without_numbers(reason)
+            counts[cause] += 1
+            examples.setdefault(cause, reason)
+    return [(examples[cause], count) for cause, count in counts.most_common()]
 
 
 def report(

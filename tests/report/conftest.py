@@ -116,6 +116,42 @@ def _shares(terms: np.ndarray, powers: np.ndarray) -> tuple[np.ndarray, np.ndarr
     return first, total
 
 
+def _frequencies(
+    sources: int, quantities: int, noises: int, centre: float, end: float
+) -> dict[str, xr.DataArray]:
+    """Shares by band, all with a peak at one frequency; the sources that are no noise have none."""
+    edges = centre * 2.0 ** ((np.arange(-14, 12) + 0.5) / 3)
+    low = np.concatenate([[0.0], edges])
+    share = np.full((sources, low.size, quantities), np.nan)
+    middle = np.log(np.append(edges[0] / 2, edges) * 2 ** (1 / 6) / centre)
+    share[:noises] = np.exp(-((middle / 0.2) ** 2))[:, None] + 0.02
+    share /= share.sum(axis=1, keepdims=True)
+    peak = np.full((sources, quantities), np.nan)
+    peak[:noises] = centre
+    per, sq = "1/d", ("source", "quantity")
+    return {
+        "band_low": _variable(low, ("band",), per, "low edge"),
+        "band_high": _variable(np.append(edges, np.inf), ("band",), per, "high edge"),
+        "band_share": _variable(share, ("source", "band", "quantity"), "1", "share by frequency"),
+        "band_time": _variable(np.full(quantities, end), ("quantity",), "d", "time of the bands"),
+        "resonance_frequency": _variable(peak, sq, per, "frequency of the peak"),
+        "resonance_width": _variable(0.1 * peak, sq, per, "half-width"),
+        "resonance_share": _variable(0 * peak + 0.8, sq, "1", "share within"),
+        "resonance_share_low": _variable(0 * peak + 0.75, sq, "1", "share within, low"),
+        "resonance_share_high": _variable(0 * peak + 0.85, sq, "1", "share within, high"),
+    }
+
+
+def _separation(times: np.ndarray, middle: np.ndarray, width: float) -> dict[str, xr.DataArray]:
+    """Exponents about a middle curve, unknown at the start."""
+    normal = np.array([-1.96, -0.674, 0.0, 0.674, 1.96])[:, None]
+    values = np.where(times > times[0], middle * (1 + width * normal / 1.96), np.nan)
+    return {
+        "lyapunov_exponent": _variable(values, ("level", "time"), "1/d", "exponents"),
+        "lyapunov_begin": _variable(np.array(times[0]), (), "d", "from when"),
+    }
+
+
 def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
     times = np.linspace(0.0, 28.0, outputs)
     terms, powers = slot_terms(members, times)
@@ -225,6 +261,30 @@ def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
         "arc_failed": _variable(
             np.where(np.arange(arcs) == 31, 3, 0), ("arc",), "1", "failed runs"
         ),
+        "failed_position": _variable(
+            np.array([[2.1, -0.3], [2.6, 0.4], [1.9, 0.2]]),
+            ("failed_run", "direction"),
+            "1",
+            "runs that failed",
+        ),
+        "good_position": _variable(
+            rng.standard_normal((40, 2)), ("good_run", "direction"), "1", "good runs"
+        ),
+        "band_low": _variable(np.array([0.0, 0.5, 0.9, 1.1]), ("band",), "1/d", "from"),
+        "band_high": _variable(np.array([0.5, 0.9, 1.1, np.inf]), ("band",), "1/d", "to"),
+        "band_share": _variable(
+            np.stack([np.full((4, 3), 0.25), np.full((4, 3), 0.25), np.full((4, 3), np.nan)]),
+            ("source", "band", "quantity"),
+            "1",
+            "share of what the source gives",
+        ),
+        "band_time": _variable(np.array([28.0, 9.0, 28.0]), ("quantity",), "d", "time"),
+        "lyapunov_exponent": _variable(
+            np.log1p(times)[None] / np.maximum(times, 0.1) * np.linspace(0.9, 1.1, 5)[:, None],
+            ("level", "time"),
+            "1/d",
+            "largest exponent",
+        ),
         "degree_norm": _variable(
             np.stack(
                 [
@@ -265,6 +325,7 @@ def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
         data[name] = _variable(share, sqt, "1", name.replace("_", " "))
         data[name + "_low"] = _variable(np.clip(share - 0.03, 0, 1), sqt, "1", name + ", low")
         data[name + "_high"] = _variable(np.clip(share + 0.03, 0, 1), sqt, "1", name + ", high")
+    data |= _frequencies(3, 3, 2, 1.0, 28.0) | _separation(times, 1.5 / (1 + times), 0.3)
     return xr.Dataset(
         data,
         coords={
@@ -277,6 +338,7 @@ def build_slot(members: int = 600, outputs: int = 337) -> xr.Dataset:
             "panel_time": times[near],
             "joint": ["slot"],
             "degree": [1, 2, 3],
+            "direction": ["x", "radial[1]"],
         },
         attrs={
             "title": "Slot watch over 28 days",
@@ -384,6 +446,7 @@ def build_hard() -> xr.Dataset:
         ),
         "expansion_quantity": _variable(members[:5], ("check_member", *qt), "", "expansion"),
     }
+    data |= _frequencies(9, 3, 7, 0.02, 16.9) | _separation(times, 0.5 + 1 / (1 + times), 0.2)
     kinds = ["noise"] * 7 + ["start", "parameter"]
     return xr.Dataset(
         data,

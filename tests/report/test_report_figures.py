@@ -198,8 +198,8 @@ def test_axes_of_the_caller_are_used_and_style_does_not_leak(slot: xr.Dataset) -
     before = matplotlib.rcParams["font.size"]
     assert figures.bands(slot, "radius", ax=ax) is ax
     assert matplotlib.rcParams["font.size"] == before
-    axes = figures.chain(slot, axes=Figure().subplots(3, 1))
-    assert len(axes) == 3
+    axes = figures.chain(slot, axes=Figure().subplots(4, 1))
+    assert len(axes) == 4
 
 
 def test_the_noise_figure_states_what_the_basis_loses() -> None:
@@ -252,3 +252,25 @@ def test_a_clock_far_from_zero_has_short_ticks(slot: xr.Dataset, shift: float) -
     assert ax.get_xlabel().startswith("time")
     assert all(len(text.get_text()) <= 7 for text in ax.get_xticklabels())
     assert not ax.xaxis.get_offset_text().get_text()
+
+
+def test_bands_stack_to_what_the_noise_gives_and_the_peak_is_told(slot: xr.Dataset) -> None:
+    """Each source's bands add up to its first share at that time; the start has no frequencies."""
+    ax = figures.driver_bands(slot, "longitude")
+    heights = sum(bar.get_height() for bar in ax.patches if bar.get_width() and bar.get_height())
+    first = slot["driver_first"].sel(quantity="longitude", source=["radial", "tangential"])
+    span = 1.0  # the marked interval is a patch of height one
+    assert heights - span == pytest.approx(float(first.isel(time=-1).sum()), abs=1e-6)
+    words = " ".join(text.get_text() for text in ax.texts)
+    assert "period 1" in words
+    assert "80 %" in words
+    with pytest.raises(KeyError, match="which frequencies"):
+        figures.driver_bands(slot.drop_vars("band_share"), "longitude")
+
+
+def test_exponents_and_their_members(slot: xr.Dataset) -> None:
+    ax = figures.lyapunov_exponents(slot)
+    np.testing.assert_allclose(line(ax, "main")[1:], slot["lyapunov_exponent"][2, 1:])
+    np.testing.assert_allclose(line(ax, "soft")[1:], np.log(10) / slot["time"].values[1:])
+    with pytest.raises(KeyError, match="Lyapunov"):
+        figures.lyapunov_exponents(slot.drop_vars("lyapunov_exponent"))

@@ -11,8 +11,10 @@ from nipc.report.figures.confinement import confinement, joint_confinement
 from nipc.report.figures.decay import coefficient_decay
 from nipc.report.figures.density import density
 from nipc.report.figures.drivers import driver_ranking, driver_shares
-from nipc.report.figures.failures import failures
+from nipc.report.figures.failures import failure_places, failures
+from nipc.report.figures.frequencies import driver_bands
 from nipc.report.figures.noise import noise_kept
+from nipc.report.figures.separation import lyapunov_exponents
 from nipc.report.figures.spreading import diffusion, nonlinear_share, spread_rate
 from nipc.report.figures.trust import check_error, direct_against_expansion
 
@@ -27,10 +29,13 @@ __all__ = [
     "density",
     "diffusion",
     "direct_against_expansion",
+    "driver_bands",
     "driver_ranking",
     "driver_shares",
+    "failure_places",
     "failures",
     "joint_confinement",
+    "lyapunov_exponents",
     "noise_kept",
     "nonlinear_share",
     "spread_rate",

@@ -18,8 +18,10 @@ from nipc.report.figures.confinement import confinement, joint_confinement
 from nipc.report.figures.decay import coefficient_decay
 from nipc.report.figures.density import density, ensemble
 from nipc.report.figures.drivers import driver_ranking, driver_shares
-from nipc.report.figures.failures import failures
+from nipc.report.figures.failures import failure_places, failures
+from nipc.report.figures.frequencies import band_parts, driver_bands
 from nipc.report.figures.noise import noise_kept
+from nipc.report.figures.separation import lyapunov_exponents
 from nipc.report.figures.spreading import diffusion, nonlinear_share, spread_rate
 from nipc.report.figures.trust import check_error, direct_against_expansion
 
@@ -48,6 +50,10 @@ PER_QUANTITY: dict[str, tuple[Callable[..., Any], str]] = {
         "Who drives the spread of {q}: shares of its variance over time.",
     ),
     "driver_ranking": (driver_ranking, "Drivers of {q} at the end of the horizon."),
+    "driver_bands": (
+        driver_bands,
+        "Which frequencies of the noise spread {q}, to first order: a narrow peak is a resonance.",
+    ),
     "diffusion": (diffusion, "How the variance of {q} grows."),
     "direct_against_expansion": (
         direct_against_expansion,
@@ -59,6 +65,11 @@ OVERALL: dict[str, tuple[Callable[..., Any], str]] = {
         spread_rate,
         "Spread rate of every quantity; thin past its trust horizon, which is marked.",
     ),
+    "lyapunov_exponents": (
+        lyapunov_exponents,
+        "How fast neighbouring motions move apart: what falls with the dotted line does not do so "
+        "exponentially.",
+    ),
     "nonlinear_share": (
         nonlinear_share,
         "Share of the variance beyond degree one: near 0, a linear picture is enough.",
@@ -68,22 +79,34 @@ OVERALL: dict[str, tuple[Callable[..., Any], str]] = {
         "Error of held-out paths against direct runs, over the spread; a marker where "
         "it passes the tolerance for good.",
     ),
-    "chain": (chain, "The arcs of the chain: degree, runs, and error at their held-out runs."),
+    "chain": (
+        chain,
+        "The arcs of the chain, each as wide as it is long, and why they are as they are; "
+        "errors are of held-out runs at the arc's end, over the spread.",
+    ),
     "coefficient_decay": (
         coefficient_decay,
         "How the coefficients fall off with their degree: flat would mean that "
         "the degree is too low.",
     ),
     "failures": (failures, "Why runs of the propagator failed."),
+    "failure_places": (
+        failure_places,
+        "Where runs failed, beside good runs of the same arcs, in the directions that tell them "
+        "best apart, and in how many of all pairs the failed one lies higher or lower. No sign: "
+        "no more apart than chance would have them.",
+    ),
 }
 NEEDS = {
     "confinement": ("inside_probability", "survival_probability"),
     "driver_shares": ("driver_first",),
     "driver_ranking": ("driver_total", "driver_first"),
     "spread_rate": ("spread_rate",),
+    "lyapunov_exponents": ("lyapunov_exponent",),
     "nonlinear_share": ("nonlinear_share",),
     "check_error": ("check_error",),
     "coefficient_decay": ("degree_norm",),
+    "failure_places": ("failed_position",),
 }
 PAIRS = 3
 
@@ -92,7 +115,8 @@ def _fills(dataset: xr.Dataset, name: str, quantity: str | None) -> bool:
     """Whether a figure has something to show."""
     if quantity is None:
         if name == "chain":
-            return all(reading.has(dataset, f"arc_{what}") for what in ("start", "end", "runs"))
+            there = all(reading.has(dataset, f"arc_{what}") for what in ("start", "end", "runs"))
+            return there and dataset.sizes["arc"] > 1
         if name == "failures":
             return bool(reading.listed(dataset, "failures"))
         return any(reading.has(dataset, needed) for needed in NEEDS[name])
@@ -104,6 +128,8 @@ def _fills(dataset: xr.Dataset, name: str, quantity: str | None) -> bool:
     if name == "direct_against_expansion":
         both = ("direct_quantity", "expansion_quantity")
         return all(reading.series(dataset, n, quantity) is not None for n in both)
+    if name == "driver_bands":
+        return band_parts(dataset, quantity) is not None
     if name.startswith("driver"):
         return any(reading.shares(dataset, n, quantity) is not None for n in NEEDS[name])
     return any(reading.series(dataset, n, quantity) is not None for n in NEEDS[name])

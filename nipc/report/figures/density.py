@@ -83,6 +83,11 @@ def density(
 
 def ensemble(dataset: xr.Dataset) -> tuple[FloatArray, FloatArray] | None:
     """The largest ensemble that the result keeps (member, quantity, time), and its times."""
+    if "cloud_quantity" in dataset:
+        values = (
+            dataset["cloud_quantity"].transpose("cloud_member", "quantity", "cloud_time").values
+        )
+        return np.asarray(values, float), np.asarray(dataset["cloud_time"].values, float)
     if "panel_contribution" in dataset:
         whole = dataset["panel_contribution"].sum("panel_term", skipna=False)
         values = whole.transpose("panel_member", "quantity", "panel_time").values

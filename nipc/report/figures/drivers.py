@@ -17,6 +17,7 @@ from nipc.report.numbers import percent
 from nipc.report.style import LIGHT, drawn, stroke
 
 LARGEST = 7
+WIDEST = 1.0  # of a share
 """Sources shown by themselves in the stack; the smaller ones are put together."""
 
 
@@ -96,7 +97,7 @@ def driver_ranking(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -
             )
         ax.barh(
             row,
-            leading[index, -1],
+            min(leading[index, -1], WIDEST),
             height=0.62,
             fill=False,
             edgecolor=LIGHT["ink"],
@@ -112,15 +113,15 @@ def driver_ranking(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -
             row,
         )
         ax.annotate(
-            percent(float(leading[index, -1])),
-            (max(end, leading[index, -1]), row),
+            percent(min(float(leading[index, -1]), 1.0)),
+            (min(max(end, leading[index, -1]), WIDEST), row),
             xytext=(6, 0),
             textcoords="offset points",
             va="center",
         )
     ax.set_yticks(range(len(order)), [frame.printable(names[i]) for i in order])
     ax.set_ylim(len(order) - 0.4, -0.6)
-    ax.set_xlim(0.0, max(1.12, 1.15 * float(at_end.max())))
+    ax.set_xlim(0.0, 1.15)
     ax.set_xticks(np.arange(0.0, 1.01, 0.2))
     ax.grid(False, axis="y")
     trust = reading.trust(dataset, quantity)
@@ -152,14 +153,7 @@ def _interval(
     high = reading.shares(dataset, name + "_high", quantity)
     if low is None or high is None or not np.isfinite(low[index, -1] + high[index, -1]):
         return 0.0
-    ax.plot(
-        [low[index, -1], high[index, -1]],
-        [row, row],
-        color=LIGHT["edge"],
-        lw=1.5,
-        zorder=4,
-        marker="|",
-        ms=7,
-        mew=1.5,
-    )
-    return float(high[index, -1])
+    # an estimate of a share may pass one, a share may not
+    ends = np.clip([low[index, -1], high[index, -1]], 0.0, WIDEST)
+    ax.plot(ends, [row, row], color=LIGHT["edge"], lw=1.5, zorder=4, marker="|", ms=7, mew=1.5)
+    return float(ends[1])

@@ -33,7 +33,7 @@ def new_axes(ax: Axes | None, height: float = HEIGHT) -> Axes:
 
 def new_figure(rows: int, height: float, ratios: Sequence[float] | None = None) -> list[Axes]:
     """Axes one above the other that share their horizontal axis."""
-    figure = Figure(figsize=(WIDTH, height), layout=ConstrainedLayoutEngine(w_pad=0.06, h_pad=0.06))
+    figure = Figure(figsize=(WIDTH, height), layout=ConstrainedLayoutEngine(w_pad=0.1, h_pad=0.06))
     FigureCanvasAgg(figure)
     grid = figure.subplots(rows, 1, sharex=True, squeeze=False, height_ratios=ratios)
     return list(grid[:, 0])
@@ -137,7 +137,9 @@ def legend(ax: Axes, handles: Sequence[Any], labels: Sequence[str], raised: bool
     if not handles:
         return
     widths = [(len(label) + 6) * _CHARACTER for label in labels]
-    columns = len(labels) if sum(widths) < 1.0 else int(np.clip(1.0 / max(widths), 1, len(labels)))
+    columns = len(labels)
+    while columns > 1 and sum(_column_widths(widths, columns)) >= 1.0:
+        columns -= 1
     ax.legend(
         list(handles),
         list(labels),
@@ -145,6 +147,17 @@ def legend(ax: Axes, handles: Sequence[Any], labels: Sequence[str], raised: bool
         bbox_to_anchor=(0.0, 1.1 if raised else 1.03),
         ncols=columns,
     )
+
+
+def _column_widths(widths: list[float], columns: int) -> list[float]:
+    """As a legend fills its columns: one after the other, the first ones the longest."""
+    rows, longer = divmod(len(widths), columns)
+    found, at = [], 0
+    for column in range(columns):
+        count = rows + (column < longer)
+        found.append(max(widths[at : at + count]))
+        at += count
+    return found
 
 
 def mark_trust(ax: Axes, dataset: xr.Dataset, quantity: str | None) -> bool:

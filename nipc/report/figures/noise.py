@@ -11,6 +11,11 @@ from nipc.report.numbers import number
 from nipc.report.style import LIGHT, drawn
 
 KICKS = 1500
+NAMES = {
+    "legendre": "Legendre",
+    "karhunen-loeve": "Karhunen-Loève",
+    "completed": "completed Karhunen-Loève",
+}
 
 
 @drawn
@@ -38,7 +43,7 @@ def noise_kept(basis: NoiseBasis, seed: int = 1, ax: Axes | None = None) -> Axes
         f"{number(100 * lost[1], 2) if lost[1] > 1e-12 else '0'} % of the end's variance"
     )
     ax.set_ylabel("integrated white noise\n(of unit variance at the end)")
-    name = basis.name.replace("_", " ").replace("-", " ")
+    name = NAMES.get(basis.name, basis.name)
     plural = "s" if basis.terms > 1 else ""
-    frame.legend(ax, [full, held], ["path", f"kept by {basis.terms} term{plural} of {name}"])
+    frame.legend(ax, [full, held], ["path", f"kept by {basis.terms} {name} term{plural}"])
     return ax

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import textwrap
+from typing import Any
 
 import numpy as np
 import xarray as xr
@@ -10,6 +11,7 @@ from matplotlib.axes import Axes
 from matplotlib.lines import Line2D
 from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 
+from nipc.arrays import FloatArray
 from nipc.report import reading
 from nipc.report.figures import frame
 from nipc.report.numbers import number, power_of_ten, squared
@@ -82,21 +84,24 @@ def diffusion(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> Axe
         raise KeyError(f"the variance of {quantity!r} is zero")
     ax.set_xscale("log")
     ax.set_yscale("log")
-    ax.plot(elapsed[shown], variance[shown], color=LIGHT["main"], lw=1.7)
-    handles, labels = [Line2D([], [], color=LIGHT["main"], lw=1.7)], ["variance"]
+    slow = _slow_variance(dataset, quantity, variance)
+    look: dict[str, Any] = {"color": LIGHT["main"], "lw": 1.7 if slow is None else 0.9}
+    ax.plot(elapsed[shown], variance[shown], **look)
+    handles, labels = [Line2D([], [], **look)], ["variance"]
     span = float(variance[shown].min()), float(variance[shown].max())
-    coefficient = reading.scalar(dataset, "diffusion_coefficient", quantity)
-    exponent = reading.scalar(dataset, "diffusion_exponent", quantity)
-    if np.isfinite(coefficient) and np.isfinite(exponent) and coefficient > 0:
-        offset = reading.scalar(dataset, "diffusion_offset", quantity)
-        law = np.nan_to_num(offset) + 2 * coefficient * elapsed[shown] ** exponent
+    if slow is not None:
+        ax.plot(elapsed[shown], slow[shown], color=LIGHT["ink"], lw=1.9)
+        handles.append(Line2D([], [], color=LIGHT["ink"], lw=1.9))
+        labels.append("averaged over its period")
+        span = min(span[0], max(float(np.nanmin(slow[shown])), 1e-6 * span[1])), span[1]
+    law, words = _law(dataset, quantity, elapsed[shown])
+    if law is not None:
         span = max(min(span[0], 0.1 * law[-1]), 1e-6 * span[1]), span[1]
         law = np.where((law > 0.3 * span[0]) & (law < 3 * span[1]), law, np.nan)
-        dash = (0, (6, 2))
-        ax.plot(elapsed[shown], law, color=LIGHT["edge"], lw=1.5, ls=dash)
-        handles.append(Line2D([], [], color=LIGHT["edge"], lw=1.5, ls=dash))
-        law_name = "A + 2 D t^α" if np.isfinite(offset) else "2 D t^α of its slow part"
-        labels.append(f"{law_name}, α = {_alpha(dataset, quantity)}")
+        dash: dict[str, Any] = {"color": LIGHT["edge"], "lw": 1.5, "ls": (0, (6, 2))}
+        ax.plot(elapsed[shown], law, **dash)
+        handles.append(Line2D([], [], **dash))
+        labels.append(words)
     ax.set_xlim(float(elapsed[shown][0]), float(elapsed[-1]))
     ax.set_ylim(0.6 * span[0], 1.7 * span[1])
     log_labels(ax, "xy")
@@ -107,6 +112,29 @@ def diffusion(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> Axe
     marked = frame.mark_trust(ax, _from_start(dataset, times[0]), quantity)
     frame.legend(ax, handles, labels, raised=marked)
     return ax
+
+
+def _slow_variance(dataset: xr.Dataset, quantity: str, variance: FloatArray) -> FloatArray | None:
+    """The variance of the quantity averaged over its period; None where that changes nothing."""
+    std = reading.series(dataset, "slow_std", quantity)
+    if std is None or not (std[np.isfinite(std)] > 0).any():
+        return None
+    slow = np.where(std > 0, std**2, np.nan)
+    return None if np.nanmax(np.abs(slow - variance) / np.nanmax(variance)) < 0.01 else slow
+
+
+def _law(dataset: xr.Dataset, quantity: str, elapsed: FloatArray) -> tuple[FloatArray | None, str]:
+    """The fitted law at times since the start, and its name; a straight line where that is it."""
+    growth = reading.scalar(dataset, "diffusion_coefficient", quantity)
+    exponent = reading.scalar(dataset, "diffusion_exponent", quantity)
+    if not (np.isfinite(growth) and np.isfinite(exponent) and growth > 0):
+        return None, ""
+    straight = reading.text(dataset, "spreading_verdict", quantity) == "diffusive"
+    offset = reading.scalar(dataset, "diffusion_offset", quantity)
+    law = np.nan_to_num(offset) + 2 * growth * elapsed ** (1.0 if straight else exponent)
+    name = "2 D t" + ("" if straight else "^α")
+    name = "A + " + name if offset > 0 else name
+    return law, f"{name}, α = {_alpha(dataset, quantity)}"
 
 
 def _from_start(dataset: xr.Dataset, start: float) -> xr.Dataset:

@@ -68,8 +68,17 @@ def direct_against_expansion(dataset: xr.Dataset, quantity: str, ax: Axes | None
     mean = reading.series(dataset, "mean", quantity)
     middle = mean if mean is not None else np.zeros_like(times)
     step = max(len(times) // 24, 1)
-    for row in range(min(SHOWN, len(direct))):
+    whole = np.isfinite(direct).sum(axis=1)
+    shown = np.sort(np.argsort(-whole, kind="stable")[:SHOWN])
+    direct, expansion = direct[shown], expansion[shown]
+    stopped = False
+    for row in range(len(direct)):
         hand = line_stroke(row)
+        known = np.flatnonzero(np.isfinite(direct[row]))
+        if known.size and known[-1] < len(times) - 1 and np.isfinite(expansion[row, -1]):
+            last, stopped = known[-1], True
+            end = direct[row, last] - middle[last]
+            ax.plot(times[last], end, marker="x", ms=7, mew=1.6, color=LIGHT["edge"], zorder=4)
         ax.plot(times, direct[row] - middle, color=hand.colour, lw=1.2)
         offset = (row * step) // max(SHOWN, 1)
         ax.plot(
@@ -83,8 +92,9 @@ def direct_against_expansion(dataset: xr.Dataset, quantity: str, ax: Axes | None
             mew=1.0,
         )
     frame.time_axis(ax, dataset)
-    paths = np.concatenate([direct[:SHOWN], expansion[:SHOWN]]) - middle
-    cut = frame.set_view(ax, dataset, quantity, paths.min(axis=0), paths.max(axis=0))
+    paths = np.concatenate([direct, expansion]) - middle
+    low, high = np.fmin.reduce(paths, axis=0), np.fmax.reduce(paths, axis=0)
+    cut = frame.set_view(ax, dataset, quantity, low, high)
     frame.say_cut(ax, cut)
     less = " − mean" if mean is not None else ""
     frame.value_axis(ax, frame.printable(quantity) + less, reading.unit(dataset, quantity))
@@ -93,5 +103,9 @@ def direct_against_expansion(dataset: xr.Dataset, quantity: str, ax: Axes | None
         Line2D([], [], color=LIGHT["ink"], lw=1.2),
         Line2D([], [], ls="", marker="o", mfc=LIGHT["paper"], mec=LIGHT["ink"], ms=5),
     ]
-    frame.legend(ax, keys, ["direct run", "expansion, same germ"], raised=marked)
+    labels = ["direct run", "expansion, same germ"]
+    if stopped:
+        keys.append(Line2D([], [], ls="", marker="x", ms=6, mew=1.6, color=LIGHT["edge"]))
+        labels.append("direct run ends")
+    frame.legend(ax, keys, labels, raised=marked)
     return ax

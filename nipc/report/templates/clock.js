@@ -26,6 +26,7 @@ nipc.amount = (value, unit, digits) => nipc.number(value, digits) + (unit ? "\u2
 /* A value in the form that its line asks for. */
 nipc.formed = (value, { form, unit }) => {
   const [kind, digits] = form.split(":");
+  if (kind === "text") return value || "–";
   if (value === null || !Number.isFinite(value)) return "–";
   if (kind === "percent") {
     const share = (100 * value).toFixed(1);

@@ -17,7 +17,14 @@ from pathlib import Path
 from typing import Any
 
 HERE = Path(__file__).parent
-SHARED = {"run", "measure", "reference_functions", "economy_problems", "engine_large"}
+SHARED = {
+    "run",
+    "measure",
+    "reference_functions",
+    "economy_problems",
+    "engine_large",
+    "answers_drivers",
+}
 
 
 def names() -> list[str]:

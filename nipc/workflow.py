@@ -21,6 +21,7 @@ from nipc.problem.study_file import load_study as read_study
 from nipc.problem.study_file import settings_findings
 
 if TYPE_CHECKING:
+    from nipc.answers.chained import ChainAnswers
     from nipc.answers.result import Result
     from nipc.answers.table import ResultTable
     from nipc.chain.horizon import Horizon
@@ -310,15 +311,40 @@ class _Solved:
 
 
 def _one_arc(study: Study, engine: Engine, quantities: QuantitySet) -> _Solved:
+    from nipc.answers.panel_data import add_panel
+    from nipc.answers.scaled import ScaledArc
     from nipc.answers.single import single_arc_table
     from nipc.chain.single_arc import solve
 
     arc = solve(study, engine, quantities)
     cost = float(sum(len(o) for o in arc.outcomes))
-    return _Solved(single_arc_table(arc), arc.outcomes, cost, arc.notes)
+    table = single_arc_table(arc)
+    add_panel(table, ScaledArc(arc, engine, quantities))
+    return _Solved(table, arc.outcomes, cost, arc.notes)
 
 
 def _many_arcs(study: Study, engine: Engine, quantities: QuantitySet) -> _Solved:
+    from nipc.answers.panel_data import add_panel
+    from nipc.answers.scaled import ScaledChain
+
+    answers, notes = solved_chain(study, engine, quantities)
+    horizon = answers.horizon
+    table = answers.table()
+    add_panel(table, ScaledChain(answers))
+    notes += answers.chain.notes
+    if answers.ensemble_lost:
+        notes.append(
+            f"{answers.ensemble_lost} of {study.ensemble.members} members passed outside what the "
+            "arcs' designs cover and were not run directly; from there on they move by the linear "
+            "parts of the expansions, within what runs have reached."
+        )
+    return _Solved(table, tuple(horizon.outcomes), horizon.cost, tuple(notes))
+
+
+def solved_chain(
+    study: Study, engine: Engine, quantities: QuantitySet
+) -> tuple[ChainAnswers, list[str]]:
+    """The chain, tightened until its held-out paths keep the tolerance, and what is to be noted."""
     from nipc.answers.chained import ChainAnswers
     from nipc.chain.chain import ChainBuilder
 
@@ -339,14 +365,7 @@ def _many_arcs(study: Study, engine: Engine, quantities: QuantitySet) -> _Solved
         )
         chain = builder.build(chain)
         answers = ChainAnswers(horizon, chain, quantities)
-    table = answers.table()
-    notes += chain.notes
-    if answers.far:
-        notes.append(
-            f"{answers.far} passages of members through an arc lay far outside the arc's design; "
-            "there only the linear part of its expansion was used."
-        )
-    return _Solved(table, tuple(horizon.outcomes), horizon.cost, tuple(notes))
+    return answers, notes
 
 
 def build_horizon(study: Study, engine: Engine) -> Horizon:
@@ -391,11 +410,16 @@ def _provenance(
         "members": study.ensemble.members,
         "wall_time": time.monotonic() - began,
         "workers": n_jobs,
-        "study": study.text or study.model_dump_json(indent=2, exclude_defaults=True),
+        "study": study_text(study),
         "versions": json.dumps(versions),
         "created": datetime.now(UTC).isoformat(timespec="seconds"),
         "monitoring_interval": float(steps.max(initial=0.0)),
     }
+
+
+def study_text(study: Study) -> str:
+    """The study file as it was read, or what a study made in Python would be in one."""
+    return study.text or study.model_dump_json(indent=2, exclude_defaults=True)
 
 
 def write_report(result: Result, *, figures: bool = False) -> Path:

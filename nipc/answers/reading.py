@@ -26,6 +26,7 @@ class View:
     """One quantity's part of a dataset; what is not there reads as NaN."""
 
     def __init__(self, dataset: xr.Dataset, name: str) -> None:
+        self.dataset = dataset
         self.data = dataset.sel(quantity=name)
         self.name = name
         self.unit = str(self.data["quantity_unit"].item()) if "quantity_unit" in self.data else ""
@@ -61,11 +62,15 @@ class View:
             self.value(f"{variable}_high", **labels),
         )
 
+    def kind(self, source: str) -> str:
+        """noise, start or parameter."""
+        if "source_kind" not in self.data.coords:
+            return "noise"
+        return str(self.data["source_kind"].sel(source=source).item())
+
     def source(self, name: str) -> str:
         """`the noise source 'thrust'`."""
-        kind = "noise"
-        if "source_kind" in self.data.coords:
-            kind = str(self.data["source_kind"].sel(source=name).item())
+        kind = self.kind(name)
         if kind == "start":
             return "the uncertain start"
         return f"{KIND_WORDS.get(kind, 'the source')} {name!r}"

@@ -12,6 +12,14 @@ import xarray as xr
 from nipc.answers.reading import View, clock_of
 from nipc.answers.wording import estimate, number, percent
 
+PART = 0.1  # of the variance, below which a source's frequencies are not worth a sentence
+RESONANT = 0.5  # of what it gives, from one narrow band
+GROWN, STEADY = 3.0, 0.35  # ln of the separation, and its later half's part, of exponential growth
+
+
+FEWEST_LEAVING = 50
+"""Members that leave, or stay, below which it is not said what decides who leaves."""
+
 
 def findings(dataset: xr.Dataset) -> list[str]:
     """Sentences on each quantity of a result, then on the joint boxes and on the runs."""
@@ -26,10 +34,10 @@ def findings(dataset: xr.Dataset) -> list[str]:
                 f" from the expansion there. {view.trust.clause}"
             )
             continue
-        parts = (_confinement, _spread, _law, _driver, _allowance, _nonlinear)
+        parts = (_confinement, _spread, _law, _driver, _resonance, _allowance, _nonlinear)
         said = [part(view) for part in parts]
         sentences += [f"{s} {view.trust.clause}" for s in said if s]
-    sentences += _joint(dataset)
+    sentences += _joint(dataset) + _separation(dataset)
     sentences += _monitoring(dataset) + _runs(dataset)
     return sentences
 
@@ -92,7 +100,8 @@ def _law(view: View) -> str | None:
     if "spreading_verdict" not in view.data:
         return None
     verdict = str(view.data["spreading_verdict"].item())
-    subject = f"The spreading of {view.name}"
+    of = str(view.data["spreading_of"].item()) if "spreading_of" in view.data else ""
+    subject = f"The spreading of {view.name}" + (f" ({of})" if of else "")
     if verdict in ("", "nan", "no spread"):
         return None
     exponent = view.triple("diffusion_exponent")
@@ -107,6 +116,7 @@ def _law(view: View) -> str | None:
         text += f": its variance grows as 2 D t^a with a = {estimate(*exponent)}"
     if np.isfinite(coefficient[0]):
         square = f"{view.unit}^2" if view.unit.isalnum() else f"({view.unit})^2"
+        square = square if view.unit not in ("", "1") else "1"
         unit = f"{square}/{view.clock}" if verdict == "diffusive" else f"{square}/{view.clock}^a"
         text += f" and D = {estimate(*coefficient, unit)}"
     rate = view.value("spread_rate")
@@ -130,35 +140,70 @@ def _driver(view: View) -> str | None:
             f"; next is {view.source(second)}, with"
             f" {percent(*view.triple('driver_total', source=second))}"
         )
-    leaving = view.ranked("exit_driver_total")
-    if leaving and leaving[0][0] != first:
-        text += f"; whether it leaves by the end is decided most by {view.source(leaving[0][0])}"
+    leaving = _leaving(view)
+    if leaving is not None and leaving != first:
+        text += f"; whether it leaves by the end is decided most by {view.source(leaving)}"
         text += view.unconfirmed
     return text + "."
+
+
+def _leaving(view: View) -> str | None:
+    """What decides most who leaves, where enough members do and the first two can be told apart."""
+    ranked = view.ranked("exit_driver_total")
+    if not ranked:
+        return None
+    survival = float(view.data["survival_probability"].isel(time=-1).item())
+    members = float(view.dataset.attrs.get("members", np.nan))
+    if members * min(survival, 1.0 - survival) < FEWEST_LEAVING:
+        return None
+    if len(ranked) > 1:
+        low = view.value("exit_driver_total_low", source=ranked[0][0])
+        high = view.value("exit_driver_total_high", source=ranked[1][0])
+        if not low > high:
+            return None
+    return ranked[0][0]
+
+
+def _resonance(view: View) -> str | None:
+    """Where a narrow band of the strongest noise source's frequencies gives most of its part."""
+    share_of = [(s, t) for s, t in view.ranked("driver_total") if view.kind(s) == "noise"]
+    if not share_of or share_of[0][1] < PART:
+        return None
+    source = share_of[0][0]
+    share = view.triple("resonance_share", source=source)
+    frequency = view.value("resonance_frequency", source=source)
+    told = view.value("band_time")
+    if not share[1] >= RESONANT or told > view.times[view.trust.index] * (1.0 + 1e-12):
+        return None
+    width = view.value("resonance_width", source=source)
+    ends = number(1.0 / (frequency + width), 3), number(1.0 / (frequency - width), 3)
+    return (
+        f"{view.name} resonates with {view.source(source)}: {percent(*share)} of the variance that"
+        f" it gives to first order at {number(told)} {view.clock} comes from noise of periods"
+        f" {ends[0]} to {ends[1]} {view.clock}, most at {number(1.0 / frequency, 3)} {view.clock}."
+    )
 
 
 def _allowance(view: View) -> str | None:
     """What to change, by the source that drives the leaving, or else the spread."""
     boxed = np.isfinite([view.value("box_low"), view.value("box_high")]).any()
-    if "allowance" not in view.data or not boxed:
+    if "allowance_scale" not in view.data or not boxed:
         return None
-    variable = view.data["allowance"]
-    target = variable.attrs.get("target")
-    goal = f"P(inside) of {view.name} at "
-    goal += "its target" if target is None else f"{number(float(target))} or above"
-    goal += " at the end of the horizon"
+    asked = view.data["allowance_scale"]
+    if np.isnan(view.data["allowance_limit"].values).all():
+        return None  # not asked of this box
+    goal = f"P({asked.attrs.get('event', 'inside')}) of {view.name} at"
+    goal += f" {number(float(asked.attrs['target']))} or above at the end of the horizon"
     order = [s for s, _ in view.ranked("exit_driver_total") or view.ranked("driver_total")]
-    known = [s for s in order if np.isfinite(view.value("allowance", source=s))]
+    known = [s for s in order if not np.isnan(view.value("allowance_scale", source=s))]
     if not known:
-        if order:
-            return f"No reduction of any single source keeps {goal}{view.unconfirmed}."
-        return None
+        return f"No reduction of any single source keeps {goal}{view.unconfirmed}."
     source = known[0]
-    scale, low, high = view.triple("allowance", source=source)
-    limit = variable.attrs.get("limit")
-    if limit is not None and scale >= float(limit):
+    scale, low, high = view.triple("allowance_scale", source=source)
+    if np.isinf(scale):
+        limit = view.value("allowance_limit", source=source)
         return (
-            f"Even {view.source(source)} {number(scale)} times as strong keeps {goal}"
+            f"Even {view.source(source)} {number(limit)} times as strong keeps {goal}"
             f"{view.unconfirmed}; beyond that nothing was tried."
         )
     change = "must be brought down to" if scale < 1.0 else "may be raised to"
@@ -180,6 +225,43 @@ def _nonlinear(view: View) -> str | None:
         f"{percent(share, np.nan, np.nan)} of the variance of {view.name} at {view.when} lies"
         " beyond first order: a linear, small-noise picture is not enough."
     )
+
+
+def _separation(dataset: xr.Dataset) -> list[str]:
+    """How fast neighbours move apart, up to the earliest of all trust horizons."""
+    if "lyapunov_exponent" not in dataset or not dataset.sizes["quantity"]:
+        return []
+    views = [View(dataset, str(name)) for name in dataset["quantity"].values]
+    view = min(views, key=lambda v: v.trust.index)
+    begin = view.value("lyapunov_begin")
+    elapsed = float(view.times[view.trust.index]) - begin
+    rate, half_way = view.triple("lyapunov_exponent", level=0.5), elapsed / 2.0 + begin
+    if not (np.isfinite(rate[0]) and elapsed > 0.0):
+        return []
+    middle = view.data["lyapunov_exponent"].sel(level=0.5).values
+    known = np.isfinite(middle)
+    before = np.interp(half_way, view.times[known], middle[known]) * (half_way - begin)
+    growth = rate[0] * elapsed
+    ends = [view.value("lyapunov_exponent", level=e) for e in (0.025, 0.975)]
+    # e^3, of which the later half of the time gave its part: a power of time gives ln 2 / ln t
+    if growth >= GROWN and growth - before >= STEADY * growth:
+        spread = ""
+        if ends[1] - ends[0] > 0.05 * abs(rate[0]):
+            spread = f"; 95 % of the members have {number(ends[0], 3)} to {number(ends[1], 3)}"
+        unit = f"per {view.clock}" if view.clock else ""
+        text = (
+            "Neighbouring motions move apart exponentially: their largest finite-time Lyapunov"
+            f" exponent up to {view.when} is {estimate(*rate, unit)} (median{spread}), a factor e"
+            f" every {number(1.0 / rate[0], 3)} {view.clock}".rstrip()
+        )
+    else:
+        factors = [number(float(np.exp(r * elapsed)), 3) for r in (rate[0], *ends)]
+        text = (
+            "Neighbouring motions do not move apart exponentially: up to"
+            f" {view.when} by a factor of {factors[0]} (median; {factors[1]} to {factors[2]} for"
+            " 95 % of the members) in the direction that grows most"
+        )
+    return [f"{text}. {view.trust.clause}"]
 
 
 def _joint(dataset: xr.Dataset) -> list[str]:

@@ -21,7 +21,7 @@ def dataset(survival=0.96, trust=28.0, trust_spread=np.nan, allowance=0.62, **at
     def both(first, second):
         return (("quantity", "time"), np.stack([first, second]))
 
-    none = np.full(TIMES.size, np.nan)
+    none, none2 = np.full(TIMES.size, np.nan), [np.nan, np.nan]
     left = 1.0 - (1.0 - survival) * grow
     variables = {
         "std": both(0.01 * grow, 0.4 * grow**2),
@@ -52,9 +52,11 @@ def dataset(survival=0.96, trust=28.0, trust_spread=np.nan, allowance=0.62, **at
         ),
         "trust_horizon": ("quantity", [trust, 12.0]),
         "trust_horizon_distribution": ("quantity", [trust_spread, 20.0]),
-        "allowance": (("source", "quantity"), [[allowance, np.nan], [np.nan, np.nan]]),
-        "allowance_low": (("source", "quantity"), [[0.97 * allowance, np.nan], [np.nan, np.nan]]),
-        "allowance_high": (("source", "quantity"), [[1.03 * allowance, np.nan], [np.nan, np.nan]]),
+        "allowance_limit": (("source", "quantity"), [[8.0, np.nan], [8.0, np.nan]]),
+        **{
+            f"allowance_scale{end}": (("source", "quantity"), [[factor * allowance, np.nan], none2])
+            for end, factor in (("", 1.0), ("_low", 0.97), ("_high", 1.03))
+        },
         "nonlinear_share": both(0.01 * grow, 0.3 * grow),
     }
     made = xr.Dataset(
@@ -69,7 +71,7 @@ def dataset(survival=0.96, trust=28.0, trust_spread=np.nan, allowance=0.62, **at
         },
         attrs={"propagator_runs": 1400, "failed_runs": 3, "monitoring_interval": 0.5, **attrs},
     )
-    made["allowance"].attrs.update(target=0.99, limit=8.0)
+    made["allowance_scale"].attrs.update(target=0.99, event="inside")
     return made
 
 
@@ -144,7 +146,7 @@ def test_not_checked_and_never_trusted():
 def test_allowances():
     assert "may be raised to 1.20" in said(dataset(allowance=1.2), "To keep")
     assert "Even the noise source 'thrust' 8 times as strong keeps" in said(
-        dataset(allowance=8.0), "nothing was tried"
+        dataset(allowance=np.inf), "nothing was tried"
     )
     assert said(dataset(allowance=np.nan), "No reduction of any single source keeps P(inside)")
     made = dataset()
@@ -152,8 +154,34 @@ def test_allowances():
     assert "(the uncertain start, the strongest driver, cannot do it alone)" in said(
         made, "To keep"
     )
+    made["allowance_scale"].attrs["event"] = "survival"
+    assert said(made, "To keep P(survival) of longitude at 0.99")
+    # nothing was asked, nothing is said
+    unasked = dataset().drop_vars(["allowance_scale", "allowance_limit"])
+    assert not [s for s in findings(unasked) if "P(inside)" in s or "reduction" in s]
     # no box, no allowance to speak of
     assert not [s for s in findings(dataset()) if "radius" in s and "P(inside)" in s]
+
+
+def leaving(totals, half=0.05, survival=0.9, members=20_000):
+    """Total shares of who leaves longitude's box, of the noise and the start."""
+    made = dataset(survival, members=members)
+    for end, shift in (("", 0.0), ("_low", -half), ("_high", half)):
+        values = [[totals[0] + shift, np.nan], [totals[1] + shift, np.nan]]
+        made[f"exit_driver_total{end}"] = (("source", "quantity"), values)
+    return made
+
+
+def test_who_decides_the_leaving_is_said_only_where_it_can_be_told():
+    sentence = "whether it leaves by the end is decided most by the uncertain start"
+    assert said(leaving((0.3, 0.8)), sentence)
+    for made in (
+        leaving((0.5, 0.58)),  # 0.53 to 0.63 and 0.45 to 0.55 overlap
+        leaving((0.3, 0.8), survival=0.9999),  # two of 20,000 leave
+        leaving((0.3, 0.8), survival=0.001),  # 20 of 20,000 stay
+        leaving((0.8, 0.3)),  # the same source spreads it most: nothing to add
+    ):
+        assert not [s for s in findings(made) if "decided most" in s]
 
 
 def test_no_spread_is_said():

@@ -64,9 +64,9 @@ class ArcMap:
     """Chart states at an arc's times as polynomials of what goes into the arc.
 
     Ticks first ... last; times (m,) after the arc's start, the last being its end; coefficients
-    (terms, m d). `reach` is the largest Christoffel value among the design's runs; low, high (m, d)
-    what its runs reached, widened by half. So many members of the ensemble as `direct_runs` may be
-    run directly, those farthest outside.
+    (terms, m d). low, high (m, d) are what its runs reached, and twice that range beyond; `error`
+    is held out, at the arc's end, over the spread. So many members of the ensemble as `direct_runs`
+    may be run directly, those farthest outside.
     """
 
     first: int
@@ -76,32 +76,35 @@ class ArcMap:
     noise: NoiseModel
     basis: TensorBasis
     coefficients: FloatArray
-    reach: float
     low: FloatArray
     high: FloatArray
     degree: int
     components: int
+    error: float = 0.0
     direct_runs: float = 0.0
 
     def __call__(self, germ: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Chart states (n, m, d) of germ rows (n, c + K), and how far outside the rows are (n,).
 
-        Far is what passes one. It is the larger of two: the Christoffel function over `REACH` times
-        its largest value in the design, where the polynomial is extrapolated; and the terms of the
-        highest degree over `STEEP` times the spread, at the arc's end, where it has not converged.
-        There the parts beyond degree one are scaled down, so that a far member moves by the linear
-        map; and none leaves what runs have reached by more than half of it: nothing explodes.
+        Far is what passes one. It is an error that a row must be feared to have at the arc's end,
+        over `WRONG` times the spread: the larger of the terms of the highest degree p there, which
+        are large where the expansion has not converged, and of the held-out error carried outwards.
+        That grows like |x|^(p + 1), and the Christoffel function, whose mean is the number of
+        terms, like |x|^(2 p). Far rows have the parts beyond degree one scaled down, so that they
+        move by the linear map; and none goes past `low` and `high`: nothing explodes.
         """
         matrix = self.basis.evaluate(germ)
-        outside = np.einsum("tn,tn->n", matrix, matrix) / (REACH * self.reach)
         order = self.basis.indices.sum(axis=1)
-        if self.degree > 1:
-            top = order == order.max()
+        degree = max(int(order.max()), 1)
+        christoffel = np.einsum("tn,tn->n", matrix, matrix) / order.size
+        outside = self.error * christoffel ** (0.5 * (degree + 1) / degree) / WRONG
+        if degree > 1:
+            top = order == degree
             last = self.coefficients.reshape(order.size, self.times.size, -1)[:, -1]
             spread = np.sqrt(np.sum(last[1:] ** 2, axis=0))
             steep = np.abs(matrix[top].T @ last[top])
             with np.errstate(invalid="ignore", divide="ignore"):
-                steep = np.where(spread > 0, steep / (STEEP * spread), 0.0)
+                steep = np.where(spread > 0, steep / (WRONG * spread), 0.0)
             outside = np.maximum(outside, steep.max(axis=1))
         far = outside > 1.0
         if np.any(far):
@@ -133,5 +136,7 @@ class ArcMap:
         return result
 
 
+WRONG = 0.3
+"""An error over the spread with which a member is better run directly."""
 REACH = 4.0
-STEEP = 0.3
+"""Christoffel function over its largest value in a design, beyond which one arc is extrapolated."""

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -95,7 +95,8 @@ class ArcFit:
         if degree > 1:
             # one degree less on the same runs: it costs nothing to know
             lower = self._error(self._fit(basis.up_to(degree - 1), degree - 1)[0], spread)
-        return Trial(arc, self._error(arc, spread), lower, spread)
+        error = self._error(arc, spread)
+        return Trial(replace(arc, error=error), error, lower, spread)
 
     def _extend(self, basis: TensorBasis) -> None:
         """Add nodes, chosen beside those that are there, and run them."""
@@ -124,13 +125,12 @@ class ArcFit:
             )
         fit = least_squares(matrix, self.outputs, christoffel_weights(matrix))
         components = self.truth.shape[2]
-        reach = float(np.max(np.einsum("tn,tn->n", matrix, matrix)))
         ran = self.outputs.reshape(-1, self.times.size, components)
         low, high = ran.min(axis=0), ran.max(axis=0)
-        slack = 0.5 * (high - low)
+        slack = 2.0 * (high - low)
         arc = ArcMap(
             self.first, self.last, float(self.model.start), self.times, self.model, basis,
-            fit.coefficients, reach, low - slack, high + slack, degree, components,
+            fit.coefficients, low - slack, high + slack, degree, components,
         )  # fmt: skip
         shaped = fit.coefficients.reshape(matrix.shape[0], self.times.size, components)
         return arc, np.sqrt(np.sum(shaped[1:, -1] ** 2, axis=0))

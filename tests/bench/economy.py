@@ -12,7 +12,7 @@ from economy_problems import Problem, geostationary, henon_heiles, kepler_drag
 import nipc.workflow as workflow
 from nipc.answers.result import Result
 
-MEMBERS = 200_000
+MEMBERS = 400_000
 
 
 def problems() -> list[Problem]:

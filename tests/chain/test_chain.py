@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 import nipc
-from nipc.chain.arc import REACH, noise_weights
+from nipc.chain.arc import noise_weights
 from nipc.problem.study import Study
 
 STUDY = """\
@@ -101,4 +101,3 @@ def test_members_far_outside_stay_finite(tmp_path):
 def test_weights_of_noise_variables():
     """A state-sized variable weighs 1, one ten times weaker 2: it is squared where degree is 4."""
     assert noise_weights(np.array([1.0, 0.1, 0.01])) == pytest.approx([1.0, 2.0, 3.0])
-    assert REACH > 1.0

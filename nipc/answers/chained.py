@@ -6,11 +6,14 @@ from collections.abc import Iterator
 
 import numpy as np
 
+from nipc.answers.bands import add_bands
+from nipc.answers.chain_linear import ChainLinear
 from nipc.answers.drivers import PickFreezeAccumulator
 from nipc.answers.ensemble import add_ensemble
 from nipc.answers.evidence import add_degree_norms, add_noise_bases, degree_norms
 from nipc.answers.exits import ExitDrivers
 from nipc.answers.intervals import Interval, normal_factor
+from nipc.answers.separation import add_exponents, chain_logs, worst_error
 from nipc.answers.single import add_check
 from nipc.answers.spreading import spread_rate
 from nipc.answers.table import ResultTable
@@ -22,8 +25,6 @@ from nipc.chain.history import BLOCK, NoiseHistory, blocks_of
 from nipc.chain.horizon import Horizon
 from nipc.problem.quantities import QuantitySet
 
-LINEAR_MEMBERS = 3  # members a germ variable, at the least, to tell the linear part of a quantity
-
 
 class ChainAnswers:
     """Members of a solved chain as quantities, and everything that follows from them."""
@@ -32,7 +33,8 @@ class ChainAnswers:
         self.horizon, self.chain, self.quantities = horizon, chain, quantities
         self.times = horizon.outputs
         self.groups = horizon.germ.groups()
-        self.far = 0
+        self.ensemble_lost = 0
+        self.lost = 0.0  # share of the members asked for last that ended far outside the designs
 
     def of_values(self, values: FloatArray, parameters: FloatArray) -> FloatArray:
         """Quantities (n, T, Q) of chart values (n, T, d)."""
@@ -59,9 +61,10 @@ class ChainAnswers:
         values = np.full((count, self.times.size, members.values.shape[1]), np.nan)
         values[:, self.times <= horizon.edges[0]] = members.values[:, None]
         for arc in self.chain.maps:
-            steps, members, far = horizon.advance(arc, members, history, block, direct)
+            granted = horizon.granted(arc, block) if direct else 0
+            steps, members = horizon.advance(arc, members, history, block, granted)
             values[:, horizon.output_rows(arc)] = steps[:, horizon.inner_times(arc)]
-            self.far += far
+        self.lost = float(members.lost.mean())
         if direct and block == 0 and (beyond := self.chain.continued) is not None:
             some = min(count, beyond.values.shape[0])
             values[:some, beyond.rows] = beyond.values[:some]
@@ -69,9 +72,12 @@ class ChainAnswers:
 
     def plain(self) -> Iterator[tuple[FloatArray, None]]:
         """The ensemble, block by block."""
+        self.ensemble_lost = 0
         streams = self.horizon.streams("a")
         for block, count in blocks_of(self.horizon.study.ensemble.members):
-            yield self.members(self.horizon.history, streams, block, count, direct=True), None
+            values = self.members(self.horizon.history, streams, block, count, direct=True)
+            self.ensemble_lost += round(self.lost * count)
+            yield values, None
 
     def table(self) -> ResultTable:
         """All answers of the chain."""
@@ -83,7 +89,8 @@ class ChainAnswers:
         trust = check.trust_horizon(study.tolerance)
         moments = add_ensemble(table, self.plain(), normal_factor() * rms, trust)
         std = moments.std
-        add_check(table, HeldOut(self.times, check.direct, check.predicted, std), study.tolerance)
+        held = HeldOut(self.times, check.direct, check.predicted, std)
+        add_check(table, held, study.tolerance)
         unit = "as the quantity"
         mean, std_ends = moments.mean_interval(), moments.std_interval()
         # a path error e that is independent of the path adds e^2 to the variance; one that is not
@@ -104,7 +111,8 @@ class ChainAnswers:
             "half the log growth rate of the variance",
         )
         self._drivers(table)
-        self._nonlinear(table)
+        self._linear(table, held)
+        self._separation(table, held)
         self._arcs(table)
         return table
 
@@ -167,49 +175,22 @@ class ChainAnswers:
             "driver_total", result.total, "total share of the variance", result.total_interval
         )
 
-    def _nonlinear(self, table: ResultTable) -> None:
-        """Share of variance that no linear function of start, parameters and noise explains."""
-        horizon, chain = self.horizon, self.chain
-        width = horizon.germ.first_noise + sum(arc.noise.size for arc in chain.maps)
-        shape = (self.times.size, len(self.quantities.names))
-        members = horizon.study.ensemble.members
-        share = np.full(shape, np.nan)
-        if LINEAR_MEMBERS * width < members:
-            share = self._unexplained(width, min(members, max(4096, 6 * width)))
+    def _linear(self, table: ResultTable, check: HeldOut) -> None:
+        """Share of the variance beyond degree one; which frequencies of noise drive the rest."""
+        horizon, linear = self.horizon, ChainLinear(self.horizon, self.chain)
+        streams = horizon.streams("a")
+        part = linear.fit(lambda block, n: self.members(horizon.history, streams, block, n))
+        share = np.full((self.times.size, len(self.quantities.names)), np.nan)
+        if part is not None:
+            share = part.share_beyond
+            trust = check.trust_horizon(table.study.tolerance)
+            add_bands(table, linear.responses(part), trust, check.rms)
         table.over_time("nonlinear_share", share, "1", "share of variance beyond degree one")
 
-    def _unexplained(self, width: int, count: int) -> FloatArray:
-        horizon = self.horizon
-        germ, values = np.zeros((count, width + 1 + len(horizon.gauss_markov))), []
-        row = 0
-        for block, part in blocks_of(count):
-            nodes = horizon.nodes(horizon.streams("a"), block, part)
-            columns = [np.ones((part, 1)), nodes[:, : horizon.germ.first_noise]]
-            columns += [
-                horizon.history.initial(j, block, part)[:, None] for j in horizon.gauss_markov
-            ]
-            for arc in self.chain.maps:
-                columns.append(
-                    horizon.fresh(arc.noise, horizon.history, arc.first, arc.last, block, part)
-                )
-            joined = np.hstack(columns)
-            germ[row : row + part, : joined.shape[1]] = joined
-            values.append(self.members(horizon.history, horizon.streams("a"), block, part))
-            row += part
-        outputs = np.concatenate(values)
-        flat = outputs.reshape(count, -1)
-        usable = np.isfinite(flat).all(axis=0)
-        result = np.full(flat.shape[1], np.nan)
-        live = germ[:, np.any(germ != 0.0, axis=0)]
-        q, _ = np.linalg.qr(live)
-        centred = flat[:, usable] - flat[:, usable].mean(axis=0)
-        rest = centred - q @ (q.T @ centred)
-        total = np.sum(centred**2, axis=0) / (count - 1)
-        left = np.sum(rest**2, axis=0) / (count - live.shape[1])
-        with np.errstate(invalid="ignore", divide="ignore"):
-            part_left = np.where(total > 0, np.clip(left / total, 0.0, 1.0), np.nan)
-        result[usable] = part_left
-        return result.reshape(outputs.shape[1:])
+    def _separation(self, table: ResultTable, check: HeldOut) -> None:
+        """How fast neighbouring motions move apart."""
+        if (found := chain_logs(self.horizon, self.chain)) is not None:
+            add_exponents(table, *found, worst_error(check))
 
     def _arcs(self, table: ResultTable) -> None:
         records = self.chain.records

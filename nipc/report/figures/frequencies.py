@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import textwrap
+from typing import Any
 
 import numpy as np
 import xarray as xr
@@ -36,7 +37,11 @@ def driver_bands(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> 
         if not np.isfinite(parts[index]).any():
             continue
         hand, part = stroke(index), np.nan_to_num(parts[index])
-        look = {"facecolor": hand.colour, "hatch": hand.hatch, "edgecolor": LIGHT["paper"]}
+        look: dict[str, Any] = {
+            "facecolor": hand.colour,
+            "hatch": hand.hatch,
+            "edgecolor": LIGHT["paper"],
+        }
         ax.bar(
             edges[:-1], part, np.diff(edges), bottom=bottom, align="edge", lw=0.3, zorder=2, **look
         )

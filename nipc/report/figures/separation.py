@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 import xarray as xr
 from matplotlib.axes import Axes
@@ -32,7 +34,7 @@ def lyapunov_exponents(dataset: xr.Dataset, ax: Axes | None = None) -> Axes:
         (0.25, 0.75, 0.8, "half of them"),
     ):
         if low in values and high in values:
-            look = {"facecolor": LIGHT["band"], "alpha": alpha, "lw": 0}
+            look: dict[str, Any] = {"facecolor": LIGHT["band"], "alpha": alpha, "lw": 0}
             ax.fill_between(times, values[low], values[high], **look)
             handles.append(frame.patch_key("band", alpha=alpha, lw=0))
             labels.append(words)

@@ -24,6 +24,7 @@ SHARED = {
     "economy_problems",
     "engine_large",
     "answers_drivers",
+    "answers_questions",
 }
 
 

@@ -60,11 +60,9 @@ def held_back(count: int) -> FloatArray:
 def add_panel(table: ResultTable, scaled: Scaled) -> None:
     """panel_contribution, panel_power, panel_scale_low and _high, panel_error; `panel_time`.
 
-    Nothing where no driver can be scaled or the arcs reached no output time.
+    Nothing where the arcs reached no output time.
     """
     count = len(scaled.groups)
-    if not count:
-        return
     powers = powers_of(count)
     rows, members = _size(scaled, len(powers))
     before, scaled.room = scaled.room, ROOM

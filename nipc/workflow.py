@@ -287,7 +287,7 @@ def run(
         solved = (_one_arc if study.chain.arcs == 1 else _many_arcs)(study, engine, quantities)
         # what a chain's plan says of its runs is a forecast, and the arcs have told since
         told = forecast.notes if study.chain.arcs == 1 else ()
-        notes = [*ledger.notes, *engine.notes, *solved.notes, *told]
+        notes = [*ledger.notes, *engine.notes, *solved.notes, *solved.table.notes, *told]
     attributes = _provenance(study, solved.outcomes, began, n_jobs) | {
         "run_equivalents": solved.cost,
         "notes": json.dumps(notes),

@@ -114,6 +114,7 @@ class ChainAnswers:
         self._linear(table, held)
         self._separation(table, held)
         self._arcs(table)
+        self._tell_endings(table)
         return table
 
     def checked(self, spread: FloatArray) -> HeldOut:
@@ -191,6 +192,15 @@ class ChainAnswers:
         """How fast neighbouring motions move apart."""
         if (found := chain_logs(self.horizon, self.chain)) is not None:
             add_exponents(table, *found, worst_error(check))
+
+    def _tell_endings(self, table: ResultTable) -> None:
+        ended = sum(int(np.isfinite(o.ended).sum()) for o in self.horizon.outcomes)
+        if ended:
+            table.notes.append(
+                f"{ended} runs of arcs ended early for a physical reason. Arcs are fitted without"
+                " them and members go on where such runs end, so that all answers speak of motion"
+                " that goes on: the probability of staying in a box is overstated."
+            )
 
     def _arcs(self, table: ResultTable) -> None:
         records = self.chain.records

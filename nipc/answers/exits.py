@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable
 
 import numpy as np
 
@@ -15,6 +15,9 @@ from nipc.problem.study import Study
 
 EXIT_MEMBERS = 20_000
 
+Seen = FloatArray | tuple[FloatArray, FloatArray | None]
+"""Quantities (n, T, Q) of members, and when each ended physically (n,), NaN where it did not."""
+
 
 class ExitDrivers:
     """Pick and freeze on "stayed in the box at all output times", for each boxed quantity."""
@@ -24,18 +27,15 @@ class ExitDrivers:
         self.times = study.clock.times
         self._shares = PickFreezeAccumulator(groups)
 
-    def update(self, a: FloatArray, b: FloatArray, mixed: Iterable[FloatArray]) -> None:
-        """Quantities (n, T, Q) of two independent blocks and of the mixed ones, in group order."""
+    def update(self, a: Seen, b: Seen, mixed: Iterable[Seen]) -> None:
+        """Members of two independent blocks and of the mixed ones, in group order."""
 
-        def indicators(values: FloatArray) -> FloatArray:
-            held = [survived(values, self.times, box) for box in self.boxes]
+        def indicators(seen: Seen) -> FloatArray:
+            values, ended = seen if isinstance(seen, tuple) else (seen, None)
+            held = [survived(values, self.times, box, ended) for box in self.boxes]
             return np.stack(held, axis=1)[:, None, :]
 
-        def each() -> Iterator[FloatArray]:
-            for values in mixed:
-                yield indicators(values)
-
-        self._shares.update(indicators(a), indicators(b), each())
+        self._shares.update(indicators(a), indicators(b), (indicators(one) for one in mixed))
 
     def add_to(self, table: ResultTable) -> None:
         """exit_driver_total (source, quantity) and its interval; NaN where nobody or all leave."""

@@ -7,10 +7,11 @@ from collections.abc import Iterator
 import numpy as np
 
 from nipc.answers.bands import add_bands, arc_responses
+from nipc.answers.endings import endings_of
 from nipc.answers.ensemble import add_ensemble
 from nipc.answers.evidence import add_degree_norms, add_noise_bases, degree_norms
 from nipc.answers.exits import EXIT_MEMBERS, ExitDrivers
-from nipc.answers.intervals import Interval, normal_factor
+from nipc.answers.intervals import Interval, normal_factor, widen
 from nipc.answers.separation import add_exponents, arc_logs, worst_error
 from nipc.answers.spreading import spread_rate
 from nipc.answers.table import ResultTable
@@ -29,8 +30,10 @@ def single_arc_table(arc: SingleArc) -> ResultTable:
     add_check(table, arc.check, arc.study.tolerance)
     rms = np.nan_to_num(arc.check.rms)
     margin = normal_factor() * np.maximum(rms, np.nan_to_num(_residual(arc)))
-    add_ensemble(table, _blocks(arc), margin, arc.check.trust_horizon(arc.study.tolerance))
-    _add_exit_drivers(table, arc)
+    members = Members(arc)
+    add_ensemble(table, members.blocks(), margin, arc.check.trust_horizon(arc.study.tolerance))
+    members.add_endings(table)
+    _add_exit_drivers(table, members)
     add_bands(
         table, arc_responses(arc), arc.check.trust_horizon(arc.study.tolerance), arc.check.rms
     )
@@ -68,34 +71,84 @@ def _add_arc(table: ResultTable, arc: SingleArc) -> None:
         table.add(f"arc_{name}", ("arc",), [value], unit, words)
 
 
-def _blocks(arc: SingleArc) -> Iterator[tuple[FloatArray, None]]:
-    rng = generator(arc.study, "ensemble")
-    left = arc.study.ensemble.members
-    while left > 0:
-        count = min(BLOCK, left)
-        yield arc.quantities(arc.germ.sample(rng, count)), None
-        left -= count
+class Members:
+    """The ensemble by the expansion, those that end early for a physical reason among it."""
+
+    def __init__(self, arc: SingleArc) -> None:
+        self.arc, self.endings = arc, endings_of(arc)
+        self._chance = generator(arc.study, "endings")
+        self._ended: list[FloatArray] = []
+
+    def at(self, nodes: FloatArray, uniform: FloatArray) -> tuple[FloatArray, FloatArray | None]:
+        """(quantities (n, T, Q), NaN once ended; times of ending (n,), or None if none can)."""
+        values = self.arc.quantities(nodes)
+        if self.endings is None:
+            return values, None
+        ended = self.endings.draw(nodes, values, uniform)
+        values[self.arc.times >= ended[:, None]] = np.nan
+        return values, ended
+
+    def blocks(self) -> Iterator[tuple[FloatArray, FloatArray | None]]:
+        """The ensemble, block by block."""
+        rng = generator(self.arc.study, "ensemble")
+        for count in _parts(self.arc.study.ensemble.members):
+            nodes = self.arc.germ.sample(rng, count)
+            values, ended = self.at(nodes, self.uniform(count))
+            if ended is not None:
+                self._ended.append(ended)
+            yield values, ended
+
+    def uniform(self, count: int) -> FloatArray:
+        """What decides, beside the germ, who ends."""
+        return self._chance.random(count)
+
+    def add_endings(self, table: ResultTable) -> None:
+        """P(ended by t); and what the direct runs leave open of it widens the probabilities."""
+        if self.endings is None:
+            return
+        share, ends = self.endings.share(np.concatenate(self._ended))
+        words = "P(ended by t for a physical reason)"
+        table.add("ended_probability", ("time",), share, "1", words)
+        for end, values in (("low", ends.low), ("high", ends.high)):
+            label = f"{words}, {end} end of its 95 % interval"
+            table.add(f"ended_probability_{end}", ("time",), values, "1", label)
+        error = np.maximum(share - ends.low, ends.high - share)
+        table.notes.append(self.endings.note)
+        for name in ("inside", "survival", "joint_inside", "joint_survival"):
+            variable = f"{name}_probability"
+            if variable not in table.variables:
+                continue
+            middle = table.variables[variable][1]
+            low, high = (table.variables[f"{variable}_{end}"] for end in ("low", "high"))
+            wide = widen(Interval(low[1], high[1]), middle, error)
+            low[1][...], high[1][...] = np.clip(wide.low, 0.0, 1.0), np.clip(wide.high, 0.0, 1.0)
 
 
-def _add_exit_drivers(table: ResultTable, arc: SingleArc) -> None:
+def _parts(members: int) -> list[int]:
+    """Sizes of the blocks of so many members."""
+    return [min(BLOCK, members - at) for at in range(0, members, BLOCK)]
+
+
+def _add_exit_drivers(table: ResultTable, members: Members) -> None:
+    arc = members.arc
     groups = arc.germ.groups()
     rng = generator(arc.study, "pick and freeze")
     exits = ExitDrivers(arc.study, [g.name for g in groups])
     if not exits.boxes:
         return
-    left = min(arc.study.ensemble.members, EXIT_MEMBERS)
-    while left > 0:
-        count = min(BLOCK, left)
+    for count in _parts(min(arc.study.ensemble.members, EXIT_MEMBERS)):
         a, b = arc.germ.sample(rng, count), arc.germ.sample(rng, count)
+        chance = members.uniform(count)
 
-        def mixed(a: FloatArray = a, b: FloatArray = b) -> Iterator[FloatArray]:
+        def mixed(
+            a: FloatArray = a, b: FloatArray = b, chance: FloatArray = chance
+        ) -> Iterator[tuple[FloatArray, FloatArray | None]]:
             for group in groups:
                 nodes = a.copy()
                 nodes[:, group.columns] = b[:, group.columns]
-                yield arc.quantities(nodes)
+                yield members.at(nodes, chance)
 
-        exits.update(arc.quantities(a), arc.quantities(b), mixed())
-        left -= count
+        exits.update(members.at(a, chance), members.at(b, members.uniform(count)), mixed())
     exits.add_to(table)
 
 

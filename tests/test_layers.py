@@ -19,7 +19,7 @@ BELOW = {
     "adapters": {"runs", "problem"},
     "commands": {
         "answers", "chain", "problem", "expansion", "runs", "report", "adapters",
-        "workflow", "questions", "terminal", "starter",
+        "workflow", "questions", "pilot", "terminal", "starter",
     },
 }  # fmt: skip
 

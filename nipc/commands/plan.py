@@ -4,25 +4,54 @@ from __future__ import annotations
 
 import json
 import os
+from typing import Annotated
 
-from nipc.commands.options import AsJson, StudyFile, next_steps, quoted
+import typer
+
+from nipc.commands.options import AsJson, Jobs, StudyFile, next_steps, quoted
+from nipc.errors import InputError
 
 
-def plan(study: StudyFile, as_json: AsJson = False) -> None:
+def plan(
+    study: StudyFile,
+    pilot: Annotated[
+        bool,
+        typer.Option(
+            "--pilot",
+            help="Run your propagator a few times to tell how long all will take, and what "
+            "degrees the arcs of a chain may need.",
+        ),
+    ] = False,
+    jobs: Jobs = 1,
+    as_json: AsJson = False,
+) -> None:
     """Tell how many runs a study will take, before any is made.
 
     Also what each noise basis would lose at the chosen number of terms.
-    Neither your propagator nor any other code of yours is run.
+    Without --pilot neither your propagator nor any other code of yours is
+    run; with it the program that the study names is.
     """
-    from nipc.terminal import console, show_plan
+    from nipc.terminal import console, show_pilot, show_plan
     from nipc.workflow import load_study
     from nipc.workflow import plan as make_plan
 
-    made = make_plan(load_study(study))
+    if jobs == 0:
+        raise InputError("--jobs 0: give 1 or more, or -1 for one a processor")
+    loaded = load_study(study)
+    made = make_plan(loaded)
+    found = None
+    if pilot:
+        from nipc.pilot import pilot as make_pilot
+
+        found = make_pilot(loaded, made, jobs)
     if as_json:
-        print(json.dumps(made.as_dict()))
+        tail = {} if found is None else {"pilot": found.as_dict()}
+        print(json.dumps(made.as_dict() | tail))
         return
     show_plan(console(), made)
+    if found is not None:
+        print()
+        show_pilot(console(), found)
     print()
     file = quoted(study)
     next_steps(f"nipc probe {file}", f"nipc run {file} --jobs {os.cpu_count() or 1}")

@@ -68,6 +68,10 @@ class Rate:
 
 def duration(seconds: float) -> str:
     """Seconds in words a person reads at a glance."""
+    if seconds < 1.0:
+        return f"{1e3 * seconds:.{0 if seconds > 9.5e-3 else 1}f} ms"
+    if seconds < 9.5:
+        return f"{seconds:.2g} s"
     if seconds < 90.0:
         return f"{seconds:.0f} s"
     if seconds < 5400.0:

@@ -20,7 +20,7 @@ from nipc.arrays import FloatArray, IntArray
 NUMBERS = 550_000
 """Numbers of all contributions: some 1.1 MB in the page, 4.4 MB in results.nc."""
 FEWEST, MOST = 150, 600  # members
-TIMES = 33
+FEWEST_TIMES, TIMES = 12, 33
 REACHES = (2.0, 1.5, 1.25)
 HELD = 0.05  # of the spread: a scale up to which held-back members are off by more is not offered
 FAR = 0.5  # nor one at which more of them pass outside what runs cover
@@ -95,16 +95,32 @@ def add_panel(table: ResultTable, scaled: Scaled) -> None:
 
 def _size(scaled: Scaled, terms: int) -> tuple[IntArray, int]:
     """Which output times and how many members keep the panel small."""
-    count = scaled.times.size
-    rows = np.unique(np.linspace(0, count - 1, min(TIMES, count)).round().astype(int))
-    each = terms * rows.size * len(scaled.study.quantity)
-    members = int(np.clip(NUMBERS // each, FEWEST, MOST))
-    if members * each > NUMBERS:
-        kept = max(2, NUMBERS // (members * terms * len(scaled.study.quantity)))
-        rows = rows[
-            np.unique(np.linspace(0, rows.size - 1, min(kept, rows.size)).round().astype(int))
-        ]
+    times, period = scaled.times, scaled.study.clock.period
+    each = terms * len(scaled.study.quantity)
+    rows = rows_of(times, period, max(2, min(TIMES, NUMBERS // (FEWEST * each))))
+    members = int(np.clip(NUMBERS // (each * rows.size), FEWEST, MOST))
     return rows, min(members, scaled.study.ensemble.members)
+
+
+def rows_of(times: FloatArray, period: float | None, most: int) -> IntArray:
+    """At most so many of the times, the first and the last among them.
+
+    At one phase of the period where that can be: an oscillation seen at other phases each time
+    would be drawn as a slow one that is not there.
+    """
+    count = times.size
+    if count <= most:
+        return np.arange(count)
+    if period is not None:
+        beat = period * (count - 1) / (times[-1] - times[0])  # output steps in a period
+        whole = round(beat)
+        even = np.allclose(np.diff(times), np.diff(times)[0], rtol=1e-6)
+        if even and whole >= 1 and abs(beat - whole) <= 0.02 * whole:
+            stride = whole * -(-(count - 1) // ((most - 1) * whole))
+            rows = np.union1d([0], np.arange(count - 1, -1, -stride))
+            if FEWEST_TIMES <= rows.size <= most:
+                return rows
+    return np.unique(np.linspace(0, count - 1, most).round().astype(int))
 
 
 def _members(scaled: Scaled, points: FloatArray, members: int, rows: IntArray) -> FloatArray:

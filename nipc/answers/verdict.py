@@ -192,7 +192,8 @@ def _allowance(view: View) -> str | None:
     asked = view.data["allowance_scale"]
     if np.isnan(view.data["allowance_limit"].values).all():
         return None  # not asked of this box
-    goal = f"P({asked.attrs.get('event', 'inside')}) of {view.name} at"
+    event = "inside all the time" if asked.attrs.get("event") == "survival" else "inside"
+    goal = f"P({event}) of {view.name} at"
     goal += f" {number(float(asked.attrs['target']))} or above at the end of the horizon"
     order = [s for s, _ in view.ranked("exit_driver_total") or view.ranked("driver_total")]
     known = [s for s in order if not np.isnan(view.value("allowance_scale", source=s))]

@@ -4,10 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from asked_studies import brownian
-from test_whatif import spring
+from asked_studies import brownian, spring
 
-from nipc.answers.panel_data import design_of, held_back, powers_of
+from nipc.answers.panel_data import design_of, held_back, powers_of, rows_of
 from nipc.answers.scales import scales_of
 from nipc.answers.whatif import what_if
 from nipc.questions import reopened
@@ -90,3 +89,15 @@ def test_terms_and_designs():
     assert np.linalg.cond(matrix) < 100.0
     assert (points[:, 2] >= 0.0).all()  # a parameter is never mirrored
     assert not {tuple(p) for p in held_back(3)} & {tuple(p) for p in points}
+
+
+def test_times_keep_the_phase_of_an_oscillation():
+    times = np.linspace(0.0, 28.0, 113)  # four a day
+    assert rows_of(times, 1.0, 33).tolist() == list(range(0, 113, 4))
+    assert rows_of(times, 1.0, 20).tolist() == list(range(0, 113, 8))
+    # 7 days would leave 5 times, and 0.9 days are no whole number of steps: evenly then
+    for period in (7.0, 0.9, None):
+        rows = rows_of(times, period, 33)
+        assert rows.size == 33
+        assert (rows[0], rows[-1]) == (0, 112)
+    assert rows_of(times[:10], 1.0, 33).tolist() == list(range(10))

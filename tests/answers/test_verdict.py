@@ -155,7 +155,7 @@ def test_allowances():
         made, "To keep"
     )
     made["allowance_scale"].attrs["event"] = "survival"
-    assert said(made, "To keep P(survival) of longitude at 0.99")
+    assert said(made, "To keep P(inside all the time) of longitude at 0.99")
     # nothing was asked, nothing is said
     unasked = dataset().drop_vars(["allowance_scale", "allowance_limit"])
     assert not [s for s in findings(unasked) if "P(inside)" in s or "reduction" in s]

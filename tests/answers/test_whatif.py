@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from asked_studies import BROWNIAN, brownian, variance
+from asked_studies import BROWNIAN, SPRING, brownian, spring, variance
 from scipy.stats import norm
 
 import nipc
@@ -120,66 +120,6 @@ def test_asking_makes_no_run(study):
     assert place.read_bytes() == before
 
 
-CHAIN = BROWNIAN.replace("terms = 4\n", "").replace(
-    "[ensemble]", "period = 4.0\n[chain]\narcs = 4\n[ensemble]"
-)
-SPRING = """\
-title = "softening spring"
-seed = 4
-tolerance = 0.02
-[propagator]
-adapter = "ode"
-rhs = "spring:rates"
-batch = true
-method = "rk4"
-step = 0.1
-[clock]
-end = 12.0
-outputs = 13
-period = 6.3
-[[state]]
-name = "x"
-mean = 0.5
-std = 0.05
-[[state]]
-name = "v"
-[[noise]]
-name = "force"
-intensity = 0.02
-[[noise]]
-name = "draught"
-kind = "gauss-markov"
-time_constant = 2.0
-intensity = 0.02
-[[quantity]]
-name = "x"
-box = [-0.6, 0.6]
-[chain]
-arcs = 6
-[ensemble]
-members = 4096
-[check]
-runs = 6
-"""
-SPRING_RATES = """\
-import numpy as np
-
-def rates(t, x, xi, parameters):
-    force = xi[:, 0] + xi[:, 1]
-    return np.stack([x[:, 1], -x[:, 0] + 0.3 * x[:, 0] ** 3 + force], axis=1)
-"""
-
-
-def spring(folder, **changes):
-    folder.mkdir(exist_ok=True)
-    text = SPRING
-    for old, new in changes.items():
-        text = text.replace(old.replace("_", " "), new)
-    (folder / "spring.py").write_text(SPRING_RATES)
-    (folder / "study.toml").write_text(text)
-    return nipc.load_study(folder / "study.toml")
-
-
 @pytest.fixture(scope="module")
 def chained(tmp_path_factory):
     made = spring(tmp_path_factory.mktemp("chained"))
@@ -191,10 +131,7 @@ def chained(tmp_path_factory):
 def test_a_chain_scaled_agrees_with_a_fresh_study(chained, tmp_path):
     """Half the noise, 1.5 times the start: the same histories, so that only expansions differ."""
     text = SPRING.replace("intensity = 0.02", "intensity = 0.01").replace("0.05", "0.075")
-    folder = tmp_path / "fresh"
-    spring(folder)
-    (folder / "study.toml").write_text(text)
-    fresh = run(nipc.load_study(folder / "study.toml"), backend="inline").dataset
+    fresh = run(spring(tmp_path / "fresh", text), backend="inline").dataset
     scaled = chained.scaled
     scales = scales_of(scaled.groups, {"force": 0.5, "draught": 0.5, "start": 1.5})
     found = what_if(scaled, scales, shares=False)

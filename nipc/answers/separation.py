@@ -105,8 +105,9 @@ def arc_logs(arc: SingleArc) -> FloatArray | None:
     upper = np.linalg.qr(frame.T)[1]
     nodes = arc.germ.sample(generator(arc.study, "exponents"), members_for(times))
     result = np.empty((nodes.shape[0], times))
-    for first in range(0, nodes.shape[0], 128):
-        some = slice(first, first + 128)
+    block = max(8, 4_000_000 // (basis.n_variables * basis.n_terms))
+    for first in range(0, nodes.shape[0], block):
+        some = slice(first, first + block)
         slopes = basis.gradient_block(nodes[some])[:rank].transpose(2, 0, 1)  # (n, r, terms)
         for row in range(times):
             grown = slopes @ (expansion.coefficients[:, row, alive] / spread[alive])

@@ -16,8 +16,10 @@ from nipc.answers.separation import add_exponents, arc_logs, worst_error
 from nipc.answers.spreading import spread_rate
 from nipc.answers.table import ResultTable
 from nipc.arrays import FloatArray
+from nipc.chain.agreement import Agreement
 from nipc.chain.check import HeldOut
 from nipc.chain.single_arc import SingleArc, generator
+from nipc.problem.study import Study
 
 BLOCK = 4096
 
@@ -27,7 +29,7 @@ def single_arc_table(arc: SingleArc) -> ResultTable:
     groups = arc.germ.groups()
     table = ResultTable(arc.study, tuple((g.name, g.kind) for g in groups))
     add_moments(table, arc)
-    add_check(table, arc.check, arc.study.tolerance)
+    add_check(table, arc.check, _sample(arc), arc.study)
     rms = np.nan_to_num(arc.check.rms)
     margin = normal_factor() * np.maximum(rms, np.nan_to_num(_residual(arc)))
     members = Members(arc)
@@ -152,6 +154,11 @@ def _add_exit_drivers(table: ResultTable, members: Members) -> None:
     exits.add_to(table)
 
 
+def _sample(arc: SingleArc) -> FloatArray:
+    """Quantities (n, T, Q) of a block of members."""
+    return arc.quantities(arc.germ.sample(generator(arc.study, "ensemble"), BLOCK))
+
+
 def _residual(arc: SingleArc) -> FloatArray:
     """(T, Q) leave-one-out error in the quantity's unit."""
     return arc.relative_error * arc.expansion.std
@@ -165,7 +172,9 @@ def add_moments(table: ResultTable, arc: SingleArc) -> None:
     e^2 and by 2 e sqrt(V / n) of chance; the mean by e / sqrt(n). The intervals add up both.
     """
     expansion = arc.expansion
-    error, std = _residual(arc), expansion.std
+    constant = expansion.constant  # to rounding: no spread at all
+    error, std = _residual(arc), np.where(constant, 0.0, expansion.std)
+    error = np.where(constant, 0.0, error)
     runs = arc.design.nodes.shape[0]
     z = normal_factor()
     chance = z * error / np.sqrt(runs)
@@ -183,7 +192,6 @@ def add_moments(table: ResultTable, arc: SingleArc) -> None:
         f"1/{time}",
         "half the log growth rate of the non-constant part",
     )
-    constant = expansion.constant
     table.over_time(
         "nonlinear_share",
         np.where(constant, np.nan, expansion.nonlinear_share()),
@@ -202,18 +210,38 @@ def add_moments(table: ResultTable, arc: SingleArc) -> None:
         table.by_driver(name, shares, words, ends)
 
 
-def add_check(table: ResultTable, check: HeldOut, tolerance: float) -> None:
-    """The held-out check: path error over time, trust horizon, and the paths themselves."""
+def add_check(table: ResultTable, check: HeldOut, sample: FloatArray, settings: Study) -> None:
+    """The held-out check: path error over time, trust horizons, and the paths themselves.
+
+    `sample` (n, T, Q) is of the ensemble, against which the direct runs' distribution is held.
+    """
     unit = "as the quantity"
     table.over_time(
         "check_error", check.error, "1", "held-out path error over the standard deviation"
     )
+    paths = check.trust_horizon(settings.tolerance)
+    clock = table.study.clock.unit
     table.by_quantity(
         "trust_horizon",
-        check.trust_horizon(tolerance),
-        table.study.clock.unit,
+        paths,
+        clock,
         "time up to which held-out direct runs agree within the tolerance",
     )
+    found = Agreement.of(check, sample)
+    table.by_quantity(
+        "trust_horizon_distribution",
+        found.trust_horizon(settings.check.distribution, paths),
+        clock,
+        "time up to which mean and standard deviation are shown to be right by paired direct runs",
+    )
+    for name, value, ends, words in (
+        ("mean", found.mean, (found.mean_low, found.mean_high), "the true mean less this one"),
+        ("std", found.std, (found.std_low, found.std_high), "the true spread less this one"),
+    ):
+        words += ", by paired direct runs, over the standard deviation"
+        table.over_time(f"check_{name}_shift", value, "1", words, Interval(*ends))
+    words = "two-sample Kolmogorov-Smirnov probability, direct runs against the ensemble"
+    table.over_time("check_p_value", found.p_value, "1", words)
     dims = ("check_member", "quantity", "time")
     for name, values, words in (
         ("direct_quantity", check.direct, "held-out direct runs"),

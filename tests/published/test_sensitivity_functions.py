@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 from nipc.answers.drivers import PickFreezeAccumulator
+from nipc.expansion import ProductBasis, least_squares
 
 
 def shares(function, dimension, groups, members=60_000, seed=41):
@@ -63,3 +64,36 @@ def test_product_function_by_group():
         others = [i for i in range(4) if i not in group]
         assert first[k] == pytest.approx((np.prod(1 + v[group]) - 1) / whole, abs=0.015)
         assert total[k] == pytest.approx(1 - (np.prod(1 + v[others]) - 1) / whole, abs=0.015)
+
+
+def test_product_of_normal_variables_by_group_in_closed_form():
+    """prod (1 + a_i z_i), z standard normal: a group u has prod_u (1 + a_i^2) - 1 of the whole
+    prod (1 + a_i^2) - 1 alone (Sobol' 1993, for any product of independent factors of mean one).
+
+    The product is a polynomial, so that its expansion is exact and its sums of squares too.
+    """
+    a = np.array([1.0, 0.5, 0.25, 0.1])
+    groups = [[0], [1], [2, 3], [0, 3]]
+    whole = np.prod(1 + a**2) - 1
+    basis = ProductBasis.standard_normal(4, 4)
+    nodes = np.random.default_rng(43).standard_normal((300, 4))
+    values = np.prod(1 + a * nodes, axis=1)[:, None]
+    expansion = least_squares(basis.evaluate(nodes), values).expansion(basis)
+    assert expansion.variance[0] == pytest.approx(whole, rel=1e-9)
+    alone = [(np.prod(1 + a[g] ** 2) - 1) / whole for g in groups]
+    others = [[i for i in range(4) if i not in g] for g in groups]
+    shared = [1 - (np.prod(1 + a[g] ** 2) - 1) / whole for g in others]
+    np.testing.assert_allclose(expansion.first(groups)[:, 0], alone, rtol=1e-9)
+    np.testing.assert_allclose(expansion.total(groups)[:, 0], shared, rtol=1e-9)
+
+
+def test_sum_by_group_in_closed_form():
+    """sum c_i z_i: a group has sum_u c_i^2 of sum c_i^2, alone and in total."""
+    c = np.array([1.0, 2.0, 3.0, 0.5])
+    groups = [[0, 1], [2], [3]]
+    basis = ProductBasis.standard_normal(4, 2)
+    nodes = np.random.default_rng(44).standard_normal((60, 4))
+    expansion = least_squares(basis.evaluate(nodes), (nodes @ c)[:, None]).expansion(basis)
+    exact = np.array([np.sum(c[g] ** 2) for g in groups]) / np.sum(c**2)
+    np.testing.assert_allclose(expansion.first(groups)[:, 0], exact, rtol=1e-9, atol=1e-12)
+    np.testing.assert_allclose(expansion.total(groups)[:, 0], exact, rtol=1e-9, atol=1e-12)

@@ -7,7 +7,7 @@ import pytest
 from scipy.special import jv
 
 from nipc.answers.diffusion import spreading_law
-from nipc.answers.lyapunov import TangentProduct
+from nipc.answers.lyapunov import Stretching, TangentProduct
 from nipc.answers.moments import MomentAccumulator
 from nipc.answers.spreading import spread_rate
 
@@ -75,6 +75,22 @@ def test_cat_map():
         product.advance(np.array([[[2.0, 1.0], [1.0, 1.0]]]), 1.0)
     exact = np.log((3 + np.sqrt(5)) / 2)
     np.testing.assert_allclose(product.exponents[0], [exact, -exact], atol=2 / 400)
+    # the matrix is symmetric: its powers stretch by just that from the first step on
+    stretching = Stretching(1, 2)
+    for step in range(1, 401):
+        found = stretching.after(np.array([[[2.0, 1.0], [1.0, 1.0]]]))[0]
+        assert found == pytest.approx(step * exact, rel=1e-12)
+        stretching.advance(np.array([[[2.0, 1.0], [1.0, 1.0]]]))
+
+
+def test_linear_saddle():
+    """x' = v, v' = k^2 x in units x, v / k: sigma_max = exp(k t) in any arcs, by algebra."""
+    k, stretching, t = 0.8, Stretching(1, 2), 0.0
+    for h in np.random.default_rng(34).uniform(0.1, 3.0, 50):
+        c, s = np.cosh(k * h), np.sinh(k * h)
+        stretching.advance(np.array([[[c, s], [s, c]]]))
+        t += h
+    assert stretching.after(np.eye(2)[None])[0] / t == pytest.approx(k, rel=1e-12)
 
 
 def test_standard_map_exponent():

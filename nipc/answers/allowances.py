@@ -66,8 +66,8 @@ class Probabilities:
     def _confinement(self, scales: FloatArray, margin: FloatArray, count: int) -> Confinement:
         gathered = ConfinementAccumulator(self.scaled.times, self.question.boxes, margin)
         for values in self.scaled.blocks(scales, count):
-            gathered.update(values)
-        return gathered.result()
+            gathered.update(values, self.scaled.ended)
+        return self.scaled.counted(gathered.result())
 
     def limit(self, moved: FloatArray) -> float:
         """The largest scale up to `LIMIT` at which most members stay within what runs cover."""
@@ -297,8 +297,8 @@ def confirm(
             count = data.attrs["members"] if members is None else members
             question = question_of(scaled, data.attrs["target"], event, str(name), count)
             scales = np.where(np.arange(len(scaled.names)) == g, scale, 1.0)
-            direct = scaled.direct(scales, runs, f"allowance of {source}, {name}")
-            done.append(_paired(scaled, question, scales, direct, source, scale))
+            label = f"allowance of {source}, {name}"
+            done.append(_paired(scaled, question, scales, runs, label, source, scale))
     return done
 
 
@@ -306,14 +306,17 @@ def _paired(
     scaled: Scaled,
     question: Question,
     scales: FloatArray,
-    direct: FloatArray,
+    runs: int,
+    label: str,
     source: str,
     scale: float,
 ) -> Confirmed:
     box = question.boxes[0]
-    expanded = scaled.members(scales, 0, direct.shape[0])
     of = inside_indicator if question.event == "inside" else survival_indicator
-    held = [of(values, scaled.times, box)[:, -1] for values in (direct, expanded)]
+    direct = scaled.direct(scales, runs, label)
+    held = [of(direct, scaled.times, box, scaled.ended)[:, -1]]
+    expanded = scaled.members(scales, 0, runs)
+    held.append(of(expanded, scaled.times, box, scaled.ended)[:, -1])
     known = np.isfinite(held[0]) & np.isfinite(held[1])
     if not known.any():
         raise InputError("no direct run of the confirmation ended well; see `nipc status`")

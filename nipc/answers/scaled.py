@@ -15,6 +15,9 @@ from typing import Any
 import numpy as np
 
 from nipc.answers.chained import ChainAnswers
+from nipc.answers.confinement import Confinement
+from nipc.answers.endings import endings_of
+from nipc.answers.intervals import Interval, widen
 from nipc.answers.scaled_expansion import scaled_expansion
 from nipc.answers.scales import of_noise, scaled_germ, scaled_nodes
 from nipc.arrays import FloatArray
@@ -35,7 +38,8 @@ ALL = "all"
 class Scaled(ABC):
     """Members of a solved study at scales (G,) of its groups, which are all ones as it stands.
 
-    `far` is the share of the members asked for last that passed outside what the runs cover.
+    `far` is the share of the members asked for last that passed outside what the runs cover, and
+    `ended` (n,) when each ended early for a physical reason, NaN where it did not; None: none can.
     """
 
     room = 1.0
@@ -45,6 +49,7 @@ class Scaled(ABC):
         self.study, self.groups, self.check = study, groups, check
         self.times = study.clock.times
         self.far = 0.0
+        self.ended: FloatArray | None = None
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -85,6 +90,10 @@ class Scaled(ABC):
     def direct(self, scales: FloatArray, count: int, label: str) -> FloatArray:
         """The first block's first members by direct runs, (n, T, Q); NaN where one failed."""
 
+    def counted(self, result: Confinement) -> Confinement:
+        """The probabilities with what else their intervals have to hold."""
+        return result
+
     def blocks(self, scales: FloatArray, count: int) -> Iterator[FloatArray]:
         """The ensemble's first members, block by block; afterwards `far` is of all of them."""
         far = 0.0
@@ -104,6 +113,8 @@ class ScaledArc(Scaled):
     def __init__(self, arc: SingleArc, engine: Engine, quantities: QuantitySet) -> None:
         super().__init__(arc.study, arc.germ.groups(), arc.check)
         self.arc, self._engine, self._quantities = arc, engine, quantities
+        self._endings = endings_of(arc)
+        self._times_ended: list[FloatArray] = []
         self._states: list[Mapping[str, Any]] = []  # of the generator, at the start of each block
         self._reach = REACH * float(arc.expansion.basis.christoffel(arc.design.nodes).max())
 
@@ -135,7 +146,37 @@ class ScaledArc(Scaled):
                     nodes[:, group.columns] = other[:, group.columns]
         nodes = scaled_nodes(self.arc.germ, self.groups, scales, nodes)
         self.far = float(np.mean(self.arc.expansion.basis.christoffel(nodes) > self._reach))
-        return self.arc.quantities(nodes)
+        values = self.arc.quantities(nodes)
+        if self._endings is not None:
+            # the ensemble's own numbers decide, beside the germ, who ends
+            chance = generator(self.study, "endings").random(block * BLOCK + count)
+            self.ended = self._endings.draw(nodes, values, chance[block * BLOCK :])
+            values[self.times >= self.ended[:, None]] = np.nan
+        return values
+
+    def blocks(self, scales: FloatArray, count: int) -> Iterator[FloatArray]:
+        self._times_ended = []
+        for values in super().blocks(scales, count):
+            if self.ended is not None:
+                self._times_ended.append(self.ended)
+            yield values
+
+    def counted(self, result: Confinement) -> Confinement:
+        """Widened by what the direct runs leave open of who ends."""
+        if self._endings is None:
+            return result
+        share, ends = self._endings.share(np.concatenate(self._times_ended))
+        error = np.maximum(share - ends.low, ends.high - share)
+
+        def wide(value: FloatArray, interval: Interval) -> Interval:
+            low, high = widen(interval, value, error)
+            return Interval(np.clip(low, 0.0, 1.0), np.clip(high, 0.0, 1.0))
+
+        return replace(
+            result,
+            inside_interval=wide(result.inside, result.inside_interval),
+            survival_interval=wide(result.survival, result.survival_interval),
+        )
 
     def direct(self, scales: FloatArray, count: int, label: str) -> FloatArray:
         germ = self.arc.germ
@@ -144,7 +185,9 @@ class ScaledArc(Scaled):
         parameters = germ.parameters(nodes)
         batch = Batch(germ.states(nodes), times, germ.forcing(nodes), parameters)
         with _lenient(self._engine):
-            states = self._engine.run(batch, label).states[:, rows]
+            outcomes = self._engine.run(batch, label)
+        states = outcomes.states[:, rows]
+        self.ended = None if self._endings is None else outcomes.ended
         with np.errstate(invalid="ignore", divide="ignore"):
             return self._quantities(times[rows], states, parameters)
 

@@ -104,10 +104,11 @@ def _gather(
     for values in scaled.blocks(scales, count):
         if not moments.members and np.isfinite(values[:, 0]).any():
             check_start(single, values[:, 0])
-        confinement.update(values)
+        confinement.update(values, scaled.ended)
         moments.update(values)
         quantiles.update(values)
-    return _Gathered(moments, quantiles, confinement.result(), scaled.far)
+    result = scaled.counted(confinement.result())
+    return _Gathered(moments, quantiles, result, scaled.far)
 
 
 def _add_moments(

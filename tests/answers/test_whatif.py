@@ -178,3 +178,40 @@ def test_a_sweep_tells_where_the_linear_picture_ends(study):
         nipc.sweep(study, [1.0], ["pusch"])
     with pytest.raises(InputError, match="scale -1"):
         nipc.sweep(study, [-1.0])
+
+
+def test_members_that_end_have_left_at_any_scale(tmp_path):
+    """Lost where |x| > 1 was seen: at scale one as the study says, and fewer with less noise."""
+    rates = tmp_path / "ending.py"
+    rates.write_text(
+        "import numpy as np\nfrom nipc import Ended\n\n"
+        "def propagate(x0, times, forcing, parameters):\n"
+        "    step = np.diff(times)[:, None] * np.array([forcing(t) for t in times[:-1]])\n"
+        "    x = np.concatenate([[x0[0]], x0[0] + np.cumsum(step.sum(axis=1))])\n"
+        "    gone = np.flatnonzero(np.abs(x) > 1.0)\n"
+        "    if gone.size and gone[0] > 0:\n"
+        "        raise Ended(times[gone[0] - 1 : gone[0] + 1].mean(), x[: gone[0], None])\n"
+        "    return x[:, None]\n"
+    )
+    text = BROWNIAN[: BROWNIAN.index('[[state]]\nname = "y"')]
+    text = text.replace(
+        'adapter = "ode"\nrhs = "motion:rates"\nbatch = true\nmethod = "rk4"\nstep = 0.25',
+        'adapter = "function"\nfunction = "ending:propagate"',
+    )
+    text += BROWNIAN[BROWNIAN.index("[[noise]]") : BROWNIAN.index('[[quantity]]\nname = "square"')]
+    text = text.replace("box = [-1.0, 1.0]", "box = [-5.0, 5.0]").replace(
+        "0.25\nterms", "0.4\nterms"
+    )
+    (tmp_path / "study.toml").write_text(text + '[design]\nkind = "sobol"\nruns = 200\n')
+    made = nipc.load_study(tmp_path / "study.toml")
+    kept = run(made, backend="inline").dataset
+    with reopened(made) as again:
+        scaled = again.scaled
+    found = what_if(scaled, np.ones(3))
+    for name in ("survival_probability", "survival_probability_low", "inside_probability"):
+        assert found[name].values == pytest.approx(kept[name].values, abs=1e-9)
+    assert float(found["survival_probability"][0, -1]) < 0.9
+    less = what_if(scaled, scales_of(scaled.groups, {"push": 0.5}))
+    assert (
+        less["survival_probability"][0, -1] > found["survival_probability"][0, -1] + 0.05
+    ).item()

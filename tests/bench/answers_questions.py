@@ -23,7 +23,7 @@ from nipc.runs.engine import Engine
 from nipc.runs.ledger import Ledger
 
 SCALES = tuple(float(s) for s in np.geomspace(0.25, 2.0, 10))
-SWEPT = 20_000
+SWEPT = 8192
 
 
 @contextmanager

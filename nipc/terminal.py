@@ -18,8 +18,8 @@ from nipc.problem.study import NoiseSettings, QuantitySettings, Study
 from nipc.report import reading
 from nipc.report.headline import rows, split
 from nipc.report.numbers import THIN, amount, percent, probability, with_spread
+from nipc.runs.journey import duration
 from nipc.runs.probe import ProbeReport
-from nipc.runs.progress import duration
 
 MARKS = {
     "†": "† past the trust horizon of single paths, the distribution still agrees",

@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import platform
 import time
+from collections.abc import Callable
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
@@ -24,6 +25,7 @@ if TYPE_CHECKING:
     from nipc.answers.chained import ChainAnswers
     from nipc.answers.result import Result
     from nipc.answers.table import ResultTable
+    from nipc.chain.chain import ArcRecord
     from nipc.chain.horizon import Horizon
     from nipc.problem.germ import Germ
     from nipc.runs.engine import Engine
@@ -262,7 +264,7 @@ def run(
     from nipc.answers.verdict import findings
     from nipc.runs.engine import Engine, FailurePolicy
     from nipc.runs.ledger import Ledger
-    from nipc.runs.progress import Silent
+    from nipc.runs.progress import usual
 
     began = time.monotonic()
     place = Path(folder) if folder is not None else work_folder(study)
@@ -277,7 +279,7 @@ def run(
             n_jobs=n_jobs,
             time_limit=study.runs.time_limit,
             policy=policy,
-            progress=progress or Silent(),
+            progress=progress or usual(),
             backend=backend,
         ) as engine,
     ):
@@ -349,7 +351,7 @@ def solved_chain(
     from nipc.chain.chain import ChainBuilder
 
     horizon = build_horizon(study, engine)
-    builder = ChainBuilder(horizon)
+    builder = ChainBuilder(horizon, _teller(study, engine.progress))
     chain = builder.build()
     answers = ChainAnswers(horizon, chain, quantities)
     notes = []
@@ -366,6 +368,22 @@ def solved_chain(
         chain = builder.build(chain)
         answers = ChainAnswers(horizon, chain, quantities)
     return answers, notes
+
+
+def _teller(study: Study, progress: Progress) -> Callable[[list[ArcRecord]], None]:
+    """Tells the progress of every arc as it is done."""
+    from nipc.runs.journey import ArcTold
+
+    def tell(records: list[ArcRecord]) -> None:
+        last, clock = records[-1], study.clock
+        progress.arc(
+            ArcTold(
+                len(records), last.end, clock.start, clock.end, clock.unit, last.degree,
+                last.runs, last.error, last.note,
+            )
+        )  # fmt: skip
+
+    return tell
 
 
 def build_horizon(study: Study, engine: Engine) -> Horizon:

@@ -153,6 +153,20 @@ def test_a_probe_finds_noise_that_is_not_heard(command, tmp_path):
     assert [f["topic"] for f in found["findings"] if not f["good"]] == ["noise force"]
 
 
+def test_quiet_commands_say_nothing_and_scripts_get_json(command, tmp_path):
+    study = tmp_path / "a" / "study.toml"
+    shown = command("new", tmp_path / "a", "--flavour", "ode", "--quiet")
+    assert (shown.code, shown.out, shown.err) == (0, "", "")
+    shown = command("check", study, "--quiet")
+    assert (shown.code, shown.out, shown.err) == (0, "", "")
+    study.write_text(study.read_text().replace("end = 6.0", "end = 1.0"))
+    assert command("run", study, "--quiet", "--no-page").code == 0
+    shown = command("report", study, "--quiet")
+    assert (shown.code, shown.out, shown.err) == (0, "", "")
+    page = json.loads(command("report", study, "--json").out)
+    assert page == {"page": str(tmp_path / "a" / "study.work" / "page.html")}
+
+
 def test_new_does_not_overwrite(command, tmp_path):
     (tmp_path / "mine.txt").write_text("keep")
     done = command("new", tmp_path)

@@ -7,7 +7,7 @@ from typing import Annotated
 
 import typer
 
-from nipc.commands.options import next_steps, quoted
+from nipc.commands.options import Quiet, next_steps, quoted
 from nipc.starter import Flavour
 
 
@@ -22,6 +22,7 @@ def new(
             "right-hand side of an ODE, or a program that reads and writes files."
         ),
     ] = Flavour.FUNCTION,
+    quiet: Quiet = False,
 ) -> None:
     """Write a commented study and a small propagator, to change into yours.
 
@@ -30,5 +31,7 @@ def new(
     from nipc.starter import write_starter
 
     study = write_starter(folder, flavour)
+    if quiet:
+        return
     print(f"Written to {folder}: {', '.join(sorted(p.name for p in folder.iterdir()))}")
     next_steps(f"nipc check {quoted(study)}", f"nipc run {quoted(study)}")

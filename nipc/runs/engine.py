@@ -61,7 +61,7 @@ class Engine:
         self.failed: list[FailedBatch] = []
         self.runs_done = 0
         self.runs_reused = 0
-        self._progress: Progress = Silent() if progress is None else progress
+        self.progress: Progress = Silent() if progress is None else progress
         self._fingerprint = propagator.fingerprint()
         self._crew = _crew(propagator, ledger, n_jobs, time_limit, backend, scheduler)
         foreign = ledger.foreign(self._fingerprint)
@@ -120,13 +120,13 @@ class Engine:
         if not rows:
             return frozenset()
         number = self.ledger.begin(batch, self._fingerprint, label, len(batch), reused)
-        writer = Writer(self.ledger, number, keys, batch, self._progress, tell)
+        writer = Writer(self.ledger, number, keys, batch, self.progress, tell)
         tally = Tally(len(batch), sum(
             known[key][0] is Status.FAILED for key in unique if self._settled(known.get(key))
         ))  # fmt: skip
         units = self._first_units(batch, rows, keys, known)
         alone = False
-        self._progress.start(label, len(batch), reused)
+        self.progress.start(label, len(batch), reused)
         try:
             while units:
                 units = self._round(Work(batch, units, alone), writer, tally)
@@ -146,7 +146,7 @@ class Engine:
             raise
         finally:
             self.runs_done += writer.kept
-            self._progress.finish()
+            self.progress.finish()
         return frozenset(keys[row] for row in rows)
 
     def _settled(self, state: tuple[Status, int] | None) -> bool:

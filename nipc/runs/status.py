@@ -10,9 +10,9 @@ from pathlib import Path
 
 from nipc.errors import InputError
 from nipc.runs import schema
+from nipc.runs.journey import duration
 from nipc.runs.ledger import FILE_NAME, LOCK_NAME
 from nipc.runs.lock import holder_of, is_held
-from nipc.runs.progress import duration
 from nipc.runs.record import Status
 
 

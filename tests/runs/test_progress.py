@@ -2,14 +2,18 @@
 
 import io
 import re
+import sys
+import types
 
 import pytest
 from rich.console import Console
 from runs_samples import RAISES, Sample, sample_batch
 
 from nipc.runs.engine import Engine
+from nipc.runs.journey import ArcTold, Journey, Rate, duration
 from nipc.runs.ledger import Ledger
-from nipc.runs.progress import Bar, Lines, Rate, duration, suited
+from nipc.runs.notebook import Notebook
+from nipc.runs.progress import Bar, Lines, Silent, suited, usual
 
 
 def run_with(progress, folder, n=6, **settings):
@@ -63,6 +67,88 @@ def test_the_bar_shows_count_rate_and_failures(tmp_path):
     assert "/s, 1 failed" in text
 
 
+def arcs(count, note=""):
+    """Arcs of half a day over 28 days."""
+    return [
+        ArcTold(k, 0.5 * k, 0.0, 28.0, "day", 2, 24, 1.234e-3, note) for k in range(1, count + 1)
+    ]
+
+
+def test_time_left_follows_the_pace_of_the_last_arcs():
+    """Ten arcs at a second each, then ten at three: 36 arcs of three seconds are left."""
+    now = iter([*range(1, 11), *range(13, 41, 3)])
+    journey = Journey(clock=lambda: next(now))
+    assert journey.seconds_left is None
+    for arc in arcs(20):
+        journey.hear(arc)
+    assert journey.seconds_left == pytest.approx(36 * 3.0)
+
+
+def test_a_chain_that_is_done_again_begins_its_pace_anew():
+    now = iter(range(100))
+    journey = Journey(clock=lambda: next(now))
+    for arc in [*arcs(56), *arcs(1)]:
+        journey.hear(arc)
+    assert journey.seconds_left is None
+    journey.hear(arcs(2)[1])
+    assert journey.seconds_left == pytest.approx(54.0)
+
+
+def test_lines_tell_of_an_arc_and_its_note():
+    out = io.StringIO()
+    Lines(out).arc(arcs(12, "halved")[-1])
+    assert out.getvalue() == ("t = 6 of 28 day: arc 12: degree 2, 24 runs, error 0.12 %, halved\n")
+
+
+def test_the_bar_shows_the_horizon_above_the_batch():
+    out = io.StringIO()
+    bar = Bar(Console(file=out, force_terminal=True, width=100))
+    for arc in arcs(12, "easy [b]"):
+        bar.arc(arc)
+    bar.start("t = 6 to 6.5 of 28, design", 24, 0)
+    bar.advance(24, 0)
+    bar.finish()
+    text = re.sub(r"\x1b\[[0-9;?]*[a-zA-Z]", "", out.getvalue())
+    assert "t = 0.5 of 28 day: arc 1: degree 2, 24 runs, error 0.12 %, easy [b]" in text
+    assert "arc 12: degree 2, 24 runs, error 0.12 %," in text
+    assert "24/24" in text
+    assert "design" in text
+
+
+def test_a_notebook_rewrites_one_line(monkeypatch):
+    shown = []
+
+    class Handle:
+        def update(self, line):
+            shown.append(line)
+
+    def display(line, display_id):
+        shown.append(line)
+        return Handle()
+
+    module = types.ModuleType("IPython")
+    module.display = types.SimpleNamespace(HTML=str, display=display)
+    module.get_ipython = lambda: types.SimpleNamespace(kernel=object())
+    monkeypatch.setitem(sys.modules, "IPython", module)
+    monkeypatch.setitem(sys.modules, "IPython.display", module.display)
+    progress = usual()
+    assert isinstance(progress, Notebook)
+    progress.start("<b>design</b>", 8, 2)
+    progress.advance(6, 1)
+    progress.finish()
+    progress.arc(arcs(14, "<i>")[-1])
+    assert "&lt;b&gt;design&lt;/b&gt;: 2 of 8 runs" in shown[0]
+    assert 'value="1.0000"' in shown[-2]
+    assert "1 failed" in shown[-2]
+    assert 'value="0.2500"' in shown[-1]
+    assert "t = 7 of 28 day; arc 14: degree 2, 24 runs, error 0.12 %, &lt;i&gt;" in shown[-1]
+    assert not any("<i>" in line or "<b>" in line for line in shown)
+
+
+def test_python_is_silent_outside_a_notebook():
+    assert isinstance(usual(), Silent)
+
+
 def test_lines_where_there_is_no_terminal():
     assert isinstance(suited(io.StringIO()), Lines)
 
@@ -80,6 +166,9 @@ def test_every_run_is_counted_once_and_only_when_kept(tmp_path):
             assert ledger.count() >= self.done
 
         def finish(self):
+            pass
+
+        def arc(self, told):
             pass
 
     progress = Count()

@@ -169,6 +169,8 @@ def _add_laws(table: ResultTable, slow: SlowSpreading, trust: FloatArray) -> Non
         ("coefficient", unit, "D in Var = A + 2 D t^exponent"),
         ("exponent", "1", "exponent in Var = A + 2 D t^exponent"),
         ("offset", "as the quantity squared", "A in Var = A + 2 D t^exponent"),
+        ("rate", f"1/{table.study.clock.unit}", "lambda in Var ~ exp(2 lambda t)"),
+        ("plateau", "as the quantity squared", "variance at which a bounded spread stays"),
     ):
         estimates = [getattr(law, name) for law in laws]
         ends = Interval(np.array([e.low for e in estimates]), np.array([e.high for e in estimates]))

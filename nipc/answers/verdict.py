@@ -119,9 +119,15 @@ def _law(view: View) -> str | None:
         square = square if view.unit not in ("", "1") else "1"
         unit = f"{square}/{view.clock}" if verdict == "diffusive" else f"{square}/{view.clock}^a"
         text += f" and D = {estimate(*coefficient, unit)}"
-    rate = view.value("spread_rate")
-    if verdict == "exponential" and np.isfinite(rate):
-        text += f": the spread grows at {number(rate, 3)} per {view.clock} at {view.when}"
+    rate, plateau = view.triple("diffusion_rate"), view.triple("diffusion_plateau")
+    if verdict == "exponential" and np.isfinite(rate[0]):
+        text += f": its standard deviation grows as exp(k t) with k = {estimate(*rate)}"
+        text += f" per {view.clock}"
+    elif verdict == "exponential" and np.isfinite(now := view.value("spread_rate")):
+        text += f": the spread grows at {number(now, 3)} per {view.clock} at {view.when}"
+    if verdict == "bounded" and plateau[0] > 0.0:
+        ends = (float(np.sqrt(max(p, 0.0))) for p in plateau)
+        text += f": its standard deviation stays at {estimate(*ends, view.unit)}"
     return text + "."
 
 
@@ -256,7 +262,7 @@ def _separation(dataset: xr.Dataset) -> list[str]:
             f" every {number(1.0 / rate[0], 3)} {view.clock}".rstrip()
         )
     else:
-        factors = [number(float(np.exp(r * elapsed)), 3) for r in (rate[0], *ends)]
+        factors = [number(float(np.exp(r * elapsed))) for r in (rate[0], *ends)]
         text = (
             "Neighbouring motions do not move apart exponentially: up to"
             f" {view.when} by a factor of {factors[0]} (median; {factors[1]} to {factors[2]} for"

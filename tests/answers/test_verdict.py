@@ -234,3 +234,68 @@ def test_numbers():
     assert estimate(2e-9, 1e-9, 3e-9, "m") == "2.00e-09 m (1.00e-09 to 3.00e-09)"
     assert estimate(1.0, 0.9996, 1.0) == "1.0000 (0.9996 to 1.0000)"
     assert percent(0.123, 0.1, 0.15) == "12 % (10 to 15)"
+
+
+def test_rates_and_plateaus_of_laws():
+    made = dataset()
+    made["spreading_verdict"] = ("quantity", ["bounded", "exponential"])
+    made["spreading_of"] = ("quantity", ["averaged over its period of 1 d", ""])
+    for end, plateau, rate in (("", 4e-4, 0.3), ("_low", 3.61e-4, 0.28), ("_high", 4.41e-4, 0.32)):
+        made[f"diffusion_plateau{end}"] = ("quantity", [plateau, np.nan])
+        made[f"diffusion_rate{end}"] = ("quantity", [np.nan, rate])
+        for name in ("exponent", "coefficient"):
+            made[f"diffusion_{name}{end}"] = ("quantity", [np.nan, np.nan])
+    sentence = said(made, "spreading of longitude (averaged over its period of 1 d) is bounded")
+    assert "stays at 0.0200 deg (0.0190 to 0.0210)" in sentence
+    sentence = said(made, "spreading of radius is exponential")
+    assert "exp(k t) with k = 0.30 (0.28 to 0.32) per d" in sentence
+
+
+def resonant(share=0.8, low=0.7, told=28.0):
+    """The thrust drives longitude by noise of one turn a day."""
+    made = dataset()
+    pairs = {"frequency": 1.0, "width": 0.1, "share": share, "share_low": low, "share_high": 0.9}
+    for name, value in pairs.items():
+        made[f"resonance_{name}"] = (("source", "quantity"), [[value, np.nan], [np.nan] * 2])
+    made["band_time"] = ("quantity", [told, np.nan])
+    return made
+
+
+def test_a_resonance_is_said_where_it_is_pronounced_and_trusted():
+    sentence = said(resonant(), "longitude resonates with the noise source 'thrust'")
+    assert "80 % (70 to 90) of the variance" in sentence
+    assert "noise of periods 0.909 to 1.11 d, most at 1 d" in sentence
+    assert "[trust horizon 28 d" in sentence
+    for made in (resonant(low=0.4), resonant(told=30.0), dataset()):
+        assert not [s for s in findings(made) if "resonates" in s]
+    # nor of a source that gives little
+    weak = resonant()
+    weak["driver_total"] = 0.05 * weak["driver_total"]
+    assert not [s for s in findings(weak) if "resonates" in s]
+
+
+def separating(growth):
+    """Quantiles of exponents whose ln of the separation is growth(t) for the median."""
+    made = dataset()
+    with np.errstate(invalid="ignore"):
+        middle = growth(TIMES) / TIMES
+    made = made.reindex(level=[0.025, 0.5, 0.975], method="nearest")
+    for end, factor in (("", 1.0), ("_low", 0.98), ("_high", 1.02)):
+        values = factor * np.stack([0.8 * middle, middle, 1.2 * middle])
+        made[f"lyapunov_exponent{end}"] = (("level", "time"), values)
+    made["lyapunov_begin"] = ((), 0.0)
+    return made
+
+
+def test_how_neighbours_move_apart():
+    """Up to the earliest trust horizon, of the two 20 d: exp(0.5 t) does, a power does not."""
+    sentence = said(separating(lambda t: 0.5 * t), "Neighbouring motions")
+    assert "move apart exponentially" in sentence
+    assert "up to 20 d is 0.500 per d (0.490 to 0.510)" in sentence
+    assert "95 % of the members have 0.4 to 0.6" in sentence
+    assert "a factor e every 2 d" in sentence
+    assert "[trust horizon 20 d of 28 d" in sentence
+    shear = said(separating(lambda t: np.log1p(5.0 * t**2)), "Neighbouring motions")
+    assert "do not move apart exponentially: up to 20 d by a factor of 2001 (median" in shear
+    few = said(separating(lambda t: 0.1 * t), "Neighbouring motions")
+    assert "do not move apart exponentially" in few

@@ -198,8 +198,7 @@ def _judge(
         return found(
             "cannot tell",
             f"no law follows the variance: the best, {best.law.name}, misses it by"
-            f" {100 * best.misfit:.0f} % rms; a quantity that oscillates is to be averaged over its"
-            " period",
+            f" {100 * best.misfit:.0f} % rms",
         )
     lead = rival.criterion - best.criterion
     constant = named["constant"]

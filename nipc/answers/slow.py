@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 
@@ -99,7 +100,11 @@ class SlowSpreading:
                 self.amplitude[q] = _grows_beyond(whole, variance)
                 if self.amplitude[q]:
                     variance, origin = whole, float(self.times[0])
-            result.append(spreading_law(variance, times[kept], origin, tolerance))
+            law = spreading_law(variance, times[kept], origin, tolerance)
+            if not period and law.reason.startswith("no law follows"):
+                hint = "; a quantity that oscillates is to be averaged over its period"
+                law = replace(law, reason=law.reason + hint)
+            result.append(law)
         return result
 
     def subjects(self, clock: str) -> list[str]:

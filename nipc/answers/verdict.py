@@ -179,6 +179,8 @@ def _resonance(view: View) -> str | None:
     share = view.triple("resonance_share", source=source)
     frequency = view.value("resonance_frequency", source=source)
     told = view.value("band_time")
+    if view.value("nonlinear_share") > 0.5:
+        return None  # what is told to first order is not what drives it
     if not share[1] >= RESONANT or told > view.times[view.trust.index] * (1.0 + 1e-12):
         return None
     width = view.value("resonance_width", source=source)

@@ -96,3 +96,12 @@ def test_one_that_is_not_slow_is_judged_as_it_is(paths):
     assert slow.used[:2] == (None, None)
     assert slow.subjects("s")[:2] == ["", ""]
     assert slow.subjects("s")[2].startswith("averaged over its period of 2.")
+
+
+def test_the_hint_to_average_is_given_where_it_was_not_done(paths):
+    turning = (1.0 + 0.9 * np.sin(2 * np.pi * TIMES / 2.5)) * paths[:, -1:, 0]
+    values = np.repeat(turning[:, :, None], 2, axis=2)
+    slow = gathered(values, (0.0, 3.3))
+    plain, averaged = slow.laws()
+    assert "to be averaged over its period" in plain.reason
+    assert "to be averaged" not in averaged.reason

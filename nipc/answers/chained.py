@@ -90,7 +90,7 @@ class ChainAnswers:
         moments = add_ensemble(table, self.plain(), normal_factor() * rms, trust)
         std = moments.std
         held = HeldOut(self.times, check.direct, check.predicted, std)
-        add_check(table, held, study.tolerance)
+        add_check(table, held, self._first_block(), study)
         unit = "as the quantity"
         mean, std_ends = moments.mean_interval(), moments.std_interval()
         # a path error e that is independent of the path adds e^2 to the variance; one that is not
@@ -129,11 +129,14 @@ class ChainAnswers:
         error = self.checked(self._spread()).error
         return float(np.nanmax(np.where(np.isfinite(error), error, np.nan), initial=0.0))
 
-    def _spread(self) -> FloatArray:
-        """(T, Q) standard deviations of the first block, to read the trust horizon from."""
+    def _first_block(self) -> FloatArray:
+        """Quantities (n, T, Q) of the ensemble's first members."""
         count = min(self.horizon.study.ensemble.members, BLOCK)
-        streams = self.horizon.streams("a")
-        values = self.members(self.horizon.history, streams, 0, count, direct=True)
+        return self.members(self.horizon.history, self.horizon.streams("a"), 0, count, direct=True)
+
+    def _spread(self) -> FloatArray:
+        """(T, Q) standard deviations of the first members, to read the trust horizon from."""
+        values = self._first_block()
         known = np.isfinite(values)
         with np.errstate(invalid="ignore", divide="ignore"):
             mean = np.where(known, values, 0.0).sum(axis=0) / known.sum(axis=0)

@@ -12,7 +12,7 @@ from nipc.chain.arc import ArcMap
 from nipc.chain.arc_fit import ArcFit, Trial
 from nipc.chain.direct import Continued, continue_directly
 from nipc.chain.horizon import Horizon, Members
-from nipc.chain.steering import Steering, Step, Tried
+from nipc.chain.steering import Done, Steering, Step, Tried
 from nipc.chain.ticks import TICKS
 
 POOL = 16384  # members from which designs are picked: the more, the fewer lie outside them
@@ -233,10 +233,11 @@ class ChainBuilder:
         beyond = min(round(in_pool), int(self.saved / share))
         self.saved -= beyond * share
         allowed = self.steering.allowed(share)
-        self.steering, word = self.steering.after(
+        done = Done(
             best.degree, best.error / allowed, best.lower / allowed, last - at,
-            self._dearer((last - at) / TICKS, fit.width),
+            fit.runs + self.study.check.runs, self._dearer((last - at) / TICKS, fit.width),
         )  # fmt: skip
+        self.steering, word = self.steering.after(done)
         words += [word] if word else []
         record = ArcRecord(
             float(horizon.ticks[at]), float(horizon.ticks[last]), best.degree,

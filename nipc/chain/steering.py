@@ -16,7 +16,12 @@ from nipc.problem.study import ChainSettings
 USELESS = 0.5  # a held-out error of half the spread: the arc's polynomial says nothing
 NO_GAIN = 0.7  # a step that leaves more of the error than this was not worth its runs
 EASY = 0.2  # of the tolerance: an arc this good may be longer
-DEARER = 1.25  # a longer arc may have so many times the terms
+DEARER = (
+    1.25  # a longer arc may have so many times the terms, and is kept at so many times the runs
+)
+CHEAPER = 0.85  # a shorter arc is kept when it takes no more than this of the runs
+COSTLY = 3  # a degree from which a shorter arc is tried
+BRIEF = TICKS // 4  # but none shorter than this: every run has its start to pay
 LONGEST = 8  # cells
 MANY_TERMS = 600  # beyond, a shorter arc is cheaper than a higher degree
 
@@ -47,6 +52,21 @@ class Tried:
 
 
 @dataclass(frozen=True)
+class Done:
+    """An accepted arc: degree, error over the tolerance, the same at one degree less, ticks, runs.
+
+    `dearer`: how many times the linear terms an arc of twice the length would have.
+    """
+
+    degree: int
+    ratio: float
+    lower: float
+    length: int
+    runs: int
+    dearer: float
+
+
+@dataclass(frozen=True)
 class Steering:
     """Length (ticks) and degree with which the next arc is tried first."""
 
@@ -55,6 +75,7 @@ class Steering:
     degree: int
     length: int = TICKS
     rested: bool = True
+    known: tuple[tuple[int, int], ...] = ()  # (length, runs) of the last arcs of other lengths
 
     @classmethod
     def of(cls, settings: ChainSettings, tolerance: float) -> Steering:
@@ -123,17 +144,29 @@ class Steering:
         degree = self.degree if self.fixed_degree else max(1, self.degree - 1)
         return replace(self, length=half, degree=degree, rested=False)
 
-    def after(
-        self, degree: int, ratio: float, lower: float, length: int, dearer: float
-    ) -> tuple[Steering, str]:
-        """For the arc that follows one accepted with this degree, length and error ratios.
-
-        `lower` is the error ratio at one degree less; `dearer` how many times the terms an arc of
-        twice the length would have. An arc just halved is followed by one of the same length.
-        """
-        easier = not self.fixed_degree and degree > 1 and lower <= 0.5
-        following = replace(self, degree=degree - easier, length=length, rested=True)
-        may = self.adaptive and self.rested and not easier and length < LONGEST * TICKS
-        if may and ratio <= EASY and (length < TICKS or dearer <= DEARER):
-            return replace(following, length=2 * length), "easy: the next may be twice as long"
+    def after(self, done: Done) -> tuple[Steering, str]:
+        """For the arc that follows an accepted one. One just halved is followed by its like."""
+        easier = not self.fixed_degree and done.degree > 1 and done.lower <= 0.5
+        known = dict(self.known) | {done.length: done.runs}
+        following = replace(
+            self, degree=done.degree - easier, length=done.length, rested=True,
+            known=tuple(known.items()),
+        )  # fmt: skip
+        if not (self.adaptive and self.rested) or easier:
+            return following, ""
+        half, double = done.length // 2, 2 * done.length
+        if half >= BRIEF and done.length % 2 == 0:
+            if half not in known and done.degree >= COSTLY and not self.fixed_degree:
+                words = f"next is half as long: degree {done.degree} is dear"
+                return replace(following, length=half, degree=done.degree - 1), words
+            if known.get(half, done.runs) <= CHEAPER * done.runs:
+                return replace(
+                    following, length=half
+                ), "next is half as long, which took fewer runs"
+        if done.length < LONGEST * TICKS:
+            longer = done.length < TICKS or done.dearer <= DEARER
+            if double not in known and done.ratio <= EASY and longer:
+                return replace(following, length=double), "easy: next is twice as long"
+            if known.get(double, math.inf) <= DEARER * done.runs:
+                return replace(following, length=double), "next is twice as long, at similar cost"
         return following, ""

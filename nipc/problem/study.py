@@ -221,11 +221,14 @@ class CheckSettings(_Section):
     """Held-out direct runs of the whole horizon.
 
     With `richness` 2 or more their noise has so many times the terms that the expansions see, and
-    the path error also holds what the noise bases lose inside an arc.
+    the path error also holds what the noise bases lose inside an arc. The distribution counts as
+    right while mean and standard deviation are shown to be off by no more than `distribution` of
+    the spread.
     """
 
     runs: Annotated[int, Field(ge=2)] = 8
     richness: Annotated[int, Field(ge=1, le=4)] = 1
+    distribution: Share = 0.05
 
 
 class RunSettings(_Section):

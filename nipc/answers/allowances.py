@@ -16,7 +16,7 @@ from nipc.answers.confinement import Confinement, ConfinementAccumulator
 from nipc.answers.ensemble import boxes_of
 from nipc.answers.intervals import normal_factor
 from nipc.answers.scaled import Scaled
-from nipc.answers.whatif import LOST, path_error
+from nipc.answers.whatif import LOOK, LOST, path_error
 from nipc.answers.wording import estimate, number
 from nipc.arrays import FloatArray
 from nipc.errors import InputError
@@ -27,7 +27,6 @@ LIMIT = 8.0
 PRECISION = 5e-3
 GRID = (0.25, 0.5, 1.0, 2.0)
 PAIRS, PAIR_MEMBERS = 3, 2048
-LOOK = 1024  # members that tell how far outside a scale leads
 
 
 @dataclass(frozen=True)

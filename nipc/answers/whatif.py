@@ -2,7 +2,8 @@
 
 Intervals hold the ensemble's chance and the error of paths. That error was measured with every
 scale at 1; it is taken to grow as the largest scale, and beyond 1 as its square, which is how the
-first order that a linear expansion leaves out grows.
+first order that a linear expansion leaves out grows. Members that scales beyond one take outside
+what the runs cover are held to be off by half of the spread each.
 """
 
 from __future__ import annotations
@@ -37,10 +38,27 @@ MARKED, LOST = 0.02, 0.5
 Ends = tuple[float, float]
 
 
-def path_error(scaled: Scaled, scales: FloatArray) -> FloatArray:
-    """(T, Q) error of paths at these scales; zero where it was not measured."""
+LOOK = 1024  # members that tell how many of them scales take outside
+OFF = 0.5  # of the spread, by which a member outside what the runs cover is held to be off
+
+
+def grown_error(scaled: Scaled, scales: FloatArray) -> FloatArray:
+    """(T, Q) error of paths within what the runs cover; zero where it was not measured."""
     largest = float(np.max(scales, initial=0.0))
     return np.nan_to_num(scaled.path_error) * largest * max(1.0, largest)
+
+
+def path_error(scaled: Scaled, scales: FloatArray) -> FloatArray:
+    """(T, Q) root-mean-square error of all members' paths, those far outside among them."""
+    error = grown_error(scaled, scales)
+    if np.max(scales, initial=0.0) <= 1.0:
+        return error
+    some = scaled.members(scales, 0, min(LOOK, scaled.study.ensemble.members))
+    known = np.isfinite(some)
+    count = np.maximum(known.sum(axis=0), 1)
+    away = np.where(known, some - np.where(known, some, 0.0).sum(axis=0) / count, 0.0)
+    std = np.sqrt((away**2).sum(axis=0) / count)
+    return np.asarray(np.hypot(error, OFF * math.sqrt(scaled.far) * std))
 
 
 def moved(study: Study, boxes: Mapping[str, Ends]) -> Study:
@@ -128,7 +146,7 @@ def _add_moments(
     unit = "as the quantity"
     ends = Interval(mean_ends.low - shift, mean_ends.high + shift)
     table.over_time("mean", mean, unit, "mean", ends)
-    trust = _trusted(scaled, error, std)
+    trust = _trusted(scaled, grown_error(scaled, scales), std)
     words = "time up to which path errors, grown with the scales, keep the tolerance"
     table.by_quantity("trust_horizon", trust, scaled.study.clock.unit, words)
     upper = np.sqrt(std_ends.high**2 + error**2) + shift

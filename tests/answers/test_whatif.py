@@ -215,3 +215,24 @@ def test_members_that_end_have_left_at_any_scale(tmp_path):
     assert (
         less["survival_probability"][0, -1] > found["survival_probability"][0, -1] + 0.05
     ).item()
+
+
+def test_scaling_up_is_marked_and_its_intervals_hold_a_fresh_study(chained, tmp_path):
+    """Twice and three times the noise: the potential ends near, and members pass outside."""
+    scaled = chained.scaled
+    told = {}
+    for factor in (2.0, 3.0):
+        text = SPRING.replace("intensity = 0.02", f"intensity = {0.02 * factor}")
+        fresh = run(spring(tmp_path / f"{factor}", text), backend="inline").dataset
+        scales = scales_of(scaled.groups, {"force": factor, "draught": factor})
+        found = what_if(scaled, scales, shares=False)
+        std = fresh["std"].values
+        assert (found["std_low"].values <= std * (1 + 1e-9)).all()
+        assert (found["std_high"].values >= std * (1 - 1e-9)).all()
+        inside = fresh["inside_probability"].values
+        assert (found["inside_probability_low"].values <= inside).all()
+        assert (found["inside_probability_high"].values >= inside).all()
+        told[factor] = found.attrs["far_share"], remarks(found)
+    assert 0.02 < told[2.0][0] < told[3.0][0]
+    assert all("outside what the runs cover" in said[0] for _, said in told.values())
+    assert remarks(what_if(scaled, np.ones(3), shares=False)) == []

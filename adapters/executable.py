@@ -71,7 +71,9 @@ class ExecutableSettings(AdapterSettings):
     keep_failed: bool = False
     depends: tuple[str, ...] = ()
 
-    @field_validator("output", mode="before")
+    @field_validator(
+        "output", mode="before", json_schema_input_type=OutputTable | tuple[OutputTable, ...]
+    )
     @classmethod
     def _one_or_many(cls, value: Any) -> Any:
         return (value,) if isinstance(value, dict) else value

@@ -16,6 +16,7 @@ from nipc.commands.plan import plan
 from nipc.commands.probe import probe
 from nipc.commands.report import report
 from nipc.commands.run import run
+from nipc.commands.schema import schema
 from nipc.commands.status import status
 from nipc.commands.sweep import sweep
 from nipc.commands.whatif import whatif
@@ -50,7 +51,8 @@ def _options(
 
 # in the order in which they are used; their names are their functions' unless told
 for _command in (
-    new, check, plan, probe, run, status, report, whatif, sweep, allowance
+    new, check, plan, probe, run, status, report, whatif, sweep, allowance,
+    schema,
 ):  # fmt: skip
     app.command()(_command)
 

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import json
 from enum import StrEnum
 from pathlib import Path
 
 from nipc.errors import InputError
 
 STUDY = """\
+#:schema study.schema.json
 # A study of nipc. Everything here is invented: change it into your own.
 title = "Oscillator under a noisy force"
 seed = 1                       # the same study gives the same numbers
@@ -150,7 +152,11 @@ def write_starter(folder: Path, flavour: Flavour) -> Path:
     """
     if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
         raise InputError(f"{folder} is there already and not empty; name a new folder")
+    from nipc.study_schema import study_schema
+
     settings, files = FLAVOURS[flavour]
+    # what editors complete the study from
+    files = files | {"study.schema.json": json.dumps(study_schema(), indent=2) + "\n"}
     study = folder / "study.toml"
     try:
         folder.mkdir(parents=True, exist_ok=True)

@@ -114,3 +114,29 @@ def test_coloured_noise_drives_by_what_is_left_of_its_spectrum():
     assert 0.3 < exact < 0.98
     # to the ends of a kernel that is cut at 20 s = 4 tau, and chance
     assert float(bands[:k].sum()) == pytest.approx(exact, abs=0.02)
+
+
+def test_dipole_noise_drives_the_action_at_the_tune():
+    """Betatron motion of tune Q under noisy dipoles: dJ/dt = p xi, p = -sqrt(2 J) sin(2 pi Q t).
+
+    Only the noise about the tune (modulo whole turns) changes the action: common practice in rings,
+    no source. The line is a cosine of Q T = 20.5 turns, of which int sinc^2 over +-2.05 is within a
+    tenth.
+    """
+    tune, turns = 0.2052, 100.0
+    turn = 2 * np.pi * tune
+    rates = linear(np.array([[0.0, turn], [-turn, 0.0]]), np.array([[0.0], [1.0]]))
+    settings = study(
+        20, noise=[{"name": "dipole", "intensity": 1e-3}],
+        clock={"end": turns, "outputs": 41, "unit": "turn"},
+        state=[{"name": "x", "mean": 0.12, "std": 0.002}, {"name": "p", "std": 0.002}],
+        quantity=[{"name": "action", "expression": "(x**2 + p**2) / 2"}],
+    )  # fmt: skip
+    data = solved(settings, Stepper(rates, 0.2))
+    at = {"source": "dipole", "quantity": "action"}
+    assert float(data["resonance_frequency"].sel(at)) == pytest.approx(tune, abs=0.001)
+    inside = np.linspace(-0.1 * tune * turns, 0.1 * tune * turns, 4001)
+    exact = np.sinc(inside) ** 2 @ np.full(4001, inside[1] - inside[0])
+    assert float(data["resonance_share"].sel(at)) == pytest.approx(exact, abs=0.01)
+    # noise: (1e-3 x 0.12)^2 100 / 2 = 7.2e-7; start: (0.12 x 0.002)^2 = 5.8e-8
+    assert float(data["driver_first"].sel(at)[-1]) == pytest.approx(7.2 / 7.78, abs=0.03)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+from collections.abc import Sequence
 from pathlib import Path
 
 import numpy as np
@@ -13,6 +14,7 @@ from rich.text import Text
 
 from nipc.answers.result import DATA, SUMMARY, Result
 from nipc.chain.plan import Plan
+from nipc.chain.records import ArcRecord, alike
 from nipc.pilot import Pilot
 from nipc.problem.study import NoiseSettings, QuantitySettings, Study
 from nipc.report import reading
@@ -160,6 +162,22 @@ def _losses(plan: Plan) -> Table:
     table.caption = "* chosen; response: the velocity of an oscillator of the study's period"
     table.caption_justify = "left"
     return table
+
+
+def show_arcs(out: Console, records: Sequence[ArcRecord], unit: str) -> None:
+    """The arcs built so far; neighbours that differ only in their errors share a row."""
+    table = Table(title="Arcs", title_justify="left", box=None, header_style="bold")
+    for head in (f"t / {unit}", "arcs", "degree", "terms", "runs", "error"):
+        table.add_column(head, justify="left" if head.startswith("t /") else "right")
+    table.add_column("why", overflow="fold")
+    for group in alike(records):
+        first, last = group[0], group[-1]
+        worst = max(record.error for record in group)
+        table.add_row(
+            f"{first.start:.5g} to {last.end:.5g}", str(len(group)), str(first.degree),
+            str(first.terms), str(first.runs), f"{worst:.1e}", Text(first.note),
+        )  # fmt: skip
+    out.print(table)
 
 
 def show_probe(out: Console, report: ProbeReport) -> None:

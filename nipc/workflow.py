@@ -25,8 +25,8 @@ if TYPE_CHECKING:
     from nipc.answers.chained import ChainAnswers
     from nipc.answers.result import Result
     from nipc.answers.table import ResultTable
-    from nipc.chain.chain import ArcRecord
     from nipc.chain.horizon import Horizon
+    from nipc.chain.records import ArcRecord
     from nipc.problem.germ import Germ
     from nipc.runs.engine import Engine
     from nipc.runs.outcomes import Outcomes
@@ -351,13 +351,19 @@ def solved_chain(
     from nipc.chain.chain import ChainBuilder
 
     horizon = build_horizon(study, engine)
-    builder = ChainBuilder(horizon, _teller(study, engine.progress))
+    builder = ChainBuilder(horizon, _teller(study, engine.ledger.folder, engine.progress))
     chain = builder.build()
     answers = ChainAnswers(horizon, chain, quantities)
     notes = []
     for _ in range(study.chain.rounds):
         error = answers.path_error()
         if error <= study.tolerance or chain.stopped or study.chain.state_degree != "auto":
+            break
+        if study.budget is not None and 1.5 * horizon.cost > study.budget:
+            notes.append(
+                f"The held-out paths were off by {error:.1%} of the spread; the budget leaves too "
+                "little to do the coarser arcs again."
+            )
             break
         # what the arcs' errors add up to is known only now: tighten those that are too coarse
         builder = builder.tightened(max(0.2, 0.6 * study.tolerance / error))
@@ -370,11 +376,13 @@ def solved_chain(
     return answers, notes
 
 
-def _teller(study: Study, progress: Progress) -> Callable[[list[ArcRecord]], None]:
-    """Tells the progress of every arc as it is done."""
+def _teller(study: Study, place: Path, progress: Progress) -> Callable[[list[ArcRecord]], None]:
+    """Tells the progress of every arc as it is done, and `nipc status` in another terminal."""
+    from nipc.chain.records import write_records
     from nipc.runs.journey import ArcTold
 
     def tell(records: list[ArcRecord]) -> None:
+        write_records(place, records)
         last, clock = records[-1], study.clock
         progress.arc(
             ArcTold(

@@ -12,30 +12,12 @@ from nipc.chain.arc import ArcMap
 from nipc.chain.arc_fit import ArcFit, Trial
 from nipc.chain.direct import Continued, continue_directly
 from nipc.chain.horizon import Horizon, Members
+from nipc.chain.records import ArcRecord
 from nipc.chain.steering import Done, Steering, Step, Tried
 from nipc.chain.ticks import TICKS
 
 POOL = 16384  # members from which designs are picked: the more, the fewer lie outside them
 KEPT_FOR_DIRECT = 0.3  # of a budget that the arcs would overdraw, for going on by direct runs
-
-
-@dataclass(frozen=True)
-class ArcRecord:
-    """Why an arc is as it is.
-
-    `error` is held out, at the arc's end, over the spread there; `runs` are the design's, `failed`
-    of them gave nothing; `direct` members of the pool were run directly.
-    """
-
-    start: float
-    end: float
-    degree: int
-    terms: int
-    runs: int
-    error: float
-    note: str
-    failed: int = 0
-    direct: int = 0
 
 
 @dataclass(frozen=True, eq=False)

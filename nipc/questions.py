@@ -233,6 +233,7 @@ def _keep(study: Study, folder: Path, data: xr.Dataset) -> bool:
         if variable.dims == ("source", "quantity"):
             attributes = variable.attrs | {k: data.attrs[k] for k in ("target", "event")}
             dataset[name] = (variable.dims, variable.values, attributes)
+    dataset.coords["source_unit"] = ("source", data["source_unit"].values)
     dataset.attrs["findings"] = json.dumps(findings(dataset))
     Result(dataset, folder).save()
     return True

@@ -9,7 +9,16 @@ import xarray as xr
 
 from nipc.arrays import FloatArray
 from nipc.report import reading
-from nipc.report.numbers import amount, beside, interval, number, percent, probability, squared
+from nipc.report.numbers import (
+    amount,
+    beside,
+    interval,
+    number,
+    percent,
+    pretty_unit,
+    probability,
+    squared,
+)
 
 MOMENTS = 9
 
@@ -175,14 +184,34 @@ def allowances(dataset: xr.Dataset) -> Table | None:
         return None
     rows = []
     for index, source in enumerate(reading.sources(dataset)):
-        cells = []
-        for quantity in boxed:
-            part = dataset["allowance"].transpose("source", ...).isel(source=index)
-            value = float(part.isel(quantity=reading.position(dataset, quantity)))
-            cells.append("no limit found" if np.isinf(value) else number(value, 3))
+        part = dataset.isel(source=index)
+        unit = str(part["source_unit"].item()) if "source_unit" in part.coords else ""
+        cells = [_allowed(part, reading.position(dataset, q), pretty_unit(unit)) for q in boxed]
         rows.append((source, *cells))
-    caption = "Largest intensity that keeps the box (of start and parameters: scale), others fixed"
+    asked = dataset["allowance"].attrs
+    goal = "that keeps the box"
+    if "target" in asked:
+        event = "in the box at the end"
+        if asked.get("event") == "survival":
+            event = "in the box all the time"
+        goal = f"with P({event}) at {number(float(asked['target']))} or above"
+    caption = f"Largest intensity {goal} (of start and parameters: scale), others fixed"
     return Table(caption, ("source", *(_marked(dataset, q) for q in boxed)), tuple(rows))
+
+
+def _allowed(part: xr.Dataset, quantity: int, unit: str) -> str:
+    """A source's allowance for a quantity's box."""
+    ends = [
+        float(part[name].isel(quantity=quantity)) if name in part else np.nan
+        for name in ("allowance", "allowance_low", "allowance_high", "allowance_limit")
+    ]
+    value, low, high, limit = ends
+    if np.isinf(value):
+        return "no limit found" if np.isnan(limit) else f"more than × {number(limit, 2)}"
+    if np.isnan(value):
+        return "–" if np.isnan(limit) else "not by it alone"
+    known = f" ({number(low, 3)} to {number(high, 3)})" if np.isfinite(low + high) else ""
+    return f"{number(value, 3)}{known} {unit}".rstrip()
 
 
 def arcs(dataset: xr.Dataset) -> Table | None:

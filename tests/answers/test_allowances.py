@@ -13,6 +13,7 @@ import nipc
 from nipc.answers.allowances import allowances, confirm, remarks
 from nipc.errors import InputError
 from nipc.questions import find_allowances, reopened
+from nipc.report import tables
 from nipc.workflow import run
 
 
@@ -71,6 +72,11 @@ def test_direct_runs_confirm_and_the_page_learns_of_it(study):
     scale = float(result["allowance_scale"].sel(source="push", quantity="x"))
     assert scale == float(data["allowance_scale"].sel(source="push", quantity="x"))
     assert any("To keep P(inside) of x at 0.9" in s for s in json.loads(result.attrs["findings"]))
+    table = tables.allowances(result)
+    assert "with P(in the box at the end) at 0.9 or above" in table.caption
+    push = next(row for row in table.rows if row[0] == "push")[1]
+    assert push.startswith(f"{0.25 * scale:.3g} (")
+    assert push.endswith("m/s^0.5")
     with reopened(study) as again:
         # the ledger has them now: asked again, nothing is run
         again_confirmed = confirm(again.scaled, data, 6)

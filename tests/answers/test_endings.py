@@ -77,6 +77,9 @@ def test_lost_on_either_side_is_left():
     notes = " ".join(json.loads(data.attrs["notes"]))
     assert "of 400 runs of the design ended early for a physical reason" in notes
     assert "motion that goes on" in notes
+    said = [f for f in json.loads(data.attrs["findings"]) if f.startswith("The motion ends early")]
+    assert len(said) == 1
+    assert "trust horizon" in said[0]
     # whether one is lost is decided by noise and start, not by chance: shares are near to whole
     total = data["exit_driver_total"].sel(quantity="x")
     assert float(total.sum()) > 0.9

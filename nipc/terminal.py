@@ -16,7 +16,7 @@ from nipc.answers.result import DATA, SUMMARY, Result
 from nipc.chain.plan import Plan
 from nipc.chain.records import ArcRecord, alike
 from nipc.pilot import Pilot
-from nipc.problem.study import NoiseSettings, QuantitySettings, Study
+from nipc.problem.study import Study
 from nipc.report import reading
 from nipc.report.headline import rows, split
 from nipc.report.numbers import THIN, amount, percent, probability, with_spread
@@ -37,43 +37,10 @@ def console() -> Console:
 def show_study(out: Console, study: Study) -> None:
     """What a study that has passed its checks is made of."""
     out.print(Text(study.title, style="bold"))
-    clock = study.clock
     table = Table.grid(padding=(0, 2))
-    for head, lines in (
-        ("propagator", [f"adapter {study.propagator.adapter}"]),
-        ("clock", [f"{clock.start:g} to {clock.end:g} {clock.unit}, {clock.times.size} outputs"]),
-        ("state", _state(study)),
-        ("parameters", list(study.parameter_names) or ["none"]),
-        ("noise", [_source(noise) for noise in study.noise] or ["none"]),
-        ("quantities", [_quantity(quantity) for quantity in study.quantity]),
-        ("arcs", [str(study.chain.arcs)]),
-        ("chart", ["none" if study.chart is None else study.chart.name]),
-    ):
+    for head, lines in study.summary():
         table.add_row(head, Text("\n".join(lines)))
     out.print(table)
-
-
-def _state(study: Study) -> list[str]:
-    law = study.start_law()
-    deviation = np.linalg.norm(law.factor, axis=1)
-    return [
-        f"{c.name} = {c.mean:g}" + (f" ± {s:g}" if s else "") + f" {c.unit}".rstrip()
-        for c, s in zip(study.state, deviation, strict=True)
-    ]
-
-
-def _source(noise: NoiseSettings) -> str:
-    memory = "" if noise.time_constant is None else f", time constant {noise.time_constant:g}"
-    strength = f"{noise.intensity:g} {noise.unit}".strip()
-    return f"{noise.name}: {noise.kind}{memory}, {strength}, {noise.basis} basis"
-
-
-def _quantity(quantity: QuantitySettings) -> str:
-    unit = f" {quantity.unit}" if quantity.unit else ""
-    if quantity.box is None:
-        return quantity.name + (f" ({quantity.unit})" if unit else "")
-    low, high = quantity.box
-    return f"{quantity.name}, box {low:g} to {high:g}{unit}"
 
 
 def show_plan(out: Console, plan: Plan) -> None:

@@ -8,7 +8,7 @@ from pathlib import Path
 import pytest
 
 ROOT = Path(__file__).parents[1]
-FREE = {"nipc.arrays", "nipc.errors"}
+FREE = {"nipc.arrays", "nipc.errors", "nipc.markup"}
 BELOW = {
     "problem": set(),
     "expansion": set(),

@@ -76,7 +76,9 @@ class Result:
         os.replace(half, self.folder / SUMMARY)
 
     def _repr_html_(self) -> str:
-        return str(self.dataset._repr_html_())
+        from nipc.answers.showing import shown
+
+        return shown(self.dataset, self.findings)
 
 
 def load_result(folder: str | Path) -> Result:

@@ -6,6 +6,7 @@ import math
 from dataclasses import asdict, dataclass
 from typing import Any
 
+from nipc import markup
 from nipc.problem.germ import Germ
 from nipc.problem.noise import BASES, Legendre
 from nipc.problem.study import Study
@@ -51,6 +52,34 @@ class Plan:
     def as_dict(self) -> dict[str, Any]:
         """Plain values, for JSON."""
         return asdict(self)
+
+    def _repr_html_(self) -> str:
+        # a chain's degrees are known only as its arcs are built
+        least = "at least " if isinstance(self.arcs, int) and self.arcs > 1 else ""
+        rows = [
+            ("arcs", self.arcs),
+            ("terms of an expansion", f"{least}{self.terms}"),
+            (f"design: {self.design}", f"{least}{self.design_runs}"),
+            ("held-out check", f"{least}{self.check_runs}"),
+            ("runs together", f"{least}{self.total_runs}"),
+            ("budget", "none" if self.budget is None else f"{self.budget:g}"),
+        ]
+        lost = [
+            (
+                loss.source, loss.basis + " (chosen)" * loss.chosen, loss.terms,
+                f"{loss.path_lost:.1e}", f"{loss.end_lost:.1e}",
+                "-" if loss.response_lost is None else f"{loss.response_lost:.1e}",
+            )
+            for loss in self.losses
+        ]  # fmt: skip
+        heads = ("source", "basis", "terms", "path", "end value", "response")
+        return markup.headed(
+            self.title,
+            markup.table(self.groups, ("driver", "kind", "germ variables of an arc")),
+            markup.table(rows),
+            markup.folded("Share of variance that a noise basis loses", markup.table(lost, heads)),
+            *map(markup.paragraph, self.notes),
+        )
 
 
 def noise_terms(study: Study, length: float) -> tuple[int, ...]:

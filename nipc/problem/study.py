@@ -8,6 +8,7 @@ from typing import Annotated, Any, Literal
 import numpy as np
 from pydantic import BaseModel, ConfigDict, Field, PrivateAttr, model_validator
 
+from nipc import markup
 from nipc.arrays import FloatArray
 from nipc.problem.charts import ChartSettings
 from nipc.problem.noise import BASES, NoiseBasis, Source
@@ -131,6 +132,11 @@ class NoiseSettings(_Section):
     def expanded_on(self, terms: int) -> NoiseBasis:
         return BASES[self.basis](terms)
 
+    def __str__(self) -> str:
+        memory = "" if self.time_constant is None else f", time constant {self.time_constant:g}"
+        strength = f"{self.intensity:g} {self.unit}".strip()
+        return f"{self.name}: {self.kind}{memory}, {strength}, {self.basis} basis"
+
 
 class QuantitySettings(_Section):
     """A scalar function of time, state and parameters, and the box it should stay in."""
@@ -156,6 +162,11 @@ class QuantitySettings(_Section):
                 "below its high end (inf and -inf are allowed)"
             )
         return self
+
+    def __str__(self) -> str:
+        if self.box is None:
+            return self.name + (f" ({self.unit})" if self.unit else "")
+        return f"{self.name}, box {self.box[0]:g} to {self.box[1]:g} {self.unit}".rstrip()
 
 
 class JointBox(_Section):
@@ -284,6 +295,30 @@ class Study(_Section):
             if found:
                 raise StudyError(found)
         return self
+
+    def _repr_html_(self) -> str:
+        rows = [(head, "\n".join(lines)) for head, lines in self.summary()]
+        return markup.headed(self.title, markup.table(rows))
+
+    def summary(self) -> list[tuple[str, list[str]]]:
+        """What the study is made of: heads and their lines, in the order of a study file."""
+        clock, law = self.clock, self.start_law()
+        spread = np.linalg.norm(law.factor, axis=1)
+        start = [
+            f"{c.name} = {c.mean:g}" + (f" ± {s:g}" if s else "") + f" {c.unit}".rstrip()
+            for c, s in zip(self.state, spread, strict=True)
+        ]
+        span = f"{clock.start:g} to {clock.end:g} {clock.unit}, {clock.times.size} outputs"
+        return [
+            ("propagator", [f"adapter {self.propagator.adapter}"]),
+            ("clock", [span]),
+            ("state", start),
+            ("parameters", list(self.parameter_names) or ["none"]),
+            ("noise", [str(noise) for noise in self.noise] or ["none"]),
+            ("quantities", [str(quantity) for quantity in self.quantity]),
+            ("arcs", [str(self.chain.arcs)]),
+            ("chart", ["none" if self.chart is None else self.chart.name]),
+        ]
 
     @property
     def folder(self) -> Path:

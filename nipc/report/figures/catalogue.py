@@ -117,6 +117,8 @@ def _fills(dataset: xr.Dataset, name: str, quantity: str | None) -> bool:
         if name == "chain":
             there = all(reading.has(dataset, f"arc_{what}") for what in ("start", "end", "runs"))
             return there and dataset.sizes["arc"] > 1
+        if name == "coefficient_decay":  # of degree one alone nothing falls off
+            return reading.has(dataset, "degree_norm") and dataset.sizes["degree"] > 1
         if name == "failures":
             return bool(reading.listed(dataset, "failures"))
         return any(reading.has(dataset, needed) for needed in NEEDS[name])

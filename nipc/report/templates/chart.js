@@ -33,7 +33,9 @@ nipc.chart = (holder, { height = 190, label }) => {
         definition);
       for (const v of ticks(x[0], x[1], 6)) {
         nipc.svg("path", { d: `M${scaleX(v)} ${top}V${bottom}`, stroke: "var(--faint)" }, drawing);
-        text(nipc.number(v, 6), { x: scaleX(v), y: bottom + 15, "text-anchor": "middle" }, drawing);
+        const label = nipc.number(v, 6), over = scaleX(v) + 3.4 * label.length > width;
+        text(label, { x: over ? width : scaleX(v), y: bottom + 15,
+          "text-anchor": over ? "end" : "middle" }, drawing);
       }
       const span = y[1] - y[0];
       const digits = Math.min(Math.max(

@@ -15,7 +15,7 @@ from nipc.answers.intervals import Interval, normal_factor, widen
 from nipc.answers.separation import add_exponents, arc_logs, worst_error
 from nipc.answers.spreading import spread_rate
 from nipc.answers.table import ResultTable
-from nipc.arrays import FloatArray
+from nipc.arrays import BoolArray, FloatArray
 from nipc.chain.agreement import Agreement
 from nipc.chain.check import HeldOut
 from nipc.chain.single_arc import SingleArc, generator
@@ -124,6 +124,17 @@ class Members:
             low, high = (table.variables[f"{variable}_{end}"] for end in ("low", "high"))
             wide = widen(Interval(low[1], high[1]), middle, error)
             low[1][...], high[1][...] = np.clip(wide.low, 0.0, 1.0), np.clip(wide.high, 0.0, 1.0)
+            for values in (middle, low[1], high[1]):
+                values[:, self._beyond] = np.nan
+        if self._beyond.any() and "exit_time_quantile" in table.variables:
+            for end in ("", "_low", "_high"):
+                times = table.variables[f"exit_time_quantile{end}"][1]
+                times[np.isfinite(times) & (times >= self.arc.times[self._beyond][0])] = np.nan
+
+    @property
+    def _beyond(self) -> BoolArray:
+        """(T,) output times at which too few runs go on for an expansion."""
+        return np.isnan(self.arc.expansion.coefficients).any(axis=(0, 2))
 
 
 def _parts(members: int) -> list[int]:

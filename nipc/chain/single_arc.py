@@ -267,13 +267,33 @@ def _fit(
     basis = design.basis
     coefficients = np.zeros((basis.n_terms, flat.shape[1]))
     error, loo = np.full(flat.shape[1], np.nan), np.full(flat.shape[1], np.nan)
+    unfit: list[int] = []
     for g, pattern in enumerate(patterns):
         columns = np.flatnonzero(group.ravel() == g)
-        fit, part = _fit_group(study, design, pattern, flat[np.ix_(pattern, columns)])
+        try:
+            fit, part = _fit_group(study, design, pattern, flat[np.ix_(pattern, columns)])
+        except FitError:
+            # once most runs have ended, nothing but that can be said
+            unfit += list(columns // shape[-1])
+            coefficients[:, columns] = np.nan
+            if not study.clock.times[min(unfit)] > study.clock.times[0] or not _ended(known):
+                raise
+            continue
         coefficients[np.ix_(part, columns)] = fit.coefficients
         error[columns], loo[columns] = fit.relative_error, fit.loo
+    if unfit:
+        since = float(study.clock.times[min(unfit)])
+        notes.append(
+            f"From t = {since:g} {study.clock.unit} on too few runs of the design go on to be"
+            " expanded: of then it is only told how many have ended."
+        )
     expansion = Expansion(basis, coefficients.reshape(-1, *shape), loo.reshape(shape))
     return expansion, error.reshape(shape), tuple(notes)
+
+
+def _ended(known: BoolArray) -> bool:
+    """Whether a run has its first outputs and not its last."""
+    return bool(np.any(known[:, 0] & ~known[:, -1]))
 
 
 def _fit_group(

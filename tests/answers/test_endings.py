@@ -143,3 +143,21 @@ def test_a_chain_says_that_it_does_not_count_them():
         update={"members": 2000})})  # fmt: skip
     data = solved(settings, free(lambda x: x[:, 0] > 1.2))
     assert "overstated" in data.attrs["notes"]
+
+
+def test_once_most_have_ended_only_that_is_told():
+    """60 runs, nine in ten of which end: no expansion late, but a share of endings to the end."""
+    data = solved(
+        study([{"name": "x", "box": [-0.6, 0.6]}], runs=60),
+        free(lambda x: np.abs(x[:, 0]) > 0.15),
+    )
+    x, _ = walked(100_000, 6)
+    exact = 1 - survived(np.abs(x) > 0.15)
+    assert exact[-1] > 0.85
+    low, high = (data[f"ended_probability_{end}"].values for end in ("low", "high"))
+    assert np.mean((low <= exact + 0.01) & (exact - 0.01 <= high)) > 0.9
+    late = np.isnan(data["survival_probability"].sel(quantity="x").values)
+    assert late[-1]
+    assert not late[:10].any()
+    assert float(data["trust_horizon"][0]) < END
+    assert "too few runs of the design go on" in data.attrs["notes"]

@@ -134,7 +134,7 @@ class Members:
     @property
     def _beyond(self) -> BoolArray:
         """(T,) output times at which too few runs go on for an expansion."""
-        return np.isnan(self.arc.expansion.coefficients).any(axis=(0, 2))
+        return np.asarray(np.isnan(self.arc.expansion.coefficients).any(axis=(0, 2)))
 
 
 def _parts(members: int) -> list[int]:

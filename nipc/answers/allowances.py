@@ -10,6 +10,7 @@ from typing import Literal
 import numpy as np
 import xarray as xr
 
+from nipc.answers import present
 from nipc.answers.allowance import Allowance, Probability, find_allowance
 from nipc.answers.boxes import Box, check_start, inside_indicator, survival_indicator
 from nipc.answers.confinement import Confinement, ConfinementAccumulator
@@ -322,8 +323,7 @@ def _paired(
     change = (held[0] - held[1])[known]
     shift = float(change.mean())
     chance = normal_factor() * float(change.std()) / np.sqrt(change.size)
-    with np.errstate(invalid="ignore"):
-        error = np.sqrt(np.nanmean((direct - expanded) ** 2, axis=0))
+    error = present.size(direct - expanded)
     alone = Probabilities(scaled, question).measured(scales, error)[0]
     ends = alone.value + shift, alone.low + shift - chance, alone.high + shift + chance
     together = Probability(*(float(np.clip(end, 0.0, 1.0)) for end in ends))

@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from nipc.answers import present
 from nipc.answers.scaled import Scaled
 from nipc.arrays import BoolArray, FloatArray
 from nipc.chain.history import BLOCK
@@ -32,22 +33,21 @@ class Orders:
 
     def mean(self, order: int) -> FloatArray:
         """(T, Q) mean of an order's contribution."""
-        return np.asarray(np.nanmean(self.parts[order], axis=0))
+        return present.mean(self.parts[order])
 
     def std(self, order: int) -> FloatArray:
         """(T, Q) standard deviation of an order's contribution."""
-        return np.asarray(np.nanstd(self.parts[order], axis=0))
+        return present.std(self.parts[order])
 
     def beyond_linear(self, scale: float = 1.0) -> FloatArray:
         """(T, Q) sqrt(E (orders >= 2)^2 / Var q) at a strength; NaN where nothing varies."""
         powers = scale ** np.arange(len(self.parts))[:, None, None, None]
         parts = powers * self.parts
         rest, whole = parts[2:].sum(axis=0), parts.sum(axis=0)
+        std = present.std(whole)
+        floor = 64.0 * np.finfo(float).eps * np.abs(present.mean(whole))
         with np.errstate(invalid="ignore", divide="ignore"):
-            size = np.sqrt(np.nanmean(rest**2, axis=0))
-            std = np.nanstd(whole, axis=0)
-            floor = 64.0 * np.finfo(float).eps * np.abs(np.nanmean(whole, axis=0))
-            return np.where(std > floor, size / std, np.nan)
+            return np.where(std > floor, present.size(rest) / std, np.nan)
 
 
 def orders_in(scaled: Scaled, moved: BoolArray, members: int = BLOCK) -> Orders:

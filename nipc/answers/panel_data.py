@@ -13,6 +13,7 @@ from itertools import combinations
 
 import numpy as np
 
+from nipc.answers import present
 from nipc.answers.scaled import Scaled
 from nipc.answers.table import ResultTable
 from nipc.arrays import FloatArray, IntArray
@@ -83,7 +84,8 @@ def add_panel(table: ResultTable, scaled: Scaled) -> None:
     table.add("panel_contribution", dims, contributions, "as the quantity", words)
     table.add("panel_power", ("panel_term", "source"), powers, "1", "powers of the scales")
     unit = table.study.clock.unit
-    table.add("panel_time", ("panel_time",), scaled.times[rows], unit, "time")
+    words = "time, at one phase of the period" if _in_phase(scaled, rows) else "time"
+    table.add("panel_time", ("panel_time",), scaled.times[rows], unit, words)
     table.add("panel_scale_low", ("source",), np.zeros(count), "1", "smallest scale offered")
     table.add("panel_scale_high", ("source",), high, "1", "largest scale offered")
     table.add(
@@ -121,6 +123,15 @@ def rows_of(times: FloatArray, period: float | None, most: int) -> IntArray:
             if FEWEST_TIMES <= rows.size <= most:
                 return rows
     return np.unique(np.linspace(0, count - 1, most).round().astype(int))
+
+
+def _in_phase(scaled: Scaled, rows: IntArray) -> bool:
+    """Whether times that were left out may hide an oscillation between those that were not."""
+    period = scaled.study.clock.period
+    if period is None or rows.size < 3:
+        return False
+    beats = np.diff(scaled.times[rows])[1:] / period
+    return bool(np.all(np.abs(beats - np.round(beats)) < 0.03 * beats) and np.all(beats > 0.9))
 
 
 def _members(scaled: Scaled, points: FloatArray, members: int, rows: IntArray) -> FloatArray:
@@ -179,8 +190,7 @@ def _error(
     weights = _monomials(scales[None], powers)[0]
     gap = np.einsum("t,tnkq->nkq", weights, terms - _centre(terms)) - (true - _centre(terms)[0])
     with np.errstate(invalid="ignore", divide="ignore"):
-        size = np.sqrt(np.nanmean(gap**2, axis=0))
-        spread = np.nanstd(true, axis=0)
+        size, spread = present.size(gap), present.std(true)
         # where a quantity hardly spreads yet, against what it spreads at most
         spread = np.maximum(spread, 1e-2 * np.nanmax(spread, axis=0, initial=0.0))
         share = np.where(spread > 0, size / spread, np.nan)
@@ -193,5 +203,5 @@ def _error(
 def _centre(terms: FloatArray) -> FloatArray:
     """The constant's mean over members, as a term of its own: (terms, 1, times, Q)."""
     centre = np.zeros((terms.shape[0], 1, *terms.shape[2:]))
-    centre[0, 0] = np.nanmean(terms[0], axis=0)
+    centre[0, 0] = present.mean(terms[0])
     return centre

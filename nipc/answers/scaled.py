@@ -14,6 +14,7 @@ from typing import Any
 
 import numpy as np
 
+from nipc.answers import present
 from nipc.answers.chained import ChainAnswers
 from nipc.answers.confinement import Confinement
 from nipc.answers.endings import endings_of
@@ -64,9 +65,7 @@ class Scaled(ABC):
     @property
     def check_error(self) -> FloatArray:
         """(T, Q) root-mean-square error of a member's path over the check's own spread."""
-        away = self.check.direct - np.nanmean(self.check.direct, axis=0)
-        with np.errstate(invalid="ignore", divide="ignore"):
-            return np.asarray(self.check.rms / np.sqrt(np.nanmean(away**2, axis=0)))
+        return replace(self.check, spread=present.std(self.check.direct)).error
 
     @property
     def polynomial_degree(self) -> int | None:

@@ -15,6 +15,7 @@ from dataclasses import dataclass
 import numpy as np
 import xarray as xr
 
+from nipc.answers import present
 from nipc.answers.boxes import check_start
 from nipc.answers.confinement import Confinement, ConfinementAccumulator
 from nipc.answers.drivers import PickFreezeAccumulator
@@ -54,10 +55,7 @@ def path_error(scaled: Scaled, scales: FloatArray) -> FloatArray:
     if np.max(scales, initial=0.0) <= 1.0:
         return error
     some = scaled.members(scales, 0, min(LOOK, scaled.study.ensemble.members))
-    known = np.isfinite(some)
-    count = np.maximum(known.sum(axis=0), 1)
-    away = np.where(known, some - np.where(known, some, 0.0).sum(axis=0) / count, 0.0)
-    std = np.sqrt((away**2).sum(axis=0) / count)
+    std = np.nan_to_num(present.std(some))
     return np.asarray(np.hypot(error, OFF * math.sqrt(scaled.far) * std))
 
 
@@ -156,7 +154,7 @@ def _add_moments(
 
 def _trusted(scaled: Scaled, error: FloatArray, std: FloatArray) -> FloatArray:
     """(Q,) last output time up to which the error keeps within the tolerance; NaN: none."""
-    rounding = 64.0 * np.finfo(float).eps * np.nanmax(np.abs(scaled.check.direct), axis=0)
+    rounding = 64.0 * np.finfo(float).eps * present.largest(scaled.check.direct)
     good = (error <= scaled.study.tolerance * std) | (error <= rounding)
     good &= np.isfinite(scaled.path_error)
     kept = np.logical_and.accumulate(good, axis=0).sum(axis=0)

@@ -180,7 +180,8 @@ def remarks(dataset: xr.Dataset) -> list[str]:
         return []
     members, order = panel.terms.shape[1], int(panel.powers.sum(axis=1).max())
     said = [
-        f"Answered in the browser from {members} members at {len(panel.times)} times, by their "
+        f"Answered in the browser from {members} members at {len(panel.times)} times"
+        f"{_phase(dataset)}, by their "
         f"contributions up to order {order} in the scales. A probability of one half is known to "
         f"± {number(1.96 * 0.5 / members**0.5, 2)} from so many members (95 %), the standard "
         f"deviation to ± {percent(1.96 / (2 * members) ** 0.5)}.",
@@ -206,6 +207,16 @@ def remarks(dataset: xr.Dataset) -> list[str]:
         "whole chain, and also gives survival."
     )
     return said
+
+
+def _phase(dataset: xr.Dataset) -> str:
+    """What is not drawn between the times, if anything."""
+    words = str(dataset["panel_time"].attrs.get("long_name", ""))
+    return (
+        " (all at one phase of the period, so its oscillation is not drawn)"
+        if ("phase" in words)
+        else ""
+    )
 
 
 def _at_most(share: float) -> str:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from nipc.answers import present
 from nipc.answers.orders import Orders, solved
 
 
@@ -32,3 +33,16 @@ def test_what_a_linear_picture_leaves_out():
 
 def test_without_spread_nothing_is_said():
     assert np.isnan(Orders(np.full((3, 10, 1, 1), 2.0)).beyond_linear()).all()
+
+
+def test_members_that_are_not_there_are_left_out():
+    """Of 1, 3 and a missing one: mean 2, spread 1, size sqrt 5; where none is there, NaN."""
+    values = np.array([[1.0, np.nan], [3.0, np.nan], [np.nan, np.nan]])
+    for found, expected in (
+        (present.mean(values), 2.0),
+        (present.std(values), 1.0),
+        (present.size(values), np.sqrt(5.0)),
+    ):
+        assert found[0] == pytest.approx(expected)
+        assert np.isnan(found[1])
+    assert present.largest(-values).tolist() == [3.0, 0.0]

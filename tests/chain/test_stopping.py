@@ -5,8 +5,10 @@ from __future__ import annotations
 import json
 
 import numpy as np
+import pytest
 
 import nipc
+from nipc.errors import InputError
 
 STUDY = """\
 title = "too long an arc for a chaotic motion"
@@ -70,5 +72,17 @@ def test_a_chain_that_stops_is_honest_and_has_a_page(tmp_path):
             assert np.isnan(data["inside_probability"].values[0][~known]).all()
             assert float(data["trust_horizon"].values[0]) <= reached[arcs]
         assert nipc.write_report(result).stat().st_size > 20_000
+        if reached[arcs] < 50.0:
+            _questions_are_honest_too(nipc.load_study(folder / "study.toml"), known)
     assert reached[2] < 50.0
     assert reached[2] <= reached[6]
+
+
+def _questions_are_honest_too(study, known):
+    found = nipc.whatif(study, {"force": 0.5}, shares=False)
+    assert np.isfinite(found["std"].values[0][known]).all()
+    assert np.isnan(found["std"].values[0][~known]).all()
+    swept = nipc.sweep(study, [0.5, 1.0], members=500)
+    assert np.isnan(swept["beyond_linear"].values[:, 0, ~known]).all()
+    with pytest.raises(InputError, match="the arcs stopped before the end of the horizon"):
+        nipc.allowance(study)

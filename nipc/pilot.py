@@ -15,6 +15,7 @@ from nipc.arrays import FloatArray
 from nipc.chain.plan import Plan, noise_terms
 
 if TYPE_CHECKING:
+    from nipc.problem.charts import Chart
     from nipc.problem.study import Study
     from nipc.runs.outcomes import Outcomes
     from nipc.runs.propagator import Batch, Propagator
@@ -126,20 +127,21 @@ class _Paths:
     even: FloatArray
 
 
-def _paths(study: Study, propagator: Propagator) -> _Paths | None:
+def pair_states(
+    study: Study, propagator: Propagator, pairs: int
+) -> tuple[FloatArray, FloatArray] | None:
     """The mean germ and pairs of opposite members over the whole horizon; None if any failed.
 
-    In some stretches of arcs, each with noise of its own: over the whole horizon at once the noise
-    would have many terms.
+    Returns the arcs' edges (T,) and states (1 + 2 pairs, T, d): the middle, the members, their
+    opposites. In some stretches of arcs, each with noise of its own: over the whole horizon at once
+    the noise would have many terms.
     """
     from nipc.chain.horizon import cell_count
     from nipc.chain.single_arc import generator
-    from nipc.problem.charts import build_chart
     from nipc.problem.germ import Germ
-    from nipc.problem.units import chart_time_scale
     from nipc.runs.propagator import Batch
 
-    clock, units = study.clock, tuple(c.unit for c in study.state)
+    clock = study.clock
     edges = np.linspace(clock.start, clock.end, cell_count(study) + 1)
     states: FloatArray | None = None
     parts: list[FloatArray] = []
@@ -149,7 +151,7 @@ def _paths(study: Study, propagator: Propagator) -> _Paths | None:
         times = edges[places[0] - 1 : places[-1] + 1]
         length = float(times[-1] - times[0])
         germ = Germ.of(study, noise_terms(study, length), float(times[0]), float(times[-1]))
-        some = germ.sample(generator(study, f"pilot {k}"), PAIRS)
+        some = germ.sample(generator(study, f"pilot {k}"), pairs)
         middle = _centre(germ.sample(generator(study, "pilot centre"), 400), germ.first_noise)
         nodes = np.vstack([middle, some, 2.0 * middle - some])
         if states is None:
@@ -161,14 +163,34 @@ def _paths(study: Study, propagator: Propagator) -> _Paths | None:
             return None
         parts.append(found.states[:, 1:])
         states = found.states[:, -1]
+    return edges, np.concatenate(parts, axis=1)
+
+
+def _paths(study: Study, propagator: Propagator) -> _Paths | None:
+    """The pairs' odd and even parts in the study's chart; None if any failed."""
+    from nipc.problem.charts import build_chart
+    from nipc.problem.units import chart_time_scale
+
+    found = pair_states(study, propagator, PAIRS)
+    if found is None:
+        return None
+    edges, states = found
+    units = tuple(c.unit for c in study.state)
     chart = build_chart(
-        study.chart, study.state_names, units, germ.start.mean, clock.start, study.folder
-    )
-    at = edges * chart_time_scale(clock.unit, list(units))
-    values = chart.from_state(np.concatenate(parts, axis=1), at)
+        study.chart, study.state_names, units, study.start_law().mean, study.clock.start,
+        study.folder,
+    )  # fmt: skip
+    at = edges * chart_time_scale(study.clock.unit, list(units))
+    return _Paths(*parts_of(chart, states, at))
+
+
+def parts_of(chart: Chart, states: FloatArray, at: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Odd and even parts (pairs, T, d) of the pairs' chart values at the chart's times (T,)."""
+    values = chart.from_state(states, at)
     values = chart.unwrap(values, at, values[:, 0])
-    ahead, behind = values[1 : 1 + PAIRS], values[1 + PAIRS :]
-    return _Paths(0.5 * (ahead - behind), 0.5 * (ahead + behind) - values[0])
+    pairs = values.shape[0] // 2
+    ahead, behind = values[1 : 1 + pairs], values[1 + pairs :]
+    return 0.5 * (ahead - behind), 0.5 * (ahead + behind) - values[0]
 
 
 def _centre(nodes: FloatArray, first_noise: int) -> FloatArray:

@@ -15,6 +15,7 @@ from rich.text import Text
 from nipc.answers.result import DATA, SUMMARY, Result
 from nipc.chain.plan import Plan
 from nipc.chain.records import ArcRecord, alike
+from nipc.chart_choice import ChartChoice
 from nipc.pilot import Pilot
 from nipc.problem.study import Study
 from nipc.report import reading
@@ -129,6 +130,26 @@ def _losses(plan: Plan) -> Table:
     table.caption = "* chosen; response: the velocity of an oscillator of the study's period"
     table.caption_justify = "left"
     return table
+
+
+def show_charts(out: Console, choice: ChartChoice) -> None:
+    """How curved the motion is in each chart, and which to take."""
+    title = f"Charts, tried on {choice.runs} runs over the horizon"
+    table = Table(title=title, title_justify="left", box=None, header_style="bold")
+    table.add_column("chart")
+    table.add_column("curvature", justify="right")
+    table.add_column("", overflow="fold")
+    for tried in choice.tried:
+        mark = "*" if tried.name == choice.own else " "
+        curvature = "-" if tried.curvature is None else f"{tried.curvature:.1e}"
+        table.add_row(f"{mark} {tried.name}", curvature, Text(tried.reason))
+    table.caption = "* the study's; curvature: the part of the spread that is not linear"
+    table.caption_justify = "left"
+    out.print(table)
+    if choice.best == choice.own:
+        out.print(f"Keep {choice.own}: no other chart is clearly better.")
+    else:
+        out.print(Text(f'Better: [chart] name = "{choice.best}"', style="bold"))
 
 
 def show_arcs(out: Console, records: Sequence[ArcRecord], unit: str) -> None:

@@ -52,9 +52,10 @@ def driver_bands(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> 
     ax.set_ylim(0.0, 1.3 * max(float(bottom.max()), 1e-3))
     log_labels(ax, "x")
     unit = reading.time_unit(dataset)
-    ax.set_xlabel(frame.with_unit("frequency of the noise", f"1/{unit}" if unit else ""))
+    label = frame.with_unit("frequency of the noise", f"1/{unit}" if unit else "")
     when = amount(reading.scalar(dataset, "band_time", quantity), unit, 3)
-    words = f"share of the variance of {frame.printable(quantity)} from each band, at {when}"
+    ax.set_xlabel(f"{label}\nto first order, at {when}")
+    words = f"share of the variance of {frame.printable(quantity)}"
     ax.set_ylabel(textwrap.fill(words, 30))
     _mark_peak(ax, dataset, quantity, parts)
     frame.legend(ax, handles, labels)

@@ -19,7 +19,7 @@ BELOW = {
     "adapters": {"runs", "problem"},
     "commands": {
         "answers", "chain", "problem", "expansion", "runs", "report", "adapters",
-        "workflow", "questions", "pilot", "study_schema", "terminal", "starter",
+        "workflow", "questions", "pilot", "chart_choice", "study_schema", "terminal", "starter",
     },
 }  # fmt: skip
 

@@ -17,6 +17,9 @@ from nipc.report.style import DARK, LIGHT, STROKES
 POINTS = 600
 """Times kept in the page; figures a few inches wide show no more."""
 
+PAIRED = ("driver_shares", "driver_ranking")
+"""Figures of a quantity that stand side by side, before others of their section."""
+
 SCRIPTS = ("clock.js", "chart.js", "panel.js")
 
 SECTIONS = (
@@ -139,7 +142,7 @@ def _sections(dataset: xr.Dataset) -> list[Section]:
     for key, _, kinds in SECTIONS:
         chosen = [entry for entry in entries if entry.name in kinds]
         if key == "drivers":  # a quantity's two figures side by side
-            chosen.sort(key=lambda e: names.index(e.quantity or ""))
+            chosen.sort(key=lambda e: (e.name not in PAIRED, names.index(e.quantity or "")))
         elif key == "trust":  # all quantities first, then each
             chosen.sort(key=lambda e: kinds.index(e.name))
         for entry in chosen:

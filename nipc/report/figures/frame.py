@@ -15,7 +15,7 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 from matplotlib.layout_engine import ConstrainedLayoutEngine
 from matplotlib.patches import Patch
-from matplotlib.ticker import FuncFormatter
+from matplotlib.ticker import FuncFormatter, ScalarFormatter
 from matplotlib.transforms import blended_transform_factory
 
 from nipc.arrays import FloatArray
@@ -124,6 +124,9 @@ def value_axis(ax: Axes, name: str, unit: str, side: Literal["x", "y"] = "y") ->
     if factor != 1.0:
         unit = f"{power_of_ten(round(math.log10(factor)))} {unit}".rstrip()
     axis.set_label_text(textwrap.fill(with_unit(label, unit), 30 if side == "y" else 60))
+    plain = axis.get_major_formatter()
+    if isinstance(plain, ScalarFormatter):  # of axes that the caller made in another style
+        plain.set_useOffset(False)
     if offset or factor != 1.0:
 
         def tick(value: float, _: int) -> str:
@@ -136,7 +139,10 @@ def legend(ax: Axes, handles: Sequence[Any], labels: Sequence[str], raised: bool
     """A row of keys above the axes, where no curve can be; as many columns as fit."""
     if not handles:
         return
-    widths = [(len(label) + 6) * _CHARACTER for label in labels]
+    # narrower axes of the caller's own hold fewer of them
+    own = 0.85 * WIDTH / max(_inches_wide(ax), 1e-3)
+    narrow = own if own > 1.3 else 1.0
+    widths = [(len(label) + 6) * _CHARACTER * narrow for label in labels]
     columns = len(labels)
     while columns > 1 and sum(_column_widths(widths, columns)) >= 1.0:
         columns -= 1
@@ -147,6 +153,11 @@ def legend(ax: Axes, handles: Sequence[Any], labels: Sequence[str], raised: bool
         bbox_to_anchor=(0.0, 1.1 if raised else 1.03),
         ncols=columns,
     )
+
+
+def _inches_wide(ax: Axes) -> float:
+    """Width of the axes as far as it is known before they are laid out."""
+    return float(ax.get_position().width * ax.figure.get_figwidth())  # type: ignore[union-attr]
 
 
 def _column_widths(widths: list[float], columns: int) -> list[float]:

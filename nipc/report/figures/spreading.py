@@ -96,7 +96,7 @@ def diffusion(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -> Axe
         span = min(span[0], max(float(np.nanmin(slow[shown])), 1e-6 * span[1])), span[1]
     law, words = _law(dataset, quantity, elapsed[shown])
     if law is not None:
-        span = max(min(span[0], 0.1 * law[-1]), 1e-6 * span[1]), span[1]
+        span = max(min(span[0], max(float(law.min()), 0.1 * law[-1])), 1e-6 * span[1]), span[1]
         law = np.where((law > 0.3 * span[0]) & (law < 3 * span[1]), law, np.nan)
         dash: dict[str, Any] = {"color": LIGHT["edge"], "lw": 1.5, "ls": (0, (6, 2))}
         ax.plot(elapsed[shown], law, **dash)

@@ -23,7 +23,8 @@ from nipc.workflow import (
 if TYPE_CHECKING:
     import xarray as xr
 
-    from nipc.answers.allowances import Confirmed, Event
+    from nipc.answers.allowances import Event
+    from nipc.answers.confirmation import Confirmed
     from nipc.answers.result import Result
     from nipc.answers.scaled import Scaled
     from nipc.runs.kept import KeptRuns
@@ -209,7 +210,8 @@ def find_allowances(
 
     Returns it, what the direct runs say, and whether there was a result to keep it in.
     """
-    from nipc.answers.allowances import allowances, confirm
+    from nipc.answers.allowances import allowances
+    from nipc.answers.confirmation import confirm
 
     with reopened(study, folder=folder, n_jobs=n_jobs, progress=progress, backend=backend) as again:
         data = allowances(again.scaled, target, event, box_of, members)

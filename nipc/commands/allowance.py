@@ -7,14 +7,14 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from nipc.commands.options import AsJson, Jobs, Quiet, StudyFile, next_steps, progress_of, quoted
+from nipc.commands.options import AsJson, Jobs, StudyFile, next_steps, progress_of, quoted
 from nipc.commands.whatif import Members
 from nipc.errors import InputError
 
 if TYPE_CHECKING:
     import xarray as xr
 
-    from nipc.answers.allowances import Confirmed
+    from nipc.answers.confirmation import Confirmed
 
 
 def allowance(
@@ -36,13 +36,13 @@ def allowance(
     runs: Annotated[int, typer.Option(min=2, help="Direct runs for each of them.")] = 20,
     members: Members = None,
     jobs: Jobs = 1,
-    quiet: Quiet = False,
     as_json: AsJson = False,
 ) -> None:
     """How strong each noise source, and the start, may be for a box to be kept.
 
     One at a time, all others as in the study; and all noise sources together.
-    Nothing is run unless you ask to confirm. The page tells it from then on.
+    Nothing is run unless you ask to confirm, but some tens of passes of the
+    ensemble take their time. The page tells what is found from then on.
     """
     from nipc.questions import find_allowances
     from nipc.workflow import load_study
@@ -57,7 +57,7 @@ def allowance(
         members=members,
         confirming=runs if confirm else 0,
         n_jobs=jobs,
-        progress=progress_of(quiet or as_json),
+        progress=progress_of(as_json),
     )
     if as_json:
         print(json.dumps(_told(data, confirmed)))

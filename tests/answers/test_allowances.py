@@ -10,7 +10,8 @@ from asked_studies import BROWNIAN, brownian, variance
 from scipy.stats import norm
 
 import nipc
-from nipc.answers.allowances import allowances, confirm, remarks
+from nipc.answers.allowances import allowances, remarks
+from nipc.answers.confirmation import confirm
 from nipc.errors import InputError
 from nipc.questions import find_allowances, reopened
 from nipc.report import tables

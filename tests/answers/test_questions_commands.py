@@ -69,7 +69,7 @@ def test_sweep(command, study):
 
 
 def test_allowance(command, study):
-    done = command("allowance", study, "--target", "0.9", "--confirm", "--runs", "2", "-q")
+    done = command("allowance", study, "--target", "0.9", "--confirm", "--runs", "2")
     assert done.code == 0
     assert fits(done.out)
     for words in (

@@ -48,8 +48,9 @@ class LinearPart:
         centred = flat - flat.mean(axis=0)
         projected = (q.T @ centred).reshape(live.size, *outputs.shape[1:])
         total = np.sum(centred**2, axis=0).reshape(outputs.shape[1:])
-        explained = np.concatenate([np.zeros((1, *total.shape)), np.cumsum(projected**2, axis=0)])
-        rest = total - explained[columns, np.arange(columns.size)]
+        rest = total - np.array(
+            [np.sum(projected[:count, t] ** 2, axis=0) for t, count in enumerate(columns)]
+        )
         freedom = np.maximum(n - columns, 1)[:, None]
         absent = np.where(usable.reshape(total.shape), 1.0, np.nan)
         return cls(

@@ -15,6 +15,7 @@ from nipc.answers.wording import estimate, number, percent
 
 PART = 0.1  # of the variance, below which a source's frequencies are not worth a sentence
 RESONANT = 0.5  # of what it gives, from one narrow band
+FEW, SLOW = 5.0, 0.8  # turns in the time elapsed that are slow, and how much must come from them
 
 FEWEST_LEAVING = 50
 """Members that leave, or stay, below which it is not said what decides who leaves."""
@@ -33,7 +34,7 @@ def findings(dataset: xr.Dataset) -> list[str]:
                 f" from the expansion there. {view.trust.clause}"
             )
             continue
-        parts = (_confinement, _spread, _law, _driver, _resonance, _allowance, _nonlinear)
+        parts = (_confinement, _spread, _law, _driver, _frequencies, _allowance, _nonlinear)
         said = [part(view) for part in parts]
         sentences += [f"{s} {view.trust.clause}" for s in said if s]
     sentences += joint(dataset) + endings(dataset) + separation(dataset)
@@ -169,25 +170,54 @@ def _leaving(view: View) -> str | None:
     return ranked[0][0]
 
 
-def _resonance(view: View) -> str | None:
-    """Where a narrow band of the strongest noise source's frequencies gives most of its part."""
+def _frequencies(view: View) -> str | None:
+    """Of the strongest noise source: whether a narrow band of it drives, or its slow part."""
     share_of = [(s, t) for s, t in view.ranked("driver_total") if view.kind(s) == "noise"]
+    told = view.value("band_time")
     if not share_of or share_of[0][1] < PART:
         return None
+    if view.value("nonlinear_share") > 0.5 or not told <= view.times[view.trust.index] * (
+        1 + 1e-12
+    ):
+        return None  # what is told to first order is not what drives it, or not trusted
     source = share_of[0][0]
+    return _resonance(view, source, told) or _slow(view, source, told)
+
+
+def _resonance(view: View, source: str, told: float) -> str | None:
     share = view.triple("resonance_share", source=source)
-    frequency = view.value("resonance_frequency", source=source)
-    told = view.value("band_time")
-    if view.value("nonlinear_share") > 0.5:
-        return None  # what is told to first order is not what drives it
-    if not share[1] >= RESONANT or told > view.times[view.trust.index] * (1.0 + 1e-12):
+    if not share[1] >= RESONANT:
         return None
+    frequency = view.value("resonance_frequency", source=source)
     width = view.value("resonance_width", source=source)
     ends = number(1.0 / (frequency + width), 3), number(1.0 / (frequency - width), 3)
     return (
         f"{view.name} resonates with {view.source(source)}: {percent(*share)} of the variance that"
         f" it gives to first order at {number(told)} {view.clock} comes from noise of periods"
         f" {ends[0]} to {ends[1]} {view.clock}, most at {number(1.0 / frequency, 3)} {view.clock}."
+    )
+
+
+def _slow(view: View, source: str, told: float) -> str | None:
+    """Where nearly all comes from noise of fewer than `FEW` turns in the time elapsed."""
+    if "band_share" not in view.data:
+        return None
+    tops = np.asarray(view.data["band_high"].values, float)
+    slow = np.flatnonzero(tops <= FEW / (told - view.times[0]))
+    if not slow.size:
+        return None
+    # errors of the bands added up, as if they went together
+    value, low, high = (
+        float(view.data[f"band_share{end}"].sel(source=source).values[slow].sum())
+        for end in ("", "_low", "_high")
+    )
+    if not low >= SLOW:
+        return None
+    share = percent(value, low, min(high, 1.0))
+    return (
+        f"It is the slow part of {view.source(source)} that drives {view.name}: {share} of the"
+        f" variance that it gives to first order at {number(told)} {view.clock} comes from noise of"
+        f" periods longer than {number(1.0 / tops[slow[-1]], 3)} {view.clock}."
     )
 
 

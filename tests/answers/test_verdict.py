@@ -274,6 +274,23 @@ def test_a_resonance_is_said_where_it_is_pronounced_and_trusted():
     assert not [s for s in findings(weak) if "resonates" in s]
 
 
+def test_a_slow_drive_is_said_where_there_is_no_resonance():
+    """Bands of 28 d: fewer than five turns are periods longer than 5.6 d, here those above 7 d."""
+    made = resonant(low=0.1)
+    made["band_high"] = ("band", [1 / 28, 1 / 14, 1 / 7, 1.0, np.inf])
+    shares = np.array([0.5, 0.3, 0.12, 0.05, 0.03])
+    for end, factor in (("", 1.0), ("_low", 0.95), ("_high", 1.05)):
+        values = np.full((2, 5, 2), np.nan)
+        values[0, :, 0] = factor * shares
+        made[f"band_share{end}"] = (("source", "band", "quantity"), values)
+    sentence = said(made, "slow part of the noise source 'thrust' that drives longitude")
+    assert "92 % (87 to 97) of the variance" in sentence
+    assert "periods longer than 7 d" in sentence
+    assert "trust horizon" in sentence
+    made["band_share_low"] = 0.8 * made["band_share"]
+    assert not [s for s in findings(made) if "slow part" in s]
+
+
 def separating(growth):
     """Quantiles of exponents whose ln of the separation is growth(t) for the median."""
     made = dataset()

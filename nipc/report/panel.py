@@ -25,6 +25,7 @@ FEWEST = 150
 LEVELS = (0.025, 0.25, 0.5, 0.75, 0.975)
 RANGE = (0.0, 2.0)
 STEPS = 32767
+ROUGH = 0.1  # of the spread: members that are off by more are told apart
 
 
 @dataclass(frozen=True)
@@ -194,18 +195,37 @@ def remarks(dataset: xr.Dataset) -> list[str]:
             f"With every scale at 1 its standard deviations differ from those above by "
             f"{_at_most(gap)}."
         )
-    if reading.has(dataset, "panel_error"):
-        worst = float(np.nanmax(np.asarray(dataset["panel_error"].values, float)))
-        said.append(
-            f"At other scales, members differ from the chain itself by "
-            f"{_at_most(worst)} of the spread where this was tried."
-        )
+    said += _error(dataset)
     if panel.left_out:
         said.append(f"{panel.left_out} members that ended early are not in it.")
     said.append(
         "The command nipc whatif is the reference: it uses the whole ensemble and the "
         "whole chain, and also gives survival."
     )
+    return said
+
+
+def _error(dataset: xr.Dataset) -> list[str]:
+    """How far members are off at other scales; of which quantities the panel says little."""
+    if not reading.has(dataset, "panel_error"):
+        return []
+    tried = dataset["panel_error"].transpose(..., "quantity").values
+    worst = np.nanmax(tried.reshape(-1, dataset.sizes["quantity"]), axis=0, initial=0.0)
+    far = [
+        f"{name} ({percent(w) if w < 1 else number(float(w), 2) + ' times'})"
+        for name, w in zip(reading.quantities(dataset), worst, strict=True)
+        if w > ROUGH
+    ]
+    good = worst[worst <= ROUGH]
+    words = "At other scales, members differ from the chain itself by "
+    said = []
+    if far:
+        said.append(
+            f"{words}much of the spread, so do not rely on the panel there: {', '.join(far)}."
+        )
+        words = "Of the other quantities they differ by "
+    if good.size:
+        said.append(f"{words}{_at_most(float(good.max()))} of the spread where this was tried.")
     return said
 
 

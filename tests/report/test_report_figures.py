@@ -274,3 +274,101 @@ def test_exponents_and_their_members(slot: xr.Dataset) -> None:
     np.testing.assert_allclose(line(ax, "soft")[1:], np.log(10) / slot["time"].values[1:])
     with pytest.raises(KeyError, match="Lyapunov"):
         figures.lyapunov_exponents(slot.drop_vars("lyapunov_exponent"))
+
+
+def arcs(ends: list[float], last: float, notes: list[str]) -> xr.Dataset:
+    """A result with these arcs over a horizon to `last`."""
+    count = len(ends)
+    return xr.Dataset(
+        {
+            "arc_start": ("arc", [0.0, *ends[:-1]]),
+            "arc_end": ("arc", ends),
+            "arc_degree": ("arc", [2] * count),
+            "arc_terms": ("arc", [17] * count),
+            "arc_runs": ("arc", [24] * count),
+            "arc_failed": ("arc", [0] * (count - 1) + [5]),
+            "arc_error": ("arc", [1e-3] * count),
+            "arc_allowed": ("arc", [2e-3] * count),
+            "arc_note": ("arc", notes),
+        },
+        coords={"time": ("time", np.linspace(0.0, last, 11), {"units": "d"}), "quantity": ["x"]},
+    )
+
+
+def labels_of(ax: Axes) -> list[str]:
+    legend = ax.get_legend()
+    assert legend is not None
+    return [text.get_text() for text in legend.get_texts()]
+
+
+def test_arcs_of_unequal_length_stand_as_long_as_they_are() -> None:
+    data = arcs([1.0, 2.0, 2.5, 4.5], 5.0, ["", "halved (3 % off)", "halved (8 % off); easy", ""])
+    length, degree, runs, error, why = figures.chain(data)
+    assert [ax.get_ylabel() for ax in (length, degree, runs, error, why)] == [
+        "length (d)", "degree", "runs", "error", "why"
+    ]  # fmt: skip
+    values, edges, _ = length.patches[0].get_data()
+    assert values == pytest.approx([1.0, 1.0, 0.5, 2.0])
+    assert edges == pytest.approx([0.0, 1.0, 2.0, 2.5, 4.5])
+    assert labels_of(runs) == ["runs", "of these failed", "terms"]
+    assert labels_of(error) == ["held-out error", "allowed"]
+    assert [text.get_text() for text in why.texts] == ["halved", "easy"]
+    spans = [path.get_extents().intervalx for path in why.collections[0].get_paths()]
+    assert np.array(spans) == pytest.approx(np.array([[1.0, 2.0], [2.0, 2.5]]))
+    # the chain ends before the horizon, and the figure says so
+    assert why.get_xlim() == (0.0, 5.0)
+    assert "no arcs" in [text.get_text() for text in length.texts]
+    whole = figures.chain(arcs([1.0, 2.0], 2.0, ["", ""]))
+    assert [ax.get_ylabel() for ax in whole] == ["degree", "runs", "error"]
+    assert not whole[0].texts
+
+
+def test_failed_runs_are_told_apart_only_where_chance_would_not_do_it() -> None:
+    """40 failed runs two standard deviations higher in x: P(beyond) = Phi(sqrt 2) = 0.92."""
+    rng = np.random.default_rng(4)
+    good = rng.standard_normal((200, 2))
+    failed = rng.standard_normal((40, 2)) + np.array([2.0, 0.0])
+    data = xr.Dataset(
+        {
+            "failed_position": (("failed_run", "direction"), failed),
+            "good_position": (("good_run", "direction"), good),
+        },
+        coords={"direction": ["x", "f[1]"]},
+    )
+    ax = figures.failure_places(data)
+    rows = dict(
+        zip(
+            (label.get_text() for label in ax.get_yticklabels()),
+            (text.get_text() for text in ax.texts),
+            strict=True,
+        )
+    )
+    share = int(rows["x"].removesuffix("% higher"))
+    assert abs(share - 92) <= 5  # standard error 2
+    assert rows["f[1]"] == "no sign"
+    assert rows["distance from the\ncentre"].endswith("higher")
+
+
+def test_a_share_estimated_above_one_is_drawn_as_one(slot: xr.Dataset) -> None:
+    over = slot.copy(deep=True)
+    for name in ("driver_total", "driver_total_low", "driver_total_high"):
+        over[name].loc[{"quantity": "radius", "source": "radial"}] = {"driver_total": 1.02}.get(
+            name, 1.3 if name.endswith("high") else 0.8
+        )
+    ax = figures.driver_ranking(over, "radius")
+    assert "100\u202f%" in [text.get_text() for text in ax.texts]
+    right = ax.get_xlim()[1]
+    assert all(text.xy[0] <= 1.0 < right for text in ax.texts)
+    assert max(line.get_xdata().max() for line in ax.lines) <= 1.0
+
+
+def test_the_law_is_drawn_with_its_offset(slot: xr.Dataset) -> None:
+    """A + 2 D t where the verdict is diffusive, whatever the exponent's estimate."""
+    told = slot.assign(diffusion_offset=("quantity", [0.05, 0.0, 0.0]))
+    ax = figures.diffusion(told, "radius")
+    assert "A + 2 D t, α = 1.02 (0.96 to 1.08)" in labels_of(ax)
+    drawn = next(each for each in ax.lines if each.get_color() == LIGHT["edge"])
+    times, law = (np.asarray(side, float) for side in drawn.get_data())
+    known = np.isfinite(law)
+    assert known.sum() > 100
+    assert law[known] == pytest.approx(0.05 + 2 * 8.5e-3 * times[known])

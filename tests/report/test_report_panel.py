@@ -147,3 +147,18 @@ def test_no_panel_without_its_data(minimal: xr.Dataset) -> None:
     assert panel.read(minimal) is None
     assert panel.stored(minimal) is None
     assert panel.remarks(minimal) == []
+
+
+def test_the_panel_says_of_which_quantities_it_is_rough(slot: xr.Dataset) -> None:
+    """Above a tenth of the spread it is not to be relied on; below it says how far it is off."""
+    error = np.array([[0.004, 0.3, 0.02], [0.002, 0.1, 0.06]])
+    told = slot.assign(panel_error=(("panel_test", "quantity"), error))
+    words = " ".join(panel.remarks(told))
+    assert "do not rely on the panel there: longitude (30\u202f%)." in words
+    assert "Of the other quantities they differ by at most 6\u202f% of the spread" in words
+    told = slot.assign(panel_error=(("panel_test", "quantity"), 0.1 * error))
+    words = " ".join(panel.remarks(told))
+    assert "rely" not in words
+    assert "from the chain itself by at most 3\u202f% of the spread" in words
+    told = slot.assign(panel_error=(("panel_test", "quantity"), 100 * error))
+    assert "longitude (30 times)" in " ".join(panel.remarks(told))

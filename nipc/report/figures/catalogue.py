@@ -52,7 +52,7 @@ PER_QUANTITY: dict[str, tuple[Callable[..., Any], str]] = {
     "driver_ranking": (driver_ranking, "Drivers of {q} at the end of the horizon."),
     "driver_bands": (
         driver_bands,
-        "Which frequencies of the noise spread {q}, to first order: a narrow peak is a resonance.",
+        "Which frequencies of the noise spread {q}: a narrow peak is a resonance.",
     ),
     "diffusion": (diffusion, "How the variance of {q} grows."),
     "direct_against_expansion": (

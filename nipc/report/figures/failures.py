@@ -18,7 +18,7 @@ from nipc.report.style import LIGHT, drawn
 
 SHOWN = 8
 WIDEST = 4.2  # standard deviations
-ROWS, FEWEST = 6, 3  # directions shown, runs of each kind that one needs
+ROWS, UNTOLD, FEWEST = 6, 3, 3  # directions shown, if none tells, runs of each kind in one
 
 
 @drawn
@@ -77,6 +77,8 @@ def failure_places(dataset: xr.Dataset, ax: Axes | None = None) -> Axes:
     shares, telling = told[:, 0], np.nan_to_num(np.abs(told[:, 1]), nan=-1.0)
     order = [k for k in np.argsort(-telling, kind="stable")[:ROWS] if telling[k] >= 0]
     sure = float(norm.isf(0.5e-3 / len(names)))
+    if not (telling > sure).any():
+        order = order[:UNTOLD]
     if not order:
         raise KeyError("no direction has failed runs beside good ones")
     ax = frame.new_axes(ax, height=1.2 + 0.42 * len(order))

@@ -65,7 +65,7 @@ def density(
         _contour(ax, x, y, hand.colour, hand.dash)
         mark = max(trust.mark(float(kept[index])) for trust in trusts)
         handles.append(Line2D([], [], color=hand.colour, ls=hand.dash, marker=hand.marker, ms=4))
-        labels.append(amount(float(kept[index]), unit, 3) + mark)
+        labels.append(amount(float(kept[index]), unit, 4) + mark)
     for edges, draw in (
         (reading.box(dataset, horizontal), ax.axvline),
         (reading.box(dataset, vertical), ax.axhline),

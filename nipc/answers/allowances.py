@@ -12,9 +12,10 @@ import xarray as xr
 
 from nipc.answers.allowance import Allowance, Probability, find_allowance
 from nipc.answers.boxes import Box, check_start
-from nipc.answers.confinement import Confinement, ConfinementAccumulator
+from nipc.answers.confinement import Confinement
 from nipc.answers.ensemble import boxes_of
 from nipc.answers.intervals import normal_factor
+from nipc.answers.outside import DoubtfulConfinement
 from nipc.answers.scaled import Scaled
 from nipc.answers.whatif import LOOK, LOST, path_error
 from nipc.answers.wording import number
@@ -63,9 +64,9 @@ class Probabilities:
         return probabilities(result, self.question.event)
 
     def _confinement(self, scales: FloatArray, margin: FloatArray, count: int) -> Confinement:
-        gathered = ConfinementAccumulator(self.scaled.times, self.question.boxes, margin)
+        gathered = DoubtfulConfinement(self.scaled.times, self.question.boxes, margin)
         for values in self.scaled.blocks(scales, count):
-            gathered.update(values, self.scaled.ended)
+            gathered.update(values, self.scaled.ended, self.scaled.doubted(scales))
         return self.scaled.counted(gathered.result())
 
     def limit(self, moved: FloatArray) -> float:

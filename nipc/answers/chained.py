@@ -17,7 +17,7 @@ from nipc.answers.separation import add_exponents, chain_logs, worst_error
 from nipc.answers.single import add_check
 from nipc.answers.spreading import spread_rate
 from nipc.answers.table import ResultTable
-from nipc.arrays import FloatArray
+from nipc.arrays import BoolArray, FloatArray
 from nipc.chain.arc import ArcMap
 from nipc.chain.chain import Chain
 from nipc.chain.check import HeldOut
@@ -35,6 +35,7 @@ class ChainAnswers:
         self.groups = horizon.germ.groups()
         self.ensemble_lost = 0
         self.lost = 0.0  # share of the members asked for last that ended far outside the designs
+        self.outside: BoolArray = np.zeros(0, dtype=bool)  # which of them
 
     def of_values(self, values: FloatArray, parameters: FloatArray) -> FloatArray:
         """Quantities (n, T, Q) of chart values (n, T, d)."""
@@ -64,6 +65,7 @@ class ChainAnswers:
             granted = horizon.granted(arc, block) if direct else 0
             steps, members = horizon.advance(arc, members, history, block, granted)
             values[:, horizon.output_rows(arc)] = steps[:, horizon.inner_times(arc)]
+        self.outside = members.lost
         self.lost = float(members.lost.mean())
         if direct and block == 0 and (beyond := self.chain.continued) is not None:
             some = min(count, beyond.values.shape[0])

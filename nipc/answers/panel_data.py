@@ -24,7 +24,7 @@ FEWEST, MOST = 150, 600  # members
 FEWEST_TIMES, TIMES = 12, 33
 REACHES = (2.0, 1.5, 1.25)
 HELD = 0.05  # of the spread: a scale up to which held-back members are off by more is not offered
-FAR = 0.5  # nor one at which more of them pass outside what runs cover
+FAR = 0.05  # nor one at which more of them pass outside what runs cover
 AS_IT_STANDS = 30.0  # weight of the members at scale one
 ROOM = 2.0  # where an arc's bounds stop a member, that is no response of the motion
 
@@ -66,7 +66,7 @@ def add_panel(table: ResultTable, scaled: Scaled) -> None:
     count = len(scaled.groups)
     powers = powers_of(count)
     rows, members = _size(scaled, len(powers))
-    before, scaled.room = scaled.room, ROOM
+    before, scaled.room, scaled.holding = scaled.room, ROOM, False
     try:
         points = design_of([group.kind for group in scaled.groups])
         values = _members(scaled, points, members, rows)
@@ -77,7 +77,7 @@ def add_panel(table: ResultTable, scaled: Scaled) -> None:
         terms = _fitted(points, powers, values)
         tested, error, high = _tested(scaled, terms, powers, members, rows)
     finally:
-        scaled.room = before
+        scaled.room, scaled.holding = before, True
     dims = ("panel_term", "panel_member", "quantity", "panel_time")
     contributions = terms.transpose(0, 1, 3, 2)
     words = "contribution of each power of the scales to a member"

@@ -21,7 +21,7 @@ from nipc.answers.endings import endings_of
 from nipc.answers.intervals import Interval, widen
 from nipc.answers.scaled_expansion import scaled_expansion
 from nipc.answers.scales import of_noise, scaled_germ, scaled_nodes
-from nipc.arrays import FloatArray
+from nipc.arrays import BoolArray, FloatArray
 from nipc.chain.arc import REACH, ArcMap
 from nipc.chain.check import HeldOut
 from nipc.chain.history import BLOCK, blocks_of
@@ -39,16 +39,20 @@ ALL = "all"
 class Scaled(ABC):
     """Members of a solved study at scales (G,) of its groups, which are all ones as it stands.
 
-    `far` is the share of the members asked for last that passed outside what the runs cover, and
-    `ended` (n,) when each ended early for a physical reason, NaN where it did not; None: none can.
+    Of the members asked for last `outside` (n,) tells which passed outside what the runs cover,
+    `far` their share, and `ended` (n,) when each ended early for a physical reason, NaN where it
+    did not; None: none can. With a scale beyond one, members outside are held within what the
+    others reach, if `holding`: an expansion carried far may send them anywhere.
     """
 
     room = 1.0
     """How far past the bounds of an arc's map members may go, where it has bounds."""
+    holding = True
 
     def __init__(self, study: Study, groups: tuple[Group, ...], check: HeldOut) -> None:
         self.study, self.groups, self.check = study, groups, check
         self.times = study.clock.times
+        self.outside: BoolArray = np.zeros(0, dtype=bool)
         self.far = 0.0
         self.ended: FloatArray | None = None
 
@@ -88,6 +92,27 @@ class Scaled(ABC):
     @abstractmethod
     def direct(self, scales: FloatArray, count: int, label: str) -> FloatArray:
         """The first block's first members by direct runs, (n, T, Q); NaN where one failed."""
+
+    def doubted(self, scales: FloatArray) -> BoolArray | None:
+        """Which of the members asked for last may be elsewhere; None where no scale passes one."""
+        return self.outside if np.max(scales, initial=0.0) > 1.0 else None
+
+    def _note(self, outside: BoolArray) -> None:
+        self.outside, self.far = outside, float(outside.mean())
+
+    def _held(self, values: FloatArray, scales: FloatArray) -> FloatArray:
+        if (
+            not self.holding
+            or np.max(scales, initial=0.0) <= 1.0
+            or not self.outside.any()
+            or self.outside.all()
+        ):
+            return values
+        others = values[~self.outside]
+        low = np.min(np.where(np.isnan(others), np.inf, others), axis=0)
+        high = np.max(np.where(np.isnan(others), -np.inf, others), axis=0)
+        values[self.outside] = np.clip(values[self.outside], low, high)
+        return values
 
     def counted(self, result: Confinement) -> Confinement:
         """The probabilities with what else their intervals have to hold."""
@@ -144,8 +169,8 @@ class ScaledArc(Scaled):
                 if redrawn in (ALL, group.name):
                     nodes[:, group.columns] = other[:, group.columns]
         nodes = scaled_nodes(self.arc.germ, self.groups, scales, nodes)
-        self.far = float(np.mean(self.arc.expansion.basis.christoffel(nodes) > self._reach))
-        values = self.arc.quantities(nodes)
+        self._note(self.arc.expansion.basis.christoffel(nodes) > self._reach)
+        values = self._held(self.arc.quantities(nodes), scales)
         if self._endings is not None:
             # the ensemble's own numbers decide, beside the germ, who ends
             chance = generator(self.study, "endings").random(block * BLOCK + count)
@@ -239,8 +264,8 @@ class ScaledChain(Scaled):
             if redrawn in (ALL, source.name):
                 history = history.with_stream(j, "b")
         values = answers.members(history, streams, block, count)
-        self.far = answers.lost
-        return values
+        self._note(answers.outside)
+        return self._held(values, scales)
 
     def direct(self, scales: FloatArray, count: int, label: str) -> FloatArray:
         answers = self._at(scales)

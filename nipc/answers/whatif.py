@@ -3,7 +3,8 @@
 Intervals hold the ensemble's chance and the error of paths. That error was measured with every
 scale at 1; it is taken to grow as the largest scale, and beyond 1 as its square, which is how the
 first order that a linear expansion leaves out grows. Members that scales beyond one take outside
-what the runs cover are held to be off by half of the spread each.
+what the runs cover are held to be off by half of the spread each, the mean and the spread without
+them are held possible, and so is any side of a box for them.
 """
 
 from __future__ import annotations
@@ -17,11 +18,12 @@ import xarray as xr
 
 from nipc.answers import present
 from nipc.answers.boxes import check_start
-from nipc.answers.confinement import Confinement, ConfinementAccumulator
+from nipc.answers.confinement import Confinement
 from nipc.answers.drivers import PickFreezeAccumulator
 from nipc.answers.ensemble import boxes_of
 from nipc.answers.intervals import Interval, normal_factor
 from nipc.answers.moments import MomentAccumulator
+from nipc.answers.outside import DoubtfulConfinement
 from nipc.answers.quantiles import QuantileAccumulator
 from nipc.answers.scaled import ALL, Scaled
 from nipc.answers.table import LEVELS, ResultTable
@@ -78,6 +80,7 @@ def moved(study: Study, boxes: Mapping[str, Ends]) -> Study:
 @dataclass(frozen=True)
 class _Gathered:
     moments: MomentAccumulator
+    sure: MomentAccumulator  # without the members outside
     quantiles: QuantileAccumulator
     confinement: Confinement
     far: float
@@ -115,16 +118,19 @@ def _gather(
 ) -> _Gathered:
     single, joint = boxes_of(study)
     margin = normal_factor() * error
-    confinement = ConfinementAccumulator(scaled.times, [*single, *joint], margin)
-    moments, quantiles = MomentAccumulator(), QuantileAccumulator()
+    confinement = DoubtfulConfinement(scaled.times, [*single, *joint], margin)
+    moments, sure, quantiles = MomentAccumulator(), MomentAccumulator(), QuantileAccumulator()
     for values in scaled.blocks(scales, count):
         if not moments.members and np.isfinite(values[:, 0]).any():
             check_start(single, values[:, 0])
-        confinement.update(values, scaled.ended)
+        doubted = scaled.doubted(scales)
+        confinement.update(values, scaled.ended, doubted)
         moments.update(values)
         quantiles.update(values)
+        if doubted is not None:
+            sure.update(np.where(doubted[:, None, None], np.nan, values))
     result = scaled.counted(confinement.result())
-    return _Gathered(moments, quantiles, result, scaled.far)
+    return _Gathered(moments, sure, quantiles, result, scaled.far)
 
 
 def _add_moments(
@@ -141,6 +147,9 @@ def _add_moments(
     else:
         mean, std = found.moments.mean, found.moments.std
         mean_ends, std_ends = found.moments.mean_interval(), found.moments.std_interval()
+    if found.sure.members and found.far:
+        mean_ends = _both(mean_ends, found.sure.mean_interval())
+        std_ends = _both(std_ends, found.sure.std_interval())
     unit = "as the quantity"
     ends = Interval(mean_ends.low - shift, mean_ends.high + shift)
     table.over_time("mean", mean, unit, "mean", ends)
@@ -150,6 +159,11 @@ def _add_moments(
     upper = np.sqrt(std_ends.high**2 + error**2) + shift
     ends = Interval(np.maximum(std_ends.low - shift, 0.0), upper)
     table.over_time("std", std, unit, "standard deviation", ends)
+
+
+def _both(one: Interval, other: Interval) -> Interval:
+    """From the lower of the low ends to the higher of the high ones."""
+    return Interval(np.fmin(one.low, other.low), np.fmax(one.high, other.high))
 
 
 def _trusted(scaled: Scaled, error: FloatArray, std: FloatArray) -> FloatArray:

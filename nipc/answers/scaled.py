@@ -22,7 +22,7 @@ from nipc.answers.intervals import Interval, widen
 from nipc.answers.scaled_expansion import scaled_expansion
 from nipc.answers.scales import of_noise, scaled_germ, scaled_nodes
 from nipc.arrays import BoolArray, FloatArray
-from nipc.chain.arc import REACH, ArcMap
+from nipc.chain.arc import WRONG, ArcMap
 from nipc.chain.check import HeldOut
 from nipc.chain.history import BLOCK, blocks_of
 from nipc.chain.single_arc import SingleArc, generator, run_times
@@ -130,8 +130,8 @@ class Scaled(ABC):
 class ScaledArc(Scaled):
     """A single arc: a member's value is a polynomial in the scales, and moments have closed forms.
 
-    A member is far outside when its Christoffel function passes `REACH` times its largest value in
-    the design, as in an arc of a chain.
+    A member is outside where the error at the end, carried outwards as in an arc of a chain
+    (`nipc.chain.arc`), is feared to pass `WRONG` times the spread.
     """
 
     def __init__(self, arc: SingleArc, engine: Engine, quantities: QuantitySet) -> None:
@@ -140,7 +140,8 @@ class ScaledArc(Scaled):
         self._endings = endings_of(arc)
         self._times_ended: list[FloatArray] = []
         self._states: list[Mapping[str, Any]] = []  # of the generator, at the start of each block
-        self._reach = REACH * float(arc.expansion.basis.christoffel(arc.design.nodes).max())
+        worst = np.fmax(arc.relative_error[-1], arc.check.error[-1])
+        self._error = float(np.max(np.nan_to_num(worst), initial=0.0))
 
     @property
     def path_error(self) -> FloatArray:
@@ -169,7 +170,9 @@ class ScaledArc(Scaled):
                 if redrawn in (ALL, group.name):
                     nodes[:, group.columns] = other[:, group.columns]
         nodes = scaled_nodes(self.arc.germ, self.groups, scales, nodes)
-        self._note(self.arc.expansion.basis.christoffel(nodes) > self._reach)
+        basis, degree = self.arc.expansion.basis, max(self.polynomial_degree, 1)
+        christoffel = basis.christoffel(nodes) / basis.n_terms
+        self._note(self._error * christoffel ** (0.5 * (degree + 1) / degree) > WRONG)
         values = self._held(self.arc.quantities(nodes), scales)
         if self._endings is not None:
             # the ensemble's own numbers decide, beside the germ, who ends

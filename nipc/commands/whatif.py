@@ -99,6 +99,7 @@ def _told(now: xr.Dataset, was: xr.Dataset, at: float | None) -> dict[str, Any]:
     times = now["time"].values
     index = times.size - 1 if at is None else int(np.argmin(np.abs(times - at)))
     quantities: dict[str, Any] = {}
+    joints: dict[str, Any] = {}
     for name in now["quantity"].values:
         parts = [data.sel(quantity=name).isel(time=index) for data in (now, was)]
         figures: dict[str, list[Any]] = {}
@@ -115,6 +116,12 @@ def _told(now: xr.Dataset, was: xr.Dataset, at: float | None) -> dict[str, Any]:
         mark = reading.trust(now, str(name)).mark(float(times[index]))
         unit = str(parts[0]["quantity_unit"].item())
         quantities[str(name)] = {"unit": unit, "mark": mark, "figures": figures}
+    mark = reading.trust(now, None).mark(float(times[index]))
+    for name in now["joint"].values if "joint" in now.coords else []:
+        parts = [data.sel(joint=name).isel(time=index) for data in (now, was)]
+        kinds = ("inside_probability", "survival_probability")
+        figures = {v: [_triple(part, f"joint_{v}") for part in parts] for v in kinds}
+        joints[str(name)] = {"unit": "", "mark": mark, "figures": figures}
     return {
         "title": now.attrs["title"],
         "time": float(times[index]),
@@ -123,6 +130,7 @@ def _told(now: xr.Dataset, was: xr.Dataset, at: float | None) -> dict[str, Any]:
         "far_share": float(now.attrs["far_share"]),
         "remarks": remarks(now),
         "quantities": quantities,
+        "joint": joints,
     }
 
 
@@ -158,7 +166,7 @@ def _show(told: dict[str, Any]) -> None:
     when = f"At {told['time']:g} {told['time_unit']}".rstrip()
     out.print(Text(f"{when}, {told['members']} members; {', '.join(changes) or 'nothing changed'}"))
     marks = set()
-    for name, one in told["quantities"].items():
+    for name, one in (told["quantities"] | told["joint"]).items():
         table = Table(box=None, pad_edge=False)
         marks.add(one["mark"])
         for head in (Text(name + one["mark"], style="bold"), "now", "as the study stands"):
@@ -166,7 +174,7 @@ def _show(told: dict[str, Any]) -> None:
         for figure, (now, was) in one["figures"].items():
             if figure in HIDDEN:
                 continue
-            spread = one["figures"]["std"][0][0]
+            spread = one["figures"].get("std", [[float("nan")]])[0][0]
             cells = [_cell(figure, values, one["unit"], spread) for values in (now, was)]
             table.add_row(Text(_label(figure)), *map(Text, cells))
         out.print()

@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 
 import pytest
-from asked_studies import brownian
+from asked_studies import BROWNIAN, brownian
 
 
 @pytest.fixture(scope="module")
@@ -37,6 +37,26 @@ def test_whatif(command, study):
     assert told["quantities"]["still"]["figures"]["total share of push"][0][0] is None
     at = json.loads(command("whatif", study, "--at", "2", "--json").out)
     assert at["time"] == 2.0
+
+
+def test_joint_boxes(command, tmp_path):
+    from nipc.workflow import run
+
+    text = BROWNIAN.replace('expression = "y**2"', 'expression = "y**2"\nbox = [-1.0, 0.25]')
+    text = text.replace(
+        "[ensemble]", '[[joint_box]]\nname = "both"\nquantities = ["x", "square"]\n[ensemble]'
+    )
+    run(brownian(tmp_path, text), backend="inline")
+    told = json.loads(
+        command("whatif", tmp_path / "study.toml", "--scale", "push=0.5", "--json").out
+    )
+    now, was = told["joint"]["both"]["figures"]["inside_probability"]
+    alone = told["quantities"]["square"]["figures"]["inside_probability"]
+    assert was[0] <= alone[1][0]
+    assert was[0] < now[0] <= alone[0][0]
+    done = command("whatif", tmp_path / "study.toml")
+    assert "both" in done.out
+    assert fits(done.out)
 
 
 @pytest.mark.parametrize(

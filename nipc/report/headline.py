@@ -102,7 +102,9 @@ def _row(dataset: xr.Dataset, quantity: str) -> Row:
     if reading.has(dataset, "driver_total") or reading.has(dataset, "driver_first"):
         driver = reading.main_driver(dataset, quantity)
         cells.append(
-            Cell("–", "no spread to share out")
+            Cell("not known", "the shares' intervals are too wide")
+            if driver is None and reading.unknown_shares(dataset, quantity)[-1]
+            else Cell("–", "no spread to share out")
             if driver is None
             else Cell(
                 driver[0],

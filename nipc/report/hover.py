@@ -108,6 +108,7 @@ def _shares(dataset: xr.Dataset, quantity: str) -> list[Line]:
     if shares is None:
         return []
     names, trust = reading.sources(dataset), reading.trust(dataset, quantity)
+    shares = np.where(reading.unknown_shares(dataset, quantity), np.nan, shares)
     return [Line(name, row, "", trust, "percent") for name, row in zip(names, shares, strict=True)]
 
 

@@ -26,5 +26,5 @@ def kind(note: str) -> str:
     """A note without its numbers, short enough for a line of a figure."""
     words = re.sub(r"\([^()]*\)", " ", note)
     words = re.sub(r"\bat degree \d+", " ", words)
-    words = " ".join(re.sub(r"(?<![\w.])[-+]?\d[\d.,]*(e[-+]?\d+)?\s?%?", "…", words).split())
+    words = " ".join(re.sub(r"(?<![\w.])[-+]?\d[\d.,]*(e[-+]?\d+)?(?:\s?%)?", "…", words).split())
     return words if len(words) <= LONGEST else words[: LONGEST - 1].rstrip() + "…"

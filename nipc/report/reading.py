@@ -8,9 +8,13 @@ from typing import Any
 
 import numpy as np
 import xarray as xr
+from numpy.typing import NDArray
 
 from nipc.arrays import FloatArray
 from nipc.report.numbers import pretty_unit
+
+WIDE = 0.6
+"""An interval of a share wider than this says nothing."""
 
 
 def has(dataset: xr.Dataset, name: str) -> bool:
@@ -121,8 +125,23 @@ def shares(dataset: xr.Dataset, name: str, quantity: str) -> FloatArray | None:
     return values if values.size and not bool(np.isnan(values).all()) else None
 
 
+def unknown_shares(dataset: xr.Dataset, quantity: str) -> NDArray[np.bool_]:
+    """(time,) where an interval of some source's share is so wide that shares say nothing."""
+    wide = np.zeros(dataset.sizes["time"], bool)
+    for name in ("driver_first", "driver_total"):
+        low, high = (shares(dataset, name + side, quantity) for side in ("_low", "_high"))
+        if low is not None and high is not None:
+            wide |= np.nan_to_num(high - low).max(axis=0) > WIDE
+    return wide
+
+
 def main_driver(dataset: xr.Dataset, quantity: str) -> tuple[str, float, bool] | None:
-    """The largest share at the end: source, share, and whether it is a total share."""
+    """The largest share at the end: source, share, and whether it is a total share.
+
+    None where there is no spread, or where the shares are not known.
+    """
+    if unknown_shares(dataset, quantity)[-1]:
+        return None
     for name in ("driver_total", "driver_first"):
         found = shares(dataset, name, quantity)
         if found is not None and not np.isnan(found[:, -1]).all():

@@ -54,8 +54,9 @@ def moments(dataset: xr.Dataset, quantity: str) -> Table:
             found.append((f"P({head})", [probability(values[i]) for i in picks]))
     shares = reading.shares(dataset, "driver_total", quantity)
     if shares is not None:
-        names = reading.sources(dataset)
-        found.append(("main driver", [_leader(shares[:, i], names) for i in picks]))
+        names, unknown = reading.sources(dataset), reading.unknown_shares(dataset, quantity)
+        told = ["not known" if unknown[i] else _leader(shares[:, i], names) for i in picks]
+        found.append(("main driver", told))
     unit = reading.time_unit(dataset)
     heads = (f"time ({unit})" if unit else "time", *(head for head, _ in found))
     rows = tuple(
@@ -167,6 +168,12 @@ def exits(dataset: xr.Dataset) -> Table | None:
         ]  # fmt: skip
         driver = reading.series(dataset, "exit_driver_total", quantity)
         leader = "–" if driver is None else _leader(driver, reading.sources(dataset))
+        ends = [
+            reading.series(dataset, f"exit_driver_total_{end}", quantity) for end in ("low", "high")
+        ]
+        if ends[0] is not None and ends[1] is not None:
+            wide = np.nan_to_num(ends[1] - ends[0]).max() > reading.WIDE
+            leader = "not known" if wide and leader != "–" else leader
         rows.append((quantity, *cells, leader + (late if leader != "–" else "")))
     heads = (
         "quantity",

@@ -17,7 +17,7 @@ from matplotlib.figure import Figure
 from matplotlib.text import Text
 
 from nipc.problem.noise import CompletedKarhunenLoeve, KarhunenLoeve
-from nipc.report import figures, save_figures
+from nipc.report import figures, headline, hover, save_figures, tables
 from nipc.report.style import LIGHT
 
 RESULTS = ("slot", "hard", "minimal")
@@ -372,3 +372,23 @@ def test_the_law_is_drawn_with_its_offset(slot: xr.Dataset) -> None:
     known = np.isfinite(law)
     assert known.sum() > 100
     assert law[known] == pytest.approx(0.05 + 2 * 8.5e-3 * times[known])
+
+
+def test_shares_that_are_not_known_are_not_told(slot: xr.Dataset) -> None:
+    """From output 200 on the interval of one source's total share is as good as all of 0 to 1."""
+    wide = slot.copy(deep=True)
+    at = {"quantity": "radius", "source": "radial", "time": slot["time"].values[200:]}
+    wide["driver_total_low"].loc[at] = -2.0
+    wide["driver_total_high"].loc[at] = 3.0
+    assert headline.rows(slot)[0].cells[3].main == "start"
+    assert headline.rows(wide)[0].cells[3].main == "not known"
+    drawn = figures.driver_ranking(wide, "radius")
+    assert "not known" in [text.get_text() for text in drawn.texts]
+    stack = figures.driver_shares(wide, "radius")
+    assert "blank where the shares are not known" in stack.get_xlabel()
+    reach = max(c.get_datalim(stack.transData).x1 for c in stack.collections[:3])
+    assert reach == pytest.approx(slot["time"].values[199])
+    assert "blank" not in figures.driver_shares(wide, "longitude").get_xlabel()
+    found = hover.lines(wide, "driver_shares", "radius")
+    assert np.isnan(np.asarray(found[0].values, float)[200:]).all()
+    assert tables.moments(wide, "radius").rows[-1][-1] == "not known"

@@ -29,7 +29,10 @@ def driver_shares(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) ->
     shares = reading.shares(dataset, "driver_first", quantity)
     if shares is None:
         raise KeyError(f"the result has no driver shares for {quantity!r}")
-    shares = np.clip(shares, 0.0, 1.0)
+    unknown = reading.unknown_shares(dataset, quantity)
+    if unknown.all():
+        raise KeyError(f"no share of {quantity!r} is known to be of use")
+    shares = np.where(unknown, np.nan, np.clip(shares, 0.0, 1.0))
     weight = np.nan_to_num(shares).max(axis=1)
     kept = sorted(np.argsort(-weight, kind="stable")[:LARGEST].tolist())
     rows: list[tuple[str, FloatArray, Patch]] = []
@@ -65,6 +68,8 @@ def driver_shares(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) ->
     ax.set_ylim(0.0, max(1.0, float(np.nanmax(bottom))))
     ax.set_ylabel(textwrap.fill(f"share of the variance of {frame.printable(quantity)}", 30))
     frame.time_axis(ax, dataset)
+    if unknown.any():
+        ax.set_xlabel(f"{ax.get_xlabel()}\nblank where the shares are not known")
     marked = frame.mark_trust(ax, dataset, quantity)
     frame.legend(ax, handles, labels, raised=marked)
     return ax
@@ -104,6 +109,7 @@ def driver_ranking(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -
             lw=0.9,
             zorder=3,
         )
+        shown = float(np.clip(leading[index, -1], 0.0, WIDEST))
         end = _interval(
             ax,
             dataset,
@@ -113,15 +119,15 @@ def driver_ranking(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -
             row,
         )
         ax.annotate(
-            percent(min(float(leading[index, -1]), 1.0)),
-            (min(max(end, leading[index, -1]), WIDEST), row),
+            "not known" if end[1] - end[0] > reading.WIDE else percent(shown),
+            (max(end[1], shown), row),
             xytext=(6, 0),
             textcoords="offset points",
             va="center",
         )
     ax.set_yticks(range(len(order)), [frame.printable(names[i]) for i in order])
     ax.set_ylim(len(order) - 0.4, -0.6)
-    ax.set_xlim(0.0, 1.15)
+    ax.set_xlim(0.0, 1.25)
     ax.set_xticks(np.arange(0.0, 1.01, 0.2))
     ax.grid(False, axis="y")
     trust = reading.trust(dataset, quantity)
@@ -147,13 +153,13 @@ def driver_ranking(dataset: xr.Dataset, quantity: str, ax: Axes | None = None) -
 
 def _interval(
     ax: Axes, dataset: xr.Dataset, quantity: str, name: str, index: int, row: int
-) -> float:
-    """Draw a share's interval; its upper end."""
+) -> tuple[float, float]:
+    """Draw a share's interval; its ends."""
     low = reading.shares(dataset, name + "_low", quantity)
     high = reading.shares(dataset, name + "_high", quantity)
     if low is None or high is None or not np.isfinite(low[index, -1] + high[index, -1]):
-        return 0.0
+        return 0.0, 0.0
     # an estimate of a share may pass one, a share may not
     ends = np.clip([low[index, -1], high[index, -1]], 0.0, WIDEST)
     ax.plot(ends, [row, row], color=LIGHT["edge"], lw=1.5, zorder=4, marker="|", ms=7, mew=1.5)
-    return float(ends[1])
+    return float(ends[0]), float(ends[1])

@@ -105,6 +105,9 @@ class ChainBuilder:
                 stopped = built.record.note
                 break
             arc = built.map
+            self.steering = self.steering.passed(
+                horizon.share(arc.first, arc.last), built.record.error
+            )
             rows, inside = horizon.output_rows(arc), horizon.inner_times(arc)
             pool = horizon.advance(arc, pool, horizon.history, 0, built.record.direct)[1]
             steps, chained = horizon.advance(arc, chained, self.checked, 0, study.check.runs)

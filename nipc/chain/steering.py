@@ -1,7 +1,8 @@
 """What is done next with an arc: accept it, raise its degree, halve it; and how long the next is.
 
-The tolerance is for the horizon. Errors of successive arcs add up like independent ones, so an arc
-that covers a share s of the horizon may have sqrt(s) of it.
+The tolerance is for the horizon. Errors of successive arcs add up like independent ones, so what is
+left of its square is shared out evenly over what is left of the horizon: early arcs, where the
+spread is small and the flow nearly linear, leave more to late ones.
 """
 
 from __future__ import annotations
@@ -14,6 +15,7 @@ from nipc.chain.ticks import TICKS
 from nipc.problem.study import ChainSettings
 
 USELESS = 0.5  # a held-out error of half the spread: the arc's polynomial says nothing
+LEAST_LEFT = 0.1  # of the tolerance's square, whatever the arcs so far have used of it
 NO_GAIN = 0.7  # a step that leaves more of the error than this was not worth its runs
 EASY = 0.2  # of the tolerance: an arc this good may be longer
 DEARER = (
@@ -76,6 +78,8 @@ class Steering:
     length: int = TICKS
     rested: bool = True
     known: tuple[tuple[int, int], ...] = ()  # (length, runs) of the last arcs of other lengths
+    done: float = 0.0  # share of the horizon
+    spent: float = 0.0  # sum of the squares of the errors so far
 
     @classmethod
     def of(cls, settings: ChainSettings, tolerance: float) -> Steering:
@@ -92,8 +96,15 @@ class Steering:
         return isinstance(self.settings.state_degree, int)
 
     def allowed(self, share: float) -> float:
-        """Held-out error allowed to an arc that covers this share of the horizon."""
-        return self.settings.arc_tolerance or self.tolerance * math.sqrt(share)
+        """Held-out error allowed to the next arc, which covers this share of the horizon."""
+        if self.settings.arc_tolerance is not None:
+            return self.settings.arc_tolerance
+        left = max(self.tolerance**2 - self.spent, LEAST_LEFT * self.tolerance**2)
+        return math.sqrt(left * min(1.0, share / max(1.0 - self.done, share)))
+
+    def passed(self, share: float, error: float) -> Steering:
+        """After an arc of this share and held-out error."""
+        return replace(self, done=self.done + share, spent=self.spent + error**2)
 
     def span(self, at: int, end: int) -> int:
         """Last tick of an arc that starts at tick `at` and must not pass tick `end`."""

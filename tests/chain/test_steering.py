@@ -74,6 +74,10 @@ def test_lengths_follow_ease_and_cost():
 
 def test_the_tolerance_of_an_arc_is_its_part_of_the_horizons():
     assert FREE.allowed(0.25) == pytest.approx(0.005)
+    # half way and nothing used: a quarter of the horizon is half of what is left
+    assert FREE.passed(0.5, 0.0).allowed(0.25) == pytest.approx(0.01 * 0.5**0.5)
+    # all used: a tenth of the square is left
+    assert FREE.passed(0.5, 0.02).allowed(0.25) == pytest.approx(0.01 * 0.05**0.5)
     assert replace(FREE, settings=ChainSettings(arc_tolerance=1e-3)).allowed(0.25) == 1e-3
 
 

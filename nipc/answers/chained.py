@@ -9,7 +9,7 @@ import numpy as np
 from nipc.answers.bands import add_bands
 from nipc.answers.chain_linear import ChainLinear
 from nipc.answers.drivers import PickFreezeAccumulator
-from nipc.answers.ensemble import add_ensemble
+from nipc.answers.ensemble import CLOUD, add_ensemble, cloud_rows
 from nipc.answers.evidence import add_degree_norms, add_noise_bases, degree_norms
 from nipc.answers.exits import ExitDrivers
 from nipc.answers.intervals import Interval, normal_factor
@@ -33,6 +33,7 @@ class ChainAnswers:
         self.horizon, self.chain, self.quantities = horizon, chain, quantities
         self.times = horizon.outputs
         self.groups = horizon.germ.groups()
+        self.cloud = np.empty((0, 0, 0))  # chart values of the first members at some times
         self.ensemble_lost = 0
         self.lost = 0.0  # share of the members asked for last that ended far outside the designs
         self.outside: BoolArray = np.zeros(0, dtype=bool)  # which of them
@@ -70,6 +71,8 @@ class ChainAnswers:
         if direct and block == 0 and (beyond := self.chain.continued) is not None:
             some = min(count, beyond.values.shape[0])
             values[:some, beyond.rows] = beyond.values[:some]
+        if direct and block == 0:
+            self.cloud = values[:CLOUD, cloud_rows(self.times)]
         return self.of_values(values, members.parameters)
 
     def plain(self) -> Iterator[tuple[FloatArray, None]]:
@@ -90,6 +93,7 @@ class ChainAnswers:
         rms = np.nan_to_num(check.rms)
         trust = check.trust_horizon(study.tolerance)
         moments = add_ensemble(table, self.plain(), normal_factor() * rms, trust)
+        self._cloud(table)
         std = moments.std
         held = HeldOut(self.times, check.direct, check.predicted, std)
         add_check(table, held, self._first_block(), study)
@@ -180,6 +184,18 @@ class ChainAnswers:
         table.by_driver(
             "driver_total", result.total, "total share of the variance", result.total_interval
         )
+
+    def _cloud(self, table: ResultTable) -> None:
+        """Some members in the chart's own components, at some times."""
+        table.add(
+            "cloud_chart",
+            ("cloud_member", "component", "cloud_time"),
+            np.swapaxes(self.cloud, 1, 2),
+            "as the component",
+            "members of the ensemble in the chart in which they are expanded",
+        )
+        names = list(self.horizon.chart.components)
+        table.variables["component"] = (("component",), names, {"units": ""})
 
     def _linear(self, table: ResultTable, check: HeldOut) -> None:
         """Share of the variance beyond degree one; which frequencies of noise drive the rest."""

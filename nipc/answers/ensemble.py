@@ -13,7 +13,7 @@ from nipc.answers.moments import MomentAccumulator
 from nipc.answers.quantiles import QuantileAccumulator
 from nipc.answers.slow import SlowSpreading
 from nipc.answers.table import LEVELS, ResultTable
-from nipc.arrays import FloatArray
+from nipc.arrays import FloatArray, IntArray
 from nipc.problem.study import Study
 
 SHOWN = 60  # members whose whole paths are kept
@@ -29,6 +29,12 @@ def boxes_of(study: Study) -> tuple[list[Box], list[Box]]:
     }
     joint = [Box.joint(j.name, [single[n] for n in j.quantities]) for j in study.joint_box]
     return list(single.values()), joint
+
+
+def cloud_rows(times: FloatArray) -> IntArray:
+    """Which output times a cloud of members is kept at: even steps, the last among them."""
+    step = max(1, -(-times.size // CLOUD_TIMES))
+    return np.arange(times.size - 1, -1, -step)[::-1]
 
 
 def add_ensemble(
@@ -50,7 +56,7 @@ def add_ensemble(
     quantiles, moments = QuantileAccumulator(), MomentAccumulator()
     slow = SlowSpreading(times, [study.clock.period if q.slow else 0.0 for q in study.quantity])
     shown: FloatArray | None = None
-    at = np.arange(times.size - 1, -1, -max(1, -(-times.size // CLOUD_TIMES)))[::-1]
+    at = cloud_rows(times)
     for values, ended in blocks:
         confinement.update(values, ended)
         quantiles.update(values)

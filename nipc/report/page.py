@@ -23,7 +23,7 @@ PAIRED = ("driver_shares", "driver_ranking")
 SCRIPTS = ("clock.js", "chart.js", "panel.js")
 
 SECTIONS = (
-    ("spread", "Where it goes", ("bands", "density")),
+    ("spread", "Where it goes", ("bands", "density", "chart_density")),
     ("stays", "Stays or leaves", ("confinement", "joint_confinement")),
     ("drivers", "What drives it", ("driver_shares", "driver_ranking", "driver_bands")),
     (

@@ -36,7 +36,8 @@ def test_a_result_fills_the_figures_it_can(
     slot: xr.Dataset, hard: xr.Dataset, minimal: xr.Dataset
 ) -> None:
     names = {entry.name for entry in figures.catalogue(slot)}
-    assert names == set(figures.__all__) - {"Entry", "catalogue"}
+    # the chart's plane is for results of a single quantity
+    assert names == set(figures.__all__) - {"Entry", "catalogue", "chart_density"}
     assert "confinement" not in {entry.name for entry in figures.catalogue(hard)}  # it has no box
     assert [(e.name, e.quantity) for e in figures.catalogue(minimal)] == [
         ("bands", "position"),
@@ -392,3 +393,26 @@ def test_shares_that_are_not_known_are_not_told(slot: xr.Dataset) -> None:
     found = hover.lines(wide, "driver_shares", "radius")
     assert np.isnan(np.asarray(found[0].values, float)[200:]).all()
     assert tables.moments(wide, "radius").rows[-1][-1] == "not known"
+
+
+def test_one_quantity_has_the_plane_of_the_chart(minimal: xr.Dataset) -> None:
+    """Two components that spread, a third that does not: points where the members are."""
+    rng = np.random.default_rng(8)
+    cloud = np.stack([rng.standard_normal((80, 5)), 3.0 + rng.standard_normal((80, 5))], axis=1)
+    cloud = np.concatenate([cloud, np.ones((80, 1, 5))], axis=1)
+    told = minimal.assign(
+        cloud_chart=(("cloud_member", "component", "cloud_time"), cloud),
+        component=["p", "q", "still"],
+        cloud_time=np.linspace(0.0, 10.0, 5),
+    )
+    entry = next(e for e in figures.catalogue(told) if e.name == "chart_density")
+    assert entry.of == ("p", "q")
+    ax = entry.draw()
+    assert (ax.get_xlabel(), ax.get_ylabel()) == ("p", "q")
+    # never checked against direct runs: each time is marked
+    assert labels_of(ax) == ["2.5\u202fs‡", "5\u202fs‡", "7.5\u202fs‡", "10\u202fs‡"]
+    assert ax.lines[-1].get_ydata()[:3] == pytest.approx(cloud[:3, 1, -1])
+    with pytest.raises(KeyError, match="no component 'z'; there are p, q, still"):
+        figures.chart_density(told, "p", "z")
+    with pytest.raises(KeyError, match="no members in a chart"):
+        figures.chart_density(minimal, "p", "q")

@@ -9,7 +9,7 @@ from nipc.report.figures.catalogue import Entry, catalogue
 from nipc.report.figures.chain import chain
 from nipc.report.figures.confinement import confinement, joint_confinement
 from nipc.report.figures.decay import coefficient_decay
-from nipc.report.figures.density import density
+from nipc.report.figures.density import chart_density, density
 from nipc.report.figures.drivers import driver_ranking, driver_shares
 from nipc.report.figures.failures import failure_places, failures
 from nipc.report.figures.frequencies import driver_bands
@@ -23,6 +23,7 @@ __all__ = [
     "bands",
     "catalogue",
     "chain",
+    "chart_density",
     "check_error",
     "coefficient_decay",
     "confinement",

@@ -16,7 +16,7 @@ from nipc.report.figures.bands import bands
 from nipc.report.figures.chain import chain
 from nipc.report.figures.confinement import confinement, joint_confinement
 from nipc.report.figures.decay import coefficient_decay
-from nipc.report.figures.density import density, ensemble
+from nipc.report.figures.density import chart_density, density, ensemble, spreading_components
 from nipc.report.figures.drivers import driver_ranking, driver_shares
 from nipc.report.figures.failures import failure_places, failures
 from nipc.report.figures.frequencies import band_parts, driver_bands
@@ -168,6 +168,12 @@ def _joints(dataset: xr.Dataset) -> Iterator[Entry]:
 def _pairs(dataset: xr.Dataset) -> Iterator[Entry]:
     """Neighbouring quantities against each other; those that do not spread have no picture."""
     names = [q for q in reading.quantities(dataset) if _fills(dataset, "diffusion", q)]
+    if len(names) < 2:  # one quantity has no plane, the chart has
+        for x, y in list(pairwise(spreading_components(dataset)))[:1]:
+            words = (
+                f"Members in the plane of the chart's {x} and {y}; the lines hold the densest 90 %."
+            )
+            yield Entry("chart_density", (x, y), words, partial(chart_density, dataset, x, y))
     if ensemble(dataset) is None:
         return
     for x, y in list(pairwise(names))[:PAIRS]:

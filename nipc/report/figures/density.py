@@ -39,17 +39,87 @@ def density(
     if found is None:
         raise KeyError("the result keeps no ensemble")
     values, kept = found
-    names = [reading.position(dataset, name) for name in (horizontal, vertical)]
+    columns = [reading.position(dataset, name) for name in (horizontal, vertical)]
     trusts = [reading.trust(dataset, name) for name in (horizontal, vertical)]
+    ax = frame.new_axes(ax, height=4.2)
+    clouds = [values[:, column] for column in columns]
+    handles, labels = _clouds(ax, dataset, clouds, kept, trusts, times)
+    for edges, draw in (
+        (reading.box(dataset, horizontal), ax.axvline),
+        (reading.box(dataset, vertical), ax.axhline),
+    ):
+        low, high = ax.get_xlim() if draw == ax.axvline else ax.get_ylim()
+        for edge in edges.edges if edges is not None else []:
+            if low <= edge <= high:
+                draw(edge, color=LIGHT["edge"], lw=1.3, ls=(0, (7, 2, 1.5, 2)))
+    frame.value_axis(ax, frame.printable(vertical), reading.unit(dataset, vertical))
+    frame.value_axis(ax, frame.printable(horizontal), reading.unit(dataset, horizontal), "x")
+    ax.locator_params(axis="x", nbins=6)
+    frame.legend(ax, handles, labels)
+    return ax
+
+
+@drawn
+def chart_density(
+    dataset: xr.Dataset,
+    horizontal: str,
+    vertical: str,
+    times: Sequence[float] | None = None,
+    ax: Axes | None = None,
+) -> Axes:
+    """As `density`, in two components of the chart in which a chain is expanded.
+
+    Trusted as long as every quantity is.
+    """
+    if not reading.has(dataset, "cloud_chart"):
+        raise KeyError("the result keeps no members in a chart")
+    names = [str(name) for name in dataset["component"].values]
+    missing = [name for name in (horizontal, vertical) if name not in names]
+    if missing:
+        raise KeyError(f"no component {missing[0]!r}; there are {', '.join(names)}")
+    cloud = dataset["cloud_chart"].transpose("cloud_member", "component", "cloud_time").values
+    kept = np.asarray(dataset["cloud_time"].values, float)
+    ax = frame.new_axes(ax, height=4.2)
+    clouds = [cloud[:, names.index(name)] for name in (horizontal, vertical)]
+    keys = _clouds(ax, dataset, clouds, kept, [reading.trust(dataset, None)], times)
+    frame.value_axis(ax, frame.printable(vertical), "")
+    frame.value_axis(ax, frame.printable(horizontal), "", "x")
+    ax.locator_params(axis="x", nbins=6)
+    frame.legend(ax, *keys)
+    return ax
+
+
+def spreading_components(dataset: xr.Dataset) -> list[str]:
+    """Components of the chart in which the kept members differ at the last time."""
+    if not reading.has(dataset, "cloud_chart"):
+        return []
+    last = (
+        dataset["cloud_chart"].transpose("component", "cloud_member", "cloud_time").values[..., -1]
+    )
+    return [
+        str(name)
+        for name, values in zip(dataset["component"].values, last, strict=True)
+        if np.isfinite(values).any() and np.nanstd(values) > 1e-12 * np.nanmax(np.abs(values))
+    ]
+
+
+def _clouds(
+    ax: Axes,
+    dataset: xr.Dataset,
+    clouds: Sequence[FloatArray],
+    kept: FloatArray,
+    trusts: Sequence[reading.Trust],
+    times: Sequence[float] | None,
+) -> tuple[list[Line2D], list[str]]:
+    """Points and lines of x and y (member, time) at some times, and their keys."""
     if times is None:
         trusted = min(trust.distribution for trust in trusts)
         last = trusted if kept[0] < trusted < kept[-1] else kept[-1]
         times = np.linspace(kept[0], kept[kept <= last][-1], 5)[1:].tolist()
-    ax = frame.new_axes(ax, height=4.2)
     handles, labels, unit = [], [], reading.time_unit(dataset)
     for row, time in enumerate(times):
         index, hand = int(np.argmin(np.abs(kept - time))), line_stroke(row)
-        x, y = (values[:, name, index] for name in names)
+        x, y = (cloud[:, index] for cloud in clouds)
         good = np.isfinite(x) & np.isfinite(y)
         x, y = x[good], y[good]
         ax.plot(
@@ -66,19 +136,7 @@ def density(
         mark = max(trust.mark(float(kept[index])) for trust in trusts)
         handles.append(Line2D([], [], color=hand.colour, ls=hand.dash, marker=hand.marker, ms=4))
         labels.append(amount(float(kept[index]), unit, 4) + mark)
-    for edges, draw in (
-        (reading.box(dataset, horizontal), ax.axvline),
-        (reading.box(dataset, vertical), ax.axhline),
-    ):
-        low, high = ax.get_xlim() if draw == ax.axvline else ax.get_ylim()
-        for edge in edges.edges if edges is not None else []:
-            if low <= edge <= high:
-                draw(edge, color=LIGHT["edge"], lw=1.3, ls=(0, (7, 2, 1.5, 2)))
-    frame.value_axis(ax, frame.printable(vertical), reading.unit(dataset, vertical))
-    frame.value_axis(ax, frame.printable(horizontal), reading.unit(dataset, horizontal), "x")
-    ax.locator_params(axis="x", nbins=6)
-    frame.legend(ax, handles, labels)
-    return ax
+    return handles, labels
 
 
 def ensemble(dataset: xr.Dataset) -> tuple[FloatArray, FloatArray] | None:

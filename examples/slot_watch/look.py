@@ -9,12 +9,13 @@
 # %%
 from pathlib import Path
 
-from matplotlib.figure import Figure
+import matplotlib.pyplot as plt
 
 import nipc
 from nipc.report import figures
 
-study = nipc.load_study(Path(__file__).with_name("study.toml"))
+here = Path(globals().get("__file__", "look.ipynb")).parent  # a notebook is at home in its folder
+study = nipc.load_study(here / "study.toml")
 study
 
 # %% [markdown]
@@ -46,8 +47,7 @@ print(f"trusted to day {data['trust_horizon'].item():g} of {study.clock.end:g}")
 # Figures are functions from the data set to matplotlib's axes, so that they can stand together.
 
 # %%
-figure = Figure(figsize=(13, 8), layout="constrained")
-axes = figure.subplots(2, 2)
+figure, axes = plt.subplots(2, 2, figsize=(13, 8), layout="constrained")
 figures.bands(result.dataset, "longitude", ax=axes[0, 0])
 figures.confinement(result.dataset, "longitude", ax=axes[0, 1])
 figures.driver_shares(result.dataset, "longitude", ax=axes[1, 0])

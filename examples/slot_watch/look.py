@@ -53,7 +53,6 @@ figures.confinement(result.dataset, "longitude", ax=axes[0, 1])
 figures.driver_shares(result.dataset, "longitude", ax=axes[1, 0])
 figures.density(result.dataset, "radius", "longitude", ax=axes[1, 1])
 figure.savefig(result.folder / "look.png", dpi=120)
-figure
 
 # %% [markdown]
 # What would a thruster do that leaks half as much? The expansions answer, nothing is run.

@@ -23,6 +23,7 @@ class Notebook:
 
     def __init__(self) -> None:
         self._journey = Journey()
+        self._label, self._total, self._rate = "", 0, Rate(0)
         self._handle: Any = None
         self._last = -1.0
 
@@ -55,12 +56,13 @@ class Notebook:
     def markup(self) -> str:
         """What is shown; names are escaped."""
         done = self._total - self._rate.left
-        words = f"{self._label}: {done} of {self._total} runs, {self._rate}"
+        # arcs whose runs are all kept are told without a batch
+        words = f"{self._label}: {done} of {self._total} runs, {self._rate}" if self._total else ""
         share, arc = done / max(self._total, 1), self._journey.arc
         if arc is not None:
             share = arc.share
             left = self._journey.seconds_left
             known = f", {duration(left)} left" if left is not None and share < 1.0 else ""
-            words = f"{arc.place}{known}; {arc}; {words}"
+            words = f"{arc.place}{known}; {arc}" + (f"; {words}" if words else "")
         bar = f'<progress value="{share:.4f}" max="1" style="width:12em"></progress>'
         return f"<div>{bar} <small>{html.escape(words)}</small></div>"

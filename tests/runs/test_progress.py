@@ -145,6 +145,19 @@ def test_a_notebook_rewrites_one_line(monkeypatch):
     assert not any("<i>" in line or "<b>" in line for line in shown)
 
 
+def test_arcs_whose_runs_are_all_kept_are_told_without_a_batch():
+    told = Notebook()
+    told._handle = types.SimpleNamespace(update=lambda line: None)
+    told._journey.hear(arcs(28)[-1])
+    assert "t = 14 of 28 day; arc 28: degree 2, 24 runs, error 0.12 %</small>" in told.markup()
+    out = io.StringIO()
+    Bar(Console(file=out, width=100)).arc(arcs(1)[0])
+    Bar(Console(file=out, width=100)).arc(arcs(1, "halved")[0])
+    assert out.getvalue().strip() == (
+        "t = 0.5 of 28 day: arc 1: degree 2, 24 runs, error 0.12 %, halved"
+    )
+
+
 def test_python_is_silent_outside_a_notebook():
     assert isinstance(usual(), Silent)
 

@@ -138,5 +138,3 @@ class ArcMap:
 
 WRONG = 0.3
 """An error over the spread with which a member is better run directly."""
-REACH = 4.0
-"""Christoffel function over its largest value in a design, beyond which one arc is extrapolated."""

@@ -6,7 +6,7 @@ A test takes the fixture `published` and calls
               rel=1e-10)
 
 which asserts that the first agrees with the second, element by element, and enters a row. A value
-recalled has "(from memory)" behind its source; a fact of the trade has "common practice, no source".
+recalled has "(from memory)" behind its source; a fact of the trade "common practice, no source".
 
     python -m pytest tests/published -m "" --published-table
 

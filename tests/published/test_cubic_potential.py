@@ -1,7 +1,7 @@
 """The Hamiltonian of Henon & Heiles 1964 (Astronomical Journal 69, 73).
 
-H = (px^2 + py^2 + x^2 + y^2) / 2 + x^2 y - y^3 / 3. Motion is regular at E = 1/12, mixed at 1/8, and
-may escape above 1/6. The paper's statements, from memory.
+H = (px^2 + py^2 + x^2 + y^2) / 2 + x^2 y - y^3 / 3. Motion is regular at E = 1/12, mixed at 1/8,
+and may escape above 1/6. The paper's statements, from memory.
 """
 
 from __future__ import annotations

@@ -1,7 +1,7 @@
 """The slot watch's dynamics against what handbooks tell of the geostationary belt.
 
 Values from memory, after Soop 1994, Handbook of Geostationary Orbits: radius 42164.2 km, stable
-points near 75.1 E and 105.3 W, an acceleration of the mean longitude of some 1.7e-3 deg/day^2 at most.
+points near 75.1 E and 105.3 W, an acceleration of the mean longitude of at most 1.7e-3 deg/day^2.
 With J22 alone the stable points are exactly 90 degrees from its axis; higher terms move them by
 some tenths of a degree.
 """

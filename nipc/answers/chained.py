@@ -235,6 +235,7 @@ class ChainAnswers:
             ("failed", "1", "of them failed"),
             ("direct", "1", "members of the arc's pool that were run directly, being far outside"),
             ("error", "1", "held-out error at the arc's end over the spread there"),
+            ("allowed", "1", "held-out error that the arc might have"),
             ("note", "", "why the arc is as it is"),
         ):
             values = [getattr(r, name) for r in records]

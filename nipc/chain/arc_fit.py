@@ -9,11 +9,13 @@ import numpy as np
 
 from nipc.arrays import FloatArray
 from nipc.chain.arc import ArcBasis, ArcMap
+from nipc.chain.grid_design import grid_of
 from nipc.chain.history import BLOCK, NoiseHistory
 from nipc.chain.horizon import Horizon, Members
 from nipc.errors import FitError
 from nipc.expansion import TensorBasis, christoffel_weights, least_squares, near_optimal_subset
 
+REPLACED = 2  # times that failed runs of a design are replaced
 GUESS = 0.3  # relative size of a noise variable before any arc has told it
 
 
@@ -71,6 +73,7 @@ class ArcFit:
         self._known = self.truth[good, -1]
         self.nodes = np.empty((0, self.candidates.shape[1]))
         self.outputs = np.empty((0, self.times.size * self.truth.shape[2]))
+        self._unusable = self.nodes
         self.runs = self.failed = 0
 
     def trial(self, degree: int, sizes: FloatArray | None) -> Trial:
@@ -99,22 +102,45 @@ class ArcFit:
         return Trial(replace(arc, error=error), error, lower, spread)
 
     def _extend(self, basis: TensorBasis) -> None:
-        """Add nodes, chosen beside those that are there, and run them."""
-        wanted = max(math.ceil(self.study.chain.oversampling * basis.n_terms), basis.n_terms + 4)
-        wanted -= self.nodes.shape[0]
-        if wanted <= 0:
-            return
-        rng = np.random.default_rng([self.study.seed, self.first, self.last, self.runs])
-        taken = self.nodes if self.nodes.shape[0] else None
-        rows = near_optimal_subset(basis, self.candidates, wanted, rng, taken).rows
-        white = self.candidates[rows, self.width :]
-        values, good = self.horizon.run(
-            self.pool.take(self.rows[rows]), self.model, white, self.times, f"{self.label}, design"
-        )
-        self.runs += wanted
-        self.failed += int((~good).sum())
-        self.nodes = np.vstack([self.nodes, self.candidates[rows][good]])
-        self.outputs = np.vstack([self.outputs, values[good].reshape(int(good.sum()), -1)])
+        """Add nodes, chosen beside those that are there, and run them.
+
+        Where runs fail others near by take their place, twice over if need be.
+        """
+        needed = max(math.ceil(self.study.chain.oversampling * basis.n_terms), basis.n_terms + 4)
+        for attempt in range(1 + REPLACED):
+            missing = needed - self.nodes.shape[0]
+            if missing <= 0:
+                return
+            rng = np.random.default_rng([self.study.seed, self.first, self.last, self.runs])
+            taken = self.nodes if self.nodes.shape[0] else None
+            members, candidates = self._offered(basis, missing, attempt)
+            rows = near_optimal_subset(basis, candidates, missing, rng, taken).rows
+            nodes, some = candidates[rows], members.take(rows)
+            values, good = self.horizon.run(
+                some, self.model, nodes[:, self.width :], self.times, f"{self.label}, design",
+                lenient=attempt > 0,
+            )  # fmt: skip
+            self.runs += missing
+            self.failed += int((~good).sum())
+            self.nodes = np.vstack([self.nodes, nodes[good]])
+            self.outputs = np.vstack(
+                [self.outputs, values[good].reshape(int(good.sum()), self.outputs.shape[1])]
+            )
+            self._unusable = np.vstack([self._unusable, nodes[~good]])
+
+    def _offered(self, basis: TensorBasis, wanted: int, attempt: int) -> tuple[Members, FloatArray]:
+        """Members and candidate nodes: a sparse grid's where the study asks, or the pool's."""
+        if self.study.design.kind == "sparse-grid" and attempt == 0:
+            level = max(1, int(basis.indices.sum(axis=1).max()))
+            grid = grid_of(self.pool, self.candidates.shape[1] - self.width, level)
+            if grid is not None and grid.candidates.shape[0] >= wanted:
+                return grid
+        if not self._unusable.shape[0]:
+            return self.pool.take(self.rows), self.candidates
+        # the same node would fail again
+        failed = {row.tobytes() for row in self._unusable}
+        kept = np.array([row.tobytes() not in failed for row in self.candidates])
+        return self.pool.take(self.rows[kept]), self.candidates[kept]
 
     def _fit(self, basis: TensorBasis, degree: int) -> tuple[ArcMap, FloatArray]:
         matrix = basis.evaluate(self.nodes)

@@ -15,6 +15,7 @@ from nipc.chain.horizon import Horizon, Members
 from nipc.chain.records import ArcRecord
 from nipc.chain.steering import Done, Steering, Step, Tried
 from nipc.chain.ticks import TICKS
+from nipc.errors import FitError
 
 POOL = 16384  # members from which designs are picked: the more, the fewer lie outside them
 KEPT_FOR_DIRECT = 0.3  # of a budget that the arcs would overdraw, for going on by direct runs
@@ -97,7 +98,11 @@ class ChainBuilder:
         while at < horizon.end:
             if stopped := self._overdrawn(records):
                 break
-            built = self._arc_or_kept(at, pool, direct, before)
+            try:
+                built = self._arc_or_kept(at, pool, direct, before)
+            except FitError as error:  # too many runs failed
+                stopped = str(error)
+                break
             records.append(built.record)
             if self.told is not None:
                 self.told(records)
@@ -227,6 +232,7 @@ class ChainBuilder:
         record = ArcRecord(
             float(horizon.ticks[at]), float(horizon.ticks[last]), best.degree,
             best.map.basis.n_terms, fit.runs, best.error, "; ".join(words), fit.failed, beyond,
+            allowed,
         )  # fmt: skip
         if step is Step.STOP:
             return _Built(None, replace(record, note=reason, direct=0), fit.truth)

@@ -204,37 +204,50 @@ class Horizon:
     ) -> tuple[FloatArray, BoolArray]:
         """Chart values (n, m, d) at the arc's times by direct runs, and which are usable (n,).
 
-        When `lenient`, all of them may fail.
+        When `lenient`, all of them may fail. Members without a finite state, whose run of an
+        earlier arc failed, are not run.
         """
+        known = np.isfinite(members.values).all(axis=1)
+        if not known.all():
+            values = np.full((known.size, times.size, members.values.shape[1]), np.nan)
+            usable = np.zeros(known.size, dtype=bool)
+            rows = np.flatnonzero(known)
+            if rows.size:
+                some = self.run(members.take(rows), model, white[rows], times, label, lenient)
+                values[rows], usable[rows] = some
+            return values, usable
         start = model.start
         grid = np.concatenate([[start], times])
         states = self.chart.to_state(members.values, start * self.chart_time)
         forcing = model.realise(self.forcing_columns(model, members.carried, white))
         batch = Batch(states, grid, forcing, members.parameters)
-        self._count(batch)
+        new = self._new(batch)
         policy = self.engine.policy
         self.engine.policy = replace(policy, tolerated=1.0) if lenient else policy
         try:
             outcomes = self.engine.run(batch, label)
         finally:
             self.engine.policy = policy
-        self.outcomes.append(replace(outcomes, states=outcomes.states[:, :0]))
+        self.outcomes.append(outcomes.account(new))
         with np.errstate(invalid="ignore"):
             values = self.chart.from_state(outcomes.states, grid * self.chart_time)
         good: BoolArray = np.asarray(np.isfinite(values).all(axis=(1, 2)))
         values[good] = self.chart.unwrap(values[good], grid * self.chart_time, members.values[good])
         return values[:, 1:], good
 
-    def _count(self, batch: Batch) -> None:
-        """Add to the cost what has not been asked for before, in this session or an earlier one."""
+    def _new(self, batch: Batch) -> IntArray:
+        """The runs that this chain has not asked for before; they are added to the cost."""
         common = batch.forcing.digest() + batch.times.tobytes()
         share = (batch.times[-1] - batch.times[0]) / self.study.clock.length
         columns = (batch.states, batch.forcing.coefficients, batch.parameters)
-        for row in np.hstack(columns):
+        new = []
+        for place, row in enumerate(np.hstack(columns)):
             key = hashlib.blake2b(common + row.tobytes(), digest_size=16).digest()
             if key not in self._known:
                 self._known.add(key)
-                self.cost += float(share)
+                new.append(place)
+        self.cost += float(share) * len(new)
+        return np.array(new, dtype=np.int64)
 
     def advance(
         self,

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass
 from pathlib import Path
@@ -14,8 +15,8 @@ FILE_NAME = "arcs.json"
 class ArcRecord:
     """Why an arc is as it is.
 
-    `error` is held out, at the arc's end, over the spread there; `runs` are the design's, `failed`
-    of them gave nothing; `direct` members of the pool were run directly.
+    `error` is held out, at the arc's end, over the spread there, `allowed` what it might be; `runs`
+    are the design's, `failed` of them gave nothing; `direct` members of the pool were run directly.
     """
 
     start: float
@@ -27,6 +28,7 @@ class ArcRecord:
     note: str
     failed: int = 0
     direct: int = 0
+    allowed: float = math.nan
 
 
 def write_records(folder: Path, records: Sequence[ArcRecord]) -> None:

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from nipc.arrays import BoolArray, FloatArray
+from nipc.arrays import BoolArray, FloatArray, IntArray
 from nipc.runs.failures import FailureReport, report
 from nipc.runs.propagator import Batch
 from nipc.runs.record import Record
@@ -33,6 +33,14 @@ class Outcomes:
 
     def __len__(self) -> int:
         return int(self.ok.size)
+
+    def account(self, rows: IntArray) -> Outcomes:
+        """What became of some of the runs, without their states; the report stays the batch's."""
+        return Outcomes(
+            self.states[rows, :0], self.ok[rows], self.ended[rows],
+            tuple(self.reasons[r] for r in rows), tuple(self.kinds[r] for r in rows),
+            self.reused[rows], self.seconds[rows], self.failures,
+        )  # fmt: skip
 
 
 class Gathering:

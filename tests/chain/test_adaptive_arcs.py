@@ -138,11 +138,71 @@ def test_far_members_are_run_or_told(tmp_path):
 
 
 def test_records_survive_and_are_grouped(tmp_path):
-    record = ArcRecord(0.0, 1.0, 1, 15, 21, 1e-4, "")
-    other = ArcRecord(1.0, 2.0, 1, 15, 21, 2e-4, "")
-    raised = ArcRecord(2.0, 3.0, 2, 40, 56, 1e-3, "halved at degree 3 (4.0% off)", 1, 2)
+    record = ArcRecord(0.0, 1.0, 1, 15, 21, 1e-4, "", allowed=1e-3)
+    other = ArcRecord(1.0, 2.0, 1, 15, 21, 2e-4, "", allowed=1e-3)
+    raised = ArcRecord(2.0, 3.0, 2, 40, 56, 1e-3, "halved at degree 3 (4.0% off)", 1, 2, 2e-3)
     write_records(tmp_path, [record, other, raised])
     assert read_records(tmp_path) == [record, other, raised]
     assert [len(group) for group in alike([record, other, raised])] == [2, 1]
     (tmp_path / "arcs.json").write_text("[{")
     assert read_records(tmp_path) == []
+
+
+def test_a_sparse_grid_serves_a_near_gaussian_ensemble(tmp_path):
+    text = STUDY.replace('arcs = "auto"', "arcs = 8") + '[design]\nkind = "sparse-grid"\n'
+    gridded = solved(tmp_path / "grid", text).dataset
+    picked = solved(tmp_path / "pool", STUDY.replace('arcs = "auto"', "arcs = 8")).dataset
+    assert not np.array_equal(gridded["arc_error"].values, picked["arc_error"].values)
+    # the same members by other designs: the arcs' tolerance, not sampling, tells them apart
+    for data in (gridded, picked):
+        assert np.nanmax(data["check_error"].values) < 0.05
+    assert gridded["std"].values[0, 1:] == pytest.approx(picked["std"].values[0, 1:], rel=0.03)
+
+
+def test_a_bent_ensemble_gets_no_grid():
+    from nipc.chain.grid_design import grid_of
+    from nipc.chain.horizon import Members
+
+    rng = np.random.default_rng(3)
+    x = rng.standard_normal((5000, 2))
+    none, still = np.empty((5000, 0)), np.zeros(5000, dtype=bool)
+    grid = grid_of(Members(3.0 + x @ [[2.0, 1.0], [0.0, 0.1]], none, none, none, still), 3, 1)
+    assert grid is not None
+    assert grid.candidates.shape == (11, 5)  # 2 d + 1 nodes of level one in five variables
+    assert grid.members.values.mean(axis=0) == pytest.approx([3.0, 3.0], abs=0.15)
+    x[:, 1] += x[:, 0] ** 2
+    assert grid_of(Members(x, none, none, none, still), 3, 1) is None
+    assert grid_of(Members(x, none, x[:, :1], none, still), 3, 1) is None
+
+
+def test_a_check_member_whose_run_fails_drops_out(tmp_path):
+    """It is not started again from nowhere: the others go on and judge the later arcs."""
+    folder = tmp_path / "failing"
+    folder.mkdir()
+    (folder / "motion.py").write_text(
+        MOTION
+        + """
+
+def wary(t, s, xi, parameters):
+    out = rates(t, s, xi, parameters)
+    out[(t > 6.0) & (s[:, 0] > 1.2)] = np.nan
+    return out
+"""
+    )
+    once = "arcs = 8\nrounds = 0\ndirect_share = 0.0"
+    text = STUDY.replace('arcs = "auto"', once).replace("motion:rates", "motion:wary")
+    (folder / "study.toml").write_text(
+        text.replace("runs = 6", "runs = 40")
+        + """
+[runs]
+tolerated_failures = 0.5
+retries = 0
+"""
+    )
+    data = nipc.run(nipc.load_study(folder / "study.toml"), backend="inline").dataset
+    failed = np.isnan(data["direct_quantity"].values[:, 0]).any(axis=1)
+    assert 0 < failed.sum() < 20
+    # each is one failed run: were it started again there would be one an arc
+    design = data["arc_failed"].values.sum()
+    assert data.attrs["failed_runs"] == failed.sum() + design
+    assert np.isfinite(data["check_error"].values).all()

@@ -17,6 +17,8 @@ from nipc.errors import FitError
 from nipc.expansion.basis import Basis
 from nipc.expansion.fits.least_squares import christoffel_weights
 
+_DETERMINED = 1e-6  # relative size below which nodes do not tell a combination of terms
+
 
 @dataclass(frozen=True)
 class Subset:
@@ -55,7 +57,7 @@ def near_optimal_subset(
     picked: list[IntArray] = []
     left = np.arange(looked_at.size)
     missing = n_runs
-    if taken is not None and 0 < taken.shape[0] < n_terms:
+    if taken is not None and taken.shape[0]:
         first = _complement(basis, taken, matrix, n_runs)
         picked.append(first)
         left = np.setdiff1d(left, first)
@@ -76,10 +78,11 @@ def _pivots(matrix: FloatArray) -> IntArray:
 
 
 def _complement(basis: Basis, taken: FloatArray, matrix: FloatArray, n_runs: int) -> IntArray:
-    """Picks for the terms that the taken nodes leave undetermined."""
+    """Picks for the terms that the taken nodes leave undetermined, however many they are."""
     held = basis.evaluate(taken)
     held *= np.sqrt(christoffel_weights(held))
-    span, _ = qr(held, mode="economic", check_finite=False)
+    directions, sizes, _ = np.linalg.svd(held, full_matrices=False)
+    span = directions[:, sizes > _DETERMINED * sizes[0]]
     rest = matrix - span @ (span.T @ matrix)
-    count = min(n_runs, basis.n_terms - taken.shape[0])
+    count = min(n_runs, basis.n_terms - span.shape[1])
     return _pivots(rest)[:count]

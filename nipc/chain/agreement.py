@@ -48,8 +48,8 @@ class Agreement:
         centre = np.where(known, sample, 0.0).sum(axis=0) / count
         spread = held.spread
         unspread = ~(spread > 0.0)
-        with np.errstate(invalid="ignore", divide="ignore"):
-            direct, predicted = (held.direct - centre) / spread, (held.predicted - centre) / spread
+        scale = np.where(unspread, np.nan, spread)
+        direct, predicted = (held.direct - centre) / scale, (held.predicted - centre) / scale
         mean = _interval(direct - predicted)
         # d sigma / sigma = d sigma^2 / (2 sigma^2)
         std = _interval(0.5 * (direct**2 - predicted**2))

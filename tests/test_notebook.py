@@ -109,3 +109,17 @@ def test_a_result_marks_what_is_past_its_trust_horizon(tmp_path, paths, spread, 
     assert ("do not rely" in words) == (mark == "‡")
     assert "It <em>stays</em>." in words
     assert "halved" in words
+
+
+def test_a_chain_shows_its_arcs(tmp_path):
+    arcs = {
+        "start": [0.0, 1.0], "end": [1.0, 2.0], "degree": [1, 2], "terms": [5, 15], "runs": [9, 21],
+        "error": [1e-3, 2e-3], "note": ["", HOSTILE],
+    }  # fmt: skip
+    data = xr.Dataset({f"arc_{name}": ("arc", values) for name, values in arcs.items()})
+    chain = Result(data.assign(other=("time", [1.0])), tmp_path).chain
+    assert len(chain) == 2
+    assert set(chain.dataset.data_vars) == {f"arc_{name}" for name in arcs}
+    words = read(chain._repr_html_())
+    assert "2 arcs" in words
+    assert HOSTILE in words

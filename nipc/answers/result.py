@@ -75,10 +75,36 @@ class Result:
         half.write_text(text + "\n", encoding="utf-8")
         os.replace(half, self.folder / SUMMARY)
 
+    @property
+    def chain(self) -> ChainView:
+        """The arcs as a table: length, degree, terms, runs, held-out error, and why."""
+        return ChainView(self.dataset)
+
     def _repr_html_(self) -> str:
         from nipc.answers.showing import shown
 
         return shown(self.dataset, self.findings)
+
+
+@dataclass(frozen=True, eq=False)
+class ChainView:
+    """The arcs of a result: a table in a notebook, a data set otherwise."""
+
+    result: xr.Dataset
+
+    @property
+    def dataset(self) -> xr.Dataset:
+        """The variables along `arc`."""
+        along = [n for n, v in self.result.data_vars.items() if v.dims == ("arc",)]
+        return self.result[along]
+
+    def __len__(self) -> int:
+        return int(self.result.sizes.get("arc", 0))
+
+    def _repr_html_(self) -> str:
+        from nipc.answers.showing import shown_arcs
+
+        return shown_arcs(self.result)
 
 
 def load_result(folder: str | Path) -> Result:

@@ -41,6 +41,12 @@ def shown(dataset: xr.Dataset, findings: tuple[str, ...]) -> str:
     return markup.headed(str(dataset.attrs.get("title", "A result")), *parts)
 
 
+def shown_arcs(dataset: xr.Dataset) -> str:
+    """The arcs, a row each."""
+    count = dataset.sizes.get("arc", 0)
+    return markup.headed(f"{count} arc" + "s" * (count != 1), _arcs(dataset))
+
+
 def _end(view: View, name: str) -> float:
     """A variable's value at the end of the horizon, NaN where there is none."""
     if name not in view.data:

@@ -115,6 +115,8 @@ def render(dataset: xr.Dataset) -> str:
         script=Markup("\n".join((templates / name).read_text("utf-8") for name in SCRIPTS)),
         whatif=panel.stored(small),
         remarks=panel.remarks(small),
+        warning=panel.warning(small),
+        whatif_first=panel.first(small),
         light=LIGHT,
         dark=DARK,
         inks=[stroke.ink for stroke in STROKES],

@@ -195,7 +195,7 @@ def remarks(dataset: xr.Dataset) -> list[str]:
             f"With every scale at 1 its standard deviations differ from those above by "
             f"{_at_most(gap)}."
         )
-    said += _error(dataset)
+    said += _error(dataset)[1]
     if panel.left_out:
         said.append(f"{panel.left_out} members that ended early are not in it.")
     said.append(
@@ -205,10 +205,21 @@ def remarks(dataset: xr.Dataset) -> list[str]:
     return said
 
 
-def _error(dataset: xr.Dataset) -> list[str]:
-    """How far members are off at other scales; of which quantities the panel says little."""
+def first(dataset: xr.Dataset) -> int:
+    """The quantity that is asked about first: one that has a box, where there is any."""
+    boxed = [reading.box(dataset, name) is not None for name in reading.quantities(dataset)]
+    return boxed.index(True) if True in boxed else 0
+
+
+def warning(dataset: xr.Dataset) -> str:
+    """What must be known before the panel is used; empty where there is nothing."""
+    return _error(dataset)[0]
+
+
+def _error(dataset: xr.Dataset) -> tuple[str, list[str]]:
+    """How far members are off at other scales: of which quantities much, and of the others."""
     if not reading.has(dataset, "panel_error"):
-        return []
+        return "", []
     tried = dataset["panel_error"].transpose(..., "quantity").values
     worst = np.nanmax(tried.reshape(-1, dataset.sizes["quantity"]), axis=0, initial=0.0)
     far = [
@@ -218,15 +229,13 @@ def _error(dataset: xr.Dataset) -> list[str]:
     ]
     good = worst[worst <= ROUGH]
     words = "At other scales, members differ from the chain itself by "
-    said = []
+    warned = ""
     if far:
-        said.append(
-            f"{words}much of the spread, so do not rely on the panel there: {', '.join(far)}."
-        )
+        warned = f"{words}much of the spread, so do not rely on the panel there: {', '.join(far)}."
         words = "Of the other quantities they differ by "
-    if good.size:
-        said.append(f"{words}{_at_most(float(good.max()))} of the spread where this was tried.")
-    return said
+    if not good.size:
+        return warned, []
+    return warned, [f"{words}{_at_most(float(good.max()))} of the spread where this was tried."]
 
 
 def _phase(dataset: xr.Dataset) -> str:

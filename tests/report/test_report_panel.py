@@ -153,12 +153,20 @@ def test_the_panel_says_of_which_quantities_it_is_rough(slot: xr.Dataset) -> Non
     """Above a tenth of the spread it is not to be relied on; below it says how far it is off."""
     error = np.array([[0.004, 0.3, 0.02], [0.002, 0.1, 0.06]])
     told = slot.assign(panel_error=(("panel_test", "quantity"), error))
-    words = " ".join(panel.remarks(told))
+    words = " ".join([panel.warning(told), *panel.remarks(told)])
     assert "do not rely on the panel there: longitude (30\u202f%)." in words
     assert "Of the other quantities they differ by at most 6\u202f% of the spread" in words
     told = slot.assign(panel_error=(("panel_test", "quantity"), 0.1 * error))
-    words = " ".join(panel.remarks(told))
+    words = " ".join([panel.warning(told), *panel.remarks(told)])
     assert "rely" not in words
     assert "from the chain itself by at most 3\u202f% of the spread" in words
     told = slot.assign(panel_error=(("panel_test", "quantity"), 100 * error))
-    assert "longitude (30 times)" in " ".join(panel.remarks(told))
+    assert "longitude (30 times)" in panel.warning(told)
+
+
+def test_the_panel_opens_on_a_quantity_with_a_box(slot: xr.Dataset) -> None:
+    boxed = [n for n in slot["quantity"].values if np.isfinite(slot["box_low"].sel(quantity=n))]
+    assert str(slot["quantity"].values[panel.first(slot)]) == boxed[0]
+    none = np.full(slot.sizes["quantity"], np.nan)
+    bare = slot.assign(box_low=("quantity", none), box_high=("quantity", none))
+    assert panel.first(bare) == 0

@@ -95,7 +95,7 @@ nipc.panel = (() => {
   };
   const chooser = find("quantity"), said = find("said");
   const edges = { low: find("low"), high: find("high") };
-  let chosen = 0, base = null, now = null, took = 0;
+  let chosen = Number(chooser.value), base = null, now = null, took = 0;
   const bases = [];
   const xAxis = { x: [times[0], end], xLabel: unit ? `time (${unit})` : "time" };
 

@@ -14,7 +14,7 @@ from nipc.answers.evidence import add_degree_norms, add_noise_bases, degree_norm
 from nipc.answers.exits import ExitDrivers
 from nipc.answers.intervals import Interval, normal_factor
 from nipc.answers.separation import add_exponents, chain_logs, worst_error
-from nipc.answers.single import add_check
+from nipc.answers.single import add_check, add_ended
 from nipc.answers.spreading import spread_rate
 from nipc.answers.table import ResultTable
 from nipc.arrays import BoolArray, FloatArray
@@ -35,6 +35,10 @@ class ChainAnswers:
         self.groups = horizon.germ.groups()
         self.cloud = np.empty((0, 0, 0))  # chart values of the first members at some times
         self.ensemble_lost = 0
+        self.ended: FloatArray = np.empty(
+            0
+        )  # when those asked for last ended, NaN where they did not
+        self.all_ended: list[FloatArray] = []
         self.lost = 0.0  # share of the members asked for last that ended far outside the designs
         self.outside: BoolArray = np.zeros(0, dtype=bool)  # which of them
 
@@ -66,23 +70,27 @@ class ChainAnswers:
             granted = horizon.granted(arc, block) if direct else 0
             steps, members = horizon.advance(arc, members, history, block, granted)
             values[:, horizon.output_rows(arc)] = steps[:, horizon.inner_times(arc)]
-        self.outside = members.lost
+        self.outside, self.ended = members.lost, members.ended.copy()
         self.lost = float(members.lost.mean())
         if direct and block == 0 and (beyond := self.chain.continued) is not None:
             some = min(count, beyond.values.shape[0])
             values[:some, beyond.rows] = beyond.values[:some]
+            self.ended[:some] = beyond.ended[:some]
+        values[self.times >= self.ended[:, None]] = np.nan
         if direct and block == 0:
             self.cloud = values[:CLOUD, cloud_rows(self.times)]
         return self.of_values(values, members.parameters)
 
-    def plain(self) -> Iterator[tuple[FloatArray, None]]:
+    def plain(self) -> Iterator[tuple[FloatArray, FloatArray]]:
         """The ensemble, block by block."""
         self.ensemble_lost = 0
+        self.all_ended = []
         streams = self.horizon.streams("a")
         for block, count in blocks_of(self.horizon.study.ensemble.members):
             values = self.members(self.horizon.history, streams, block, count, direct=True)
             self.ensemble_lost += round(self.lost * count)
-            yield values, None
+            self.all_ended.append(self.ended)
+            yield values, self.ended
 
     def table(self) -> ResultTable:
         """All answers of the chain."""
@@ -158,21 +166,26 @@ class ChainAnswers:
         names = ("start", *horizon.germ.parameter_names)
         sources = [s.name for s in horizon.germ.noise.sources]
 
-        def mixed(block: int, count: int) -> Iterator[FloatArray]:
+        def seen(
+            history: NoiseHistory, streams: tuple[str, ...], block: int, count: int
+        ) -> tuple[FloatArray, FloatArray]:
+            values = self.members(history, streams, block, count)
+            return values, self.ended
+
+        def mixed(block: int, count: int) -> Iterator[tuple[FloatArray, FloatArray]]:
             for group in self.groups:
                 if group.kind == "noise":
                     swapped = history.with_stream(sources.index(group.name), "b")
-                    yield self.members(swapped, own, block, count)
+                    yield seen(swapped, own, block, count)
                 else:
                     streams = tuple("b" if name == group.name else "a" for name in names)
-                    yield self.members(history, streams, block, count)
+                    yield seen(history, streams, block, count)
 
         exits = ExitDrivers(horizon.study, [g.name for g in self.groups])
         for block, count in blocks_of(min(horizon.study.ensemble.members, 40_000)):
-            a = self.members(history, own, block, count)
-            b = self.members(other, foreign, block, count)
+            a, b = seen(history, own, block, count), seen(other, foreign, block, count)
             swapped = list(mixed(block, count))
-            shares.update(a, b, swapped)
+            shares.update(a[0], b[0], [values for values, _ in swapped])
             if exits.boxes:
                 exits.update(a, b, swapped)
         if exits.boxes:
@@ -215,13 +228,20 @@ class ChainAnswers:
             add_exponents(table, *found, worst_error(check))
 
     def _tell_endings(self, table: ResultTable) -> None:
-        ended = sum(int(np.isfinite(o.ended).sum()) for o in self.horizon.outcomes)
-        if ended:
-            table.notes.append(
-                f"{ended} runs of arcs ended early for a physical reason. Arcs are fitted without"
-                " them and members go on where such runs end, so that all answers speak of motion"
-                " that goes on: the probability of staying in a box is overstated."
-            )
+        """P(ended by t); the runs that tell of it are few, and widen the probabilities."""
+        seen = self.chain.endings
+        if not seen.ended:
+            return
+        ended = np.concatenate(self.all_ended)
+        share = np.mean(self.times >= ended[:, None], axis=0)
+        # a rate that n endings tell is known to 1 / sqrt(n) of itself
+        error = normal_factor() * share / np.sqrt(seen.ended)
+        add_ended(table, share, Interval(share - error, share + error))
+        table.notes.append(
+            f"{seen.ended} of {seen.runs} runs of arcs ended early for a physical reason. Which"
+            " members of the ensemble do so is told by a logistic regression on how far they go;"
+            " they count as having left. Means, spreads and drivers speak of motion that goes on."
+        )
 
     def _arcs(self, table: ResultTable) -> None:
         records = self.chain.records

@@ -109,23 +109,8 @@ class Members:
         if self.endings is None:
             return
         share, ends = self.endings.share(np.concatenate(self._ended))
-        words = "P(ended by t for a physical reason)"
-        table.add("ended_probability", ("time",), share, "1", words)
-        for end, values in (("low", ends.low), ("high", ends.high)):
-            label = f"{words}, {end} end of its 95 % interval"
-            table.add(f"ended_probability_{end}", ("time",), values, "1", label)
-        error = np.maximum(share - ends.low, ends.high - share)
         table.notes.append(self.endings.note)
-        for name in ("inside", "survival", "joint_inside", "joint_survival"):
-            variable = f"{name}_probability"
-            if variable not in table.variables:
-                continue
-            middle = table.variables[variable][1]
-            low, high = (table.variables[f"{variable}_{end}"] for end in ("low", "high"))
-            wide = widen(Interval(low[1], high[1]), middle, error)
-            low[1][...], high[1][...] = np.clip(wide.low, 0.0, 1.0), np.clip(wide.high, 0.0, 1.0)
-            for values in (middle, low[1], high[1]):
-                values[:, self._beyond] = np.nan
+        add_ended(table, share, ends, self._beyond)
         if self._beyond.any() and "exit_time_quantile" in table.variables:
             for end in ("", "_low", "_high"):
                 times = table.variables[f"exit_time_quantile{end}"][1]
@@ -135,6 +120,33 @@ class Members:
     def _beyond(self) -> BoolArray:
         """(T,) output times at which too few runs go on for an expansion."""
         return np.asarray(np.isnan(self.arc.expansion.coefficients).any(axis=(0, 2)))
+
+
+def add_ended(
+    table: ResultTable, share: FloatArray, ends: Interval, beyond: BoolArray | None = None
+) -> None:
+    """P(ended by t) (T,) with its interval; the probabilities of staying are widened by it.
+
+    Nothing is said of staying at the times `beyond` (T,).
+    """
+    words = "P(ended by t for a physical reason)"
+    ends = Interval(np.clip(ends.low, 0.0, 1.0), np.clip(ends.high, 0.0, 1.0))
+    table.add("ended_probability", ("time",), share, "1", words)
+    for end, values in (("low", ends.low), ("high", ends.high)):
+        label = f"{words}, {end} end of its 95 % interval"
+        table.add(f"ended_probability_{end}", ("time",), values, "1", label)
+    error = np.maximum(share - ends.low, ends.high - share)
+    for name in ("inside", "survival", "joint_inside", "joint_survival"):
+        variable = f"{name}_probability"
+        if variable not in table.variables:
+            continue
+        middle = table.variables[variable][1]
+        low, high = (table.variables[f"{variable}_{end}"] for end in ("low", "high"))
+        wide = widen(Interval(low[1], high[1]), middle, error)
+        low[1][...], high[1][...] = np.clip(wide.low, 0.0, 1.0), np.clip(wide.high, 0.0, 1.0)
+        if beyond is not None:
+            for values in (middle, low[1], high[1]):
+                values[:, beyond] = np.nan
 
 
 def _parts(members: int) -> list[int]:

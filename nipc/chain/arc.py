@@ -15,6 +15,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from nipc.arrays import FloatArray
+from nipc.chain.endings import Endings
 from nipc.expansion import ProductBasis, SampledBasis, TensorBasis, hermite, weighted
 from nipc.problem.noise import NoiseModel
 
@@ -66,7 +67,7 @@ class ArcMap:
     Ticks first ... last; times (m,) after the arc's start, the last being its end; coefficients
     (terms, m d). low, high (m, d) are what its runs reached, and twice that range beyond; `error`
     is held out, at the arc's end, over the spread. So many members of the ensemble as `direct_runs`
-    may be run directly, those farthest outside.
+    may be run directly, those farthest outside; `endings` tells which of them end in the arc.
     """
 
     first: int
@@ -82,6 +83,7 @@ class ArcMap:
     components: int
     error: float = 0.0
     direct_runs: float = 0.0
+    endings: Endings | None = None
 
     def __call__(self, germ: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Chart states (n, m, d) of germ rows (n, c + K), and how far outside the rows are (n,).

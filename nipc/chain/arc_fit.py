@@ -9,6 +9,7 @@ import numpy as np
 
 from nipc.arrays import FloatArray
 from nipc.chain.arc import ArcBasis, ArcMap
+from nipc.chain.endings import Endings, EndingsSeen
 from nipc.chain.grid_design import grid_of
 from nipc.chain.history import BLOCK, NoiseHistory
 from nipc.chain.horizon import Horizon, Members
@@ -61,19 +62,23 @@ class ArcFit:
         start, end = horizon.ticks[first], horizon.ticks[last]
         self.label = f"t = {start:.6g} to {end:.6g} of {horizon.ticks[-1]:.6g}"
         white = horizon.fresh(self.model, horizon.history, first, last, 0, pool.values.shape[0])
-        self.rows = np.flatnonzero(~pool.lost)
+        self.rows = np.flatnonzero(pool.open)
         self.candidates = np.hstack([pool.correlated, white])[self.rows]
         self.width = pool.correlated.shape[1]
         rich = horizon.model(first, last, self.study.check.richness, terms)
         count = held.values.shape[0]
         held_white = horizon.fresh(rich, checked, first, last, 0, count)
-        self.truth, good = horizon.run(held, rich, held_white, self.times, f"{self.label}, check")
+        self.truth, good, self.held_ended = horizon.run_to_end(
+            held, rich, held_white, self.times, f"{self.label}, check"
+        )
         seen = horizon.fresh(self.model, checked, first, last, 0, count)
-        self._held = np.hstack([held.correlated, seen])[good]
+        germ = np.hstack([held.correlated, seen])
+        self._held = germ[good]
         self._known = self.truth[good, -1]
         self.nodes = np.empty((0, self.candidates.shape[1]))
         self.outputs = np.empty((0, self.times.size * self.truth.shape[2]))
         self._unusable = self.nodes
+        self._ended = germ[np.isfinite(self.held_ended)]
         self.runs = self.failed = 0
 
     def trial(self, degree: int, sizes: FloatArray | None) -> Trial:
@@ -101,6 +106,14 @@ class ArcFit:
         error = self._error(arc, spread)
         return Trial(replace(arc, error=error), error, lower, spread)
 
+    def endings(self, arc: ArcMap, seen: EndingsSeen) -> Endings | None:
+        """What the runs of this arc, and those of the arcs before it, tell of endings."""
+        nodes = np.vstack([self.nodes, self._held, self._ended])
+        ended = np.arange(nodes.shape[0]) >= nodes.shape[0] - self._ended.shape[0]
+        width = self.truth.shape[2]
+        seen.add(nodes[:, :width], arc(nodes)[0], ended)
+        return seen.fitted()
+
     def _extend(self, basis: TensorBasis) -> None:
         """Add nodes, chosen beside those that are there, and run them.
 
@@ -116,12 +129,13 @@ class ArcFit:
             members, candidates = self._offered(basis, missing, attempt)
             rows = near_optimal_subset(basis, candidates, missing, rng, taken).rows
             nodes, some = candidates[rows], members.take(rows)
-            values, good = self.horizon.run(
+            values, good, ended = self.horizon.run_to_end(
                 some, self.model, nodes[:, self.width :], self.times, f"{self.label}, design",
                 lenient=attempt > 0,
             )  # fmt: skip
             self.runs += missing
-            self.failed += int((~good).sum())
+            self.failed += int((~good & np.isnan(ended)).sum())
+            self._ended = np.vstack([self._ended, nodes[np.isfinite(ended)]])
             self.nodes = np.vstack([self.nodes, nodes[good]])
             self.outputs = np.vstack(
                 [self.outputs, values[good].reshape(int(good.sum()), self.outputs.shape[1])]

@@ -11,6 +11,7 @@ from nipc.arrays import FloatArray
 from nipc.chain.arc import ArcMap
 from nipc.chain.arc_fit import ArcFit, Trial
 from nipc.chain.direct import Continued, continue_directly
+from nipc.chain.endings import EndingsSeen
 from nipc.chain.horizon import Horizon, Members
 from nipc.chain.records import ArcRecord
 from nipc.chain.steering import Done, Steering, Step, Tried
@@ -37,6 +38,7 @@ class Chain:
     reached: float
     stopped: bool
     notes: tuple[str, ...]
+    endings: EndingsSeen
     continued: Continued | None = None
 
 
@@ -72,11 +74,14 @@ class ChainBuilder:
         self.steering = Steering.of(study.chain, self.tolerance)
         self.sizes: FloatArray | None = None
         self.saved = 0.0  # run-equivalents that the pool's far members may still take
+        self.seen = EndingsSeen()
         self.notes: list[str] = []
 
     def tightened(self, factor: float) -> ChainBuilder:
         """A builder whose arcs must agree `factor` times better."""
-        return ChainBuilder(self.horizon, self.told, self.tolerance * factor)
+        other = ChainBuilder(self.horizon, self.told, self.tolerance * factor)
+        other.seen = self.seen
+        return other
 
     def build(self, before: Chain | None = None) -> Chain:
         """All arcs, or those up to where the polynomials fail or the budget is spent.
@@ -130,7 +135,7 @@ class ChainBuilder:
             self.notes.append(words)
         return Chain(
             self._granted(maps, records), tuple(records), seen, predicted, nodes, reached,
-            bool(stopped), tuple(self.notes), continued,
+            bool(stopped), tuple(self.notes), self.seen, continued,
         )  # fmt: skip
 
     def _granted(self, maps: list[ArcMap], records: list[ArcRecord]) -> tuple[ArcMap, ...]:
@@ -141,7 +146,11 @@ class ChainBuilder:
         part = min(1.0, self.study.chain.direct_share * spent / need) if need else 1.0
         # the pool's count is a sample: leave room for three more than it has shown
         room = 3.0 * self.study.ensemble.members / POOL
-        return tuple(replace(a, direct_runs=part * (a.direct_runs + room)) for a in maps)
+        # and of endings all arcs together tell more than those before an arc
+        endings = self.seen.fitted()
+        return tuple(
+            replace(a, direct_runs=part * (a.direct_runs + room), endings=endings) for a in maps
+        )
 
     def _overdrawn(self, records: list[ArcRecord]) -> str:
         """Why the budget ends the chain here, or nothing."""
@@ -217,7 +226,7 @@ class ChainBuilder:
         words += [reason] if reason else []
         # what the ensemble would need; `_granted` cuts it to what it may have
         need = self._far(best.map, fit)
-        arc = replace(best.map, direct_runs=need)
+        arc = replace(best.map, direct_runs=need, endings=fit.endings(best.map, self.seen))
         self.saved += self.study.chain.direct_share * fit.runs * share
         in_pool = need * fit.rows.size / self.study.ensemble.members
         beyond = min(round(in_pool), int(self.saved / share))

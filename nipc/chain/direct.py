@@ -18,11 +18,13 @@ FEWEST = 20
 class Continued:
     """The ensemble's first members beyond what the arcs reached.
 
-    values (M, r, d) are chart values at the output times `rows` (r,), NaN where a run failed.
+    values (M, r, d) are chart values at the output times `rows` (r,), NaN where a run failed or
+    had ended; `ended` (M,) is when, NaN where it did not.
     """
 
     values: FloatArray
     rows: IntArray
+    ended: FloatArray
 
 
 def continue_directly(horizon: Horizon, pool: Members, at: int) -> tuple[Continued | None, str]:
@@ -46,29 +48,32 @@ def continue_directly(horizon: Horizon, pool: Members, at: int) -> tuple[Continu
             f"{FEWEST} would say little, so nothing is said of later times."
         )
     members = pool.take(np.arange(count))
+    ended = members.ended.copy()
     rows = np.flatnonzero(horizon.outputs > horizon.ticks[at])
     values = np.full((count, rows.size, pool.values.shape[1]), np.nan)
-    alive = np.arange(count)
+    alive = np.flatnonzero(np.isnan(ended))
+    members = members.take(alive)
     for first, last in _stretches(at, horizon.end):
         model = horizon.model(first, last)
         times = horizon.arc_times(first, last)
         white = horizon.fresh(model, horizon.history, first, last, 0, count)[alive]
         label = f"t = {model.start:.6g} to {model.end:.6g}, direct ensemble"
-        found, good = horizon.run(members, model, white, times, label)
+        found, good, over = horizon.run_to_end(members, model, white, times, label, True)
         there = horizon.rows_between(first, last)
         inside = horizon.places(times, there)
+        ended[alive] = np.fmin(ended[alive], over)
         alive, found = alive[good], found[good]
         values[np.ix_(alive, there - rows[0])] = found[:, inside]
         members = members.take(np.flatnonzero(good))
         carried = np.empty((count, members.carried.shape[1]))
         carried[alive] = members.carried
         carried = horizon.carry(carried, horizon.history, first, last, 0)[alive]
-        members = replace(members, values=found[good, -1], carried=carried)
+        members = replace(members, values=found[:, -1], carried=carried)
     words = (
         f"From there on {count} members of the ensemble went on by direct runs; what is said of "
         "later times rests on them alone."
     )
-    return Continued(values, rows), words
+    return Continued(values, rows, ended), words
 
 
 def _stretches(at: int, end: int) -> list[tuple[int, int]]:

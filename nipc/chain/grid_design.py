@@ -35,7 +35,7 @@ def grid_of(pool: Members, noise: int, level: int) -> Grid | None:
 
     if pool.law.shape[1]:
         return None
-    known = pool.correlated[~pool.lost]
+    known = pool.correlated[pool.open]
     whitening = Whitening.of(known)
     white = whitening(known)
     if white.shape[1] and (
@@ -55,6 +55,7 @@ def grid_of(pool: Members, noise: int, level: int) -> Grid | None:
     members = Members(
         correlated[:, :width], correlated[:, width:], np.empty((count, 0)),
         np.tile(pool.parameters[:1], (count, 1)), np.zeros(count, dtype=bool),
+        np.full(count, np.nan),
     )  # fmt: skip
     return Grid(members, np.hstack([members.correlated, nodes[:, directions:]]))
 

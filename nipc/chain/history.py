@@ -40,26 +40,35 @@ class NoiseHistory:
     edges: FloatArray
     cell_terms: int
     scales: FloatArray
+    luck: str = "a"
     _projections: dict[tuple[object, ...], FloatArray] = field(default_factory=dict, repr=False)
 
     def with_stream(self, source: int, stream: str) -> NoiseHistory:
         """The same with another independent history for one source."""
         streams = tuple(stream if j == source else s for j, s in enumerate(self.streams))
-        return self._replaced(streams, self.scales)
+        return self._replaced(streams, self.scales, self.luck)
 
     def restreamed(self, stream: str) -> NoiseHistory:
-        """Independent histories of all sources."""
-        return self._replaced((stream,) * len(self.streams), self.scales)
+        """Independent histories of all sources, and luck of its own."""
+        return self._replaced((stream,) * len(self.streams), self.scales, stream)
 
     def scaled(self, scales: FloatArray) -> NoiseHistory:
         """The same histories with each source multiplied by its scale."""
-        return self._replaced(self.streams, np.asarray(scales, float))
+        return self._replaced(self.streams, np.asarray(scales, float), self.luck)
 
-    def _replaced(self, streams: tuple[str, ...], scales: FloatArray) -> NoiseHistory:
+    def _replaced(self, streams: tuple[str, ...], scales: FloatArray, luck: str) -> NoiseHistory:
         return NoiseHistory(
-            self.seed, streams, self.sources, self.edges, self.cell_terms, scales,
+            self.seed, streams, self.sources, self.edges, self.cell_terms, scales, luck,
             self._projections,
         )  # fmt: skip
+
+    def uniform(self, place: int, block: int, count: int) -> FloatArray:
+        """A number (count,) in (0, 1) of each member at a place: what its germ leaves open."""
+        parts = [
+            self._generator(f"luck:{self.luck}", place, block + b).random(BLOCK)[:part]
+            for b, part in blocks_of(count)
+        ]
+        return np.concatenate(parts) if parts else np.empty(0)
 
     def _generator(self, stream: str, cell: int, block: int) -> np.random.Generator:
         text = f"{self.seed}/{stream}/{cell}/{block}".encode()

@@ -30,7 +30,8 @@ class Members:
 
     values (n, d) in the chart; carried (n, G) Gauss-Markov values over their stationary deviation;
     law (n, P') uncertain parameters; parameters (n, P) all of them; `lost` (n,) are those that were
-    far outside an arc's design and were not run: they move on, but where they are is a guess.
+    far outside an arc's design and were not run: they move on, but where they are is a guess;
+    `ended` (n,) is when one ended for a physical reason, NaN where it did not.
     """
 
     values: FloatArray
@@ -38,6 +39,12 @@ class Members:
     law: FloatArray
     parameters: FloatArray
     lost: BoolArray
+    ended: FloatArray
+
+    @property
+    def open(self) -> BoolArray:
+        """(n,) neither lost nor ended: good for a design."""
+        return ~self.lost & np.isnan(self.ended)
 
     @property
     def correlated(self) -> FloatArray:
@@ -47,7 +54,7 @@ class Members:
     def take(self, rows: IntArray) -> Members:
         return Members(
             self.values[rows], self.carried[rows], self.law[rows], self.parameters[rows],
-            self.lost[rows],
+            self.lost[rows], self.ended[rows],
         )  # fmt: skip
 
 
@@ -121,7 +128,8 @@ class Horizon:
             carried[:, i] = history.initial(j, block, count) * history.scales[j]
         span = slice(self.germ.first_parameter, self.germ.first_noise)
         lost = np.zeros(count, dtype=bool)
-        return Members(values, carried, nodes[:, span], self.germ.parameters(nodes), lost)
+        parameters, never = self.germ.parameters(nodes), np.full(count, np.nan)
+        return Members(values, carried, nodes[:, span], parameters, lost, never)
 
     @property
     def end(self) -> int:
@@ -205,20 +213,29 @@ class Horizon:
         """Chart values (n, m, d) at the arc's times by direct runs, and which are usable (n,).
 
         When `lenient`, all of them may fail. Members without a finite state, whose run of an
-        earlier arc failed, are not run.
+        earlier arc failed or ended, are not run.
         """
-        known = np.isfinite(members.values).all(axis=1)
-        if not known.all():
-            values = np.full((known.size, times.size, members.values.shape[1]), np.nan)
-            usable = np.zeros(known.size, dtype=bool)
-            rows = np.flatnonzero(known)
-            if rows.size:
-                some = self.run(members.take(rows), model, white[rows], times, label, lenient)
-                values[rows], usable[rows] = some
-            return values, usable
-        start = model.start
-        grid = np.concatenate([[start], times])
-        states = self.chart.to_state(members.values, start * self.chart_time)
+        return self.run_to_end(members, model, white, times, label, lenient)[:2]
+
+    def run_to_end(
+        self,
+        members: Members,
+        model: NoiseModel,
+        white: FloatArray,
+        times: FloatArray,
+        label: str,
+        lenient: bool = False,
+    ) -> tuple[FloatArray, BoolArray, FloatArray]:
+        """The same, and when runs ended for a physical reason (n,): NaN where they did not."""
+        count = members.values.shape[0]
+        values = np.full((count, times.size, members.values.shape[1]), np.nan)
+        good, ended = np.zeros(count, dtype=bool), np.full(count, np.nan)
+        rows = np.flatnonzero(np.isfinite(members.values).all(axis=1))
+        if not rows.size:
+            return values, good, ended
+        members, white = members.take(rows), white[rows]
+        grid = np.concatenate([[model.start], times])
+        states = self.chart.to_state(members.values, model.start * self.chart_time)
         forcing = model.realise(self.forcing_columns(model, members.carried, white))
         batch = Batch(states, grid, forcing, members.parameters)
         new = self._new(batch)
@@ -230,10 +247,13 @@ class Horizon:
             self.engine.policy = policy
         self.outcomes.append(outcomes.account(new))
         with np.errstate(invalid="ignore"):
-            values = self.chart.from_state(outcomes.states, grid * self.chart_time)
-        good: BoolArray = np.asarray(np.isfinite(values).all(axis=(1, 2)))
-        values[good] = self.chart.unwrap(values[good], grid * self.chart_time, members.values[good])
-        return values[:, 1:], good
+            found = self.chart.from_state(outcomes.states, grid * self.chart_time)
+        whole = np.isfinite(found).all(axis=(1, 2))
+        found[whole] = self.chart.unwrap(
+            found[whole], grid * self.chart_time, members.values[whole]
+        )
+        values[rows], good[rows], ended[rows] = found[:, 1:], whole, outcomes.ended
+        return values, good, ended
 
     def _new(self, batch: Batch) -> IntArray:
         """The runs that this chain has not asked for before; they are added to the cost."""
@@ -265,19 +285,32 @@ class Horizon:
         n = members.values.shape[0]
         white = self.fresh(arc.noise, history, arc.first, arc.last, block, n)
         values, outside = arc(np.hstack([members.correlated, white]))
-        far = (outside > 1.0) & ~members.lost
+        far = (outside > 1.0) & members.open
+        ended = self._endings(arc, members, values, history.uniform(arc.first, block, n))
         count = min(int(direct), int(far.sum()))
         if count:
             rows = np.sort(np.argsort(np.where(far, -outside, 0.0), kind="stable")[:count])
             label = f"members far outside, t = {arc.start:g} to {arc.times[-1]:g}"
-            found, good = self.run(
-                members.take(rows), arc.noise, white[rows], arc.times, label, True
+            some = members.take(rows)
+            found, good, ended[rows] = self.run_to_end(
+                some, arc.noise, white[rows], arc.times, label, True
             )
             values[rows[good]] = found[good]
             far[rows[good]] = False
         carried = self.carry(members.carried, history, arc.first, arc.last, block)
         lost = members.lost | far
-        return values, Members(values[:, -1], carried, members.law, members.parameters, lost)
+        return values, Members(values[:, -1], carried, members.law, members.parameters, lost, ended)
+
+    def _endings(
+        self, arc: ArcMap, members: Members, values: FloatArray, uniform: FloatArray
+    ) -> FloatArray:
+        """When members have ended (n,), within this arc or before; anywhere in it."""
+        if arc.endings is None:
+            return members.ended.copy()
+        chance = arc.endings.chance(members.values, values)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            when = arc.start + uniform / chance * (arc.times[-1] - arc.start)
+        return np.where(np.isnan(members.ended) & (uniform < chance), when, members.ended)
 
     def granted(self, arc: ArcMap, block: int) -> int:
         """Direct runs that a block of the ensemble gets of those for all of it."""

@@ -67,7 +67,7 @@ def test_what_the_panel_is_off_by_is_told(solved):
     moving = data["panel_error"].sel(quantity="x").values
     assert np.isfinite(moving).all()
     assert moving.max() < 0.05
-    words = " ".join(panel.remarks(data))
+    words = " ".join([panel.warning(data), *panel.remarks(data)])
     assert "nipc whatif is the reference" in words
     assert "members differ from the chain itself by" in words
 

@@ -166,13 +166,15 @@ def test_a_bent_ensemble_gets_no_grid():
     rng = np.random.default_rng(3)
     x = rng.standard_normal((5000, 2))
     none, still = np.empty((5000, 0)), np.zeros(5000, dtype=bool)
-    grid = grid_of(Members(3.0 + x @ [[2.0, 1.0], [0.0, 0.1]], none, none, none, still), 3, 1)
+    never = np.full(5000, np.nan)
+    bent = 3.0 + x @ [[2.0, 1.0], [0.0, 0.1]]
+    grid = grid_of(Members(bent, none, none, none, still, never), 3, 1)
     assert grid is not None
     assert grid.candidates.shape == (11, 5)  # 2 d + 1 nodes of level one in five variables
     assert grid.members.values.mean(axis=0) == pytest.approx([3.0, 3.0], abs=0.15)
     x[:, 1] += x[:, 0] ** 2
-    assert grid_of(Members(x, none, none, none, still), 3, 1) is None
-    assert grid_of(Members(x, none, x[:, :1], none, still), 3, 1) is None
+    assert grid_of(Members(x, none, none, none, still, never), 3, 1) is None
+    assert grid_of(Members(x, none, x[:, :1], none, still, never), 3, 1) is None
 
 
 def test_a_check_member_whose_run_fails_drops_out(tmp_path):

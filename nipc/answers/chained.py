@@ -35,9 +35,8 @@ class ChainAnswers:
         self.groups = horizon.germ.groups()
         self.cloud = np.empty((0, 0, 0))  # chart values of the first members at some times
         self.ensemble_lost = 0
-        self.ended: FloatArray = np.empty(
-            0
-        )  # when those asked for last ended, NaN where they did not
+        # when those asked for last ended, NaN where they did not
+        self.ended: FloatArray = np.empty(0)
         self.all_ended: list[FloatArray] = []
         self.lost = 0.0  # share of the members asked for last that ended far outside the designs
         self.outside: BoolArray = np.zeros(0, dtype=bool)  # which of them
@@ -55,11 +54,13 @@ class ChainAnswers:
         block: int,
         count: int,
         direct: bool = False,
+        onward: bool = False,
     ) -> FloatArray:
         """Quantities (n, T, Q) of a block of members; NaN beyond what the chain reached.
 
         With `direct`, members far outside an arc's design are run by the propagator, and those
-        that went on where the arcs stopped have their values: for the ensemble itself.
+        that went on where the arcs stopped have their values: for the ensemble itself. `onward`:
+        members that end have values by the arcs all the same, as a regression needs.
         """
         horizon = self.horizon
         nodes = horizon.nodes(streams, block, count)
@@ -76,7 +77,8 @@ class ChainAnswers:
             some = min(count, beyond.values.shape[0])
             values[:some, beyond.rows] = beyond.values[:some]
             self.ended[:some] = beyond.ended[:some]
-        values[self.times >= self.ended[:, None]] = np.nan
+        if not onward:
+            values[self.times >= self.ended[:, None]] = np.nan
         if direct and block == 0:
             self.cloud = values[:CLOUD, cloud_rows(self.times)]
         return self.of_values(values, members.parameters)
@@ -214,7 +216,9 @@ class ChainAnswers:
         """Share of the variance beyond degree one; which frequencies of noise drive the rest."""
         horizon, linear = self.horizon, ChainLinear(self.horizon, self.chain)
         streams = horizon.streams("a")
-        part = linear.fit(lambda block, n: self.members(horizon.history, streams, block, n))
+        part = linear.fit(
+            lambda block, n: self.members(horizon.history, streams, block, n, onward=True)
+        )
         share = np.full((self.times.size, len(self.quantities.names)), np.nan)
         if part is not None:
             share = part.share_beyond
@@ -241,6 +245,12 @@ class ChainAnswers:
             f"{seen.ended} of {seen.runs} runs of arcs ended early for a physical reason. Which"
             " members of the ensemble do so is told by a logistic regression on how far they go;"
             " they count as having left. Means, spreads and drivers speak of motion that goes on."
+        )
+        truly, told = np.isfinite(self.chain.check_ended)
+        table.notes.append(
+            f"{truly.sum()} of the check's {truly.size} members ended in direct runs,"
+            f" {told.sum()} by the arcs; of {(truly != told).sum()} the two disagree whether they"
+            " end."
         )
 
     def _arcs(self, table: ResultTable) -> None:

@@ -79,7 +79,7 @@ class ArcFit:
         self.outputs = np.empty((0, self.times.size * self.truth.shape[2]))
         self._unusable = self.nodes
         self._ended = germ[np.isfinite(self.held_ended)]
-        self.runs = self.failed = 0
+        self.runs = self.failed = self.ended = 0
 
     def trial(self, degree: int, sizes: FloatArray | None) -> Trial:
         """Fit an expansion of this degree, after as many more runs as it needs.
@@ -111,7 +111,7 @@ class ArcFit:
         nodes = np.vstack([self.nodes, self._held, self._ended])
         ended = np.arange(nodes.shape[0]) >= nodes.shape[0] - self._ended.shape[0]
         width = self.truth.shape[2]
-        seen.add(nodes[:, :width], arc(nodes)[0], ended)
+        seen.add((self.first, self.last), nodes[:, :width], arc(nodes)[0], ended)
         return seen.fitted()
 
     def _extend(self, basis: TensorBasis) -> None:
@@ -135,6 +135,7 @@ class ArcFit:
             )  # fmt: skip
             self.runs += missing
             self.failed += int((~good & np.isnan(ended)).sum())
+            self.ended += int(np.isfinite(ended).sum())
             self._ended = np.vstack([self._ended, nodes[np.isfinite(ended)]])
             self.nodes = np.vstack([self.nodes, nodes[good]])
             self.outputs = np.vstack(

@@ -26,8 +26,10 @@ KEPT_FOR_DIRECT = 0.3  # of a budget that the arcs would overdraw, for going on 
 class Chain:
     """The arcs up to `reached`, and the check's members at all output times.
 
-    direct, predicted (C, T, d) are chart values, NaN beyond what was reached. `stopped` before the
-    horizon's end: `continued` are then the members that went on by direct runs, if any.
+    direct, predicted (C, T, d) are chart values, NaN beyond what was reached; check_ended (2, C) is
+    when the members ended for a physical reason, directly and by the arcs, NaN where they did not.
+    `stopped` before the horizon's end: `continued` are then those that went on by direct runs, if
+    any.
     """
 
     maps: tuple[ArcMap, ...]
@@ -39,16 +41,18 @@ class Chain:
     stopped: bool
     notes: tuple[str, ...]
     endings: EndingsSeen
+    check_ended: FloatArray
     continued: Continued | None = None
 
 
 @dataclass(frozen=True, eq=False)
 class _Built:
-    """An arc as built: its map (None when it failed), record and held-out truth."""
+    """An arc as built: its map (None when it failed), record, held-out truth, and its endings."""
 
     map: ArcMap | None
     record: ArcRecord
     truth: FloatArray
+    ended: FloatArray
 
 
 class ChainBuilder:
@@ -123,7 +127,10 @@ class ChainBuilder:
             steps, chained = horizon.advance(arc, chained, self.checked, 0, study.check.runs)
             seen[:, rows] = built.truth[:, inside]
             predicted[:, rows] = steps[:, inside]
-            direct = replace(direct, values=built.truth[:, -1], carried=chained.carried)
+            direct = replace(
+                direct, values=built.truth[:, -1], carried=chained.carried,
+                ended=np.fmin(direct.ended, built.ended),
+            )  # fmt: skip
             maps.append(arc)
             at = arc.last
         reached = float(horizon.ticks[at])
@@ -135,7 +142,8 @@ class ChainBuilder:
             self.notes.append(words)
         return Chain(
             self._granted(maps, records), tuple(records), seen, predicted, nodes, reached,
-            bool(stopped), tuple(self.notes), self.seen, continued,
+            bool(stopped), tuple(self.notes), self.seen,
+            np.stack([direct.ended, chained.ended]), continued,
         )  # fmt: skip
 
     def _granted(self, maps: list[ArcMap], records: list[ArcRecord]) -> tuple[ArcMap, ...]:
@@ -197,10 +205,10 @@ class ChainBuilder:
         count = direct.values.shape[0]
         white = horizon.fresh(rich, self.checked, arc.first, arc.last, 0, count)
         label = f"t = {arc.start:.6g} to {arc.times[-1]:.6g}, check"
-        truth, _ = horizon.run(direct, rich, white, arc.times, label)
+        truth, _, ended = horizon.run_to_end(direct, rich, white, arc.times, label)
         self.steering = replace(self.steering, degree=arc.degree, length=arc.last - arc.first)
         self.sizes = None
-        return _Built(arc, before.records[i], truth)
+        return _Built(arc, before.records[i], truth, ended)
 
     # -- one arc ---------------------------------------------------------------------------------
 
@@ -224,6 +232,7 @@ class ChainBuilder:
             words.append(f"halved at degree {longer[-1].degree} ({longer[-1].error:.1%} off)")
             self.steering, self.sizes = self.steering.shorter(last - at), None
         words += [reason] if reason else []
+        words += ["others took the place of runs that ended"] if fit.ended else []
         # what the ensemble would need; `_granted` cuts it to what it may have
         need = self._far(best.map, fit)
         arc = replace(best.map, direct_runs=need, endings=fit.endings(best.map, self.seen))
@@ -244,8 +253,8 @@ class ChainBuilder:
             allowed,
         )  # fmt: skip
         if step is Step.STOP:
-            return _Built(None, replace(record, note=reason, direct=0), fit.truth)
-        return _Built(arc, record, fit.truth)
+            return _Built(None, replace(record, note=reason, direct=0), fit.truth, fit.held_ended)
+        return _Built(arc, record, fit.truth, fit.held_ended)
 
     def _dearer(self, cells: float, width: int) -> float:
         """How many times the linear terms an arc of twice as many cells has."""

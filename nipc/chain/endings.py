@@ -32,42 +32,78 @@ class Endings:
     model: Any
 
     def chance(self, start: FloatArray, values: FloatArray) -> FloatArray:
-        """(n,) from chart values at an arc's start (n, d) and by its expansion (n, m, d)."""
+        """P(ended until each of the arc's times) (n, m), of how far members have gone until then.
+
+        From chart values at an arc's start (n, d) and by its expansion (n, m, d).
+        """
+        shape = values.shape[:2]
         if self.model is None:
-            return np.ones(start.shape[0])
-        rows = (_features(start, values, self.middle) - self.centre) / self.scale
-        return np.asarray(self.model.predict_proba(rows)[:, 1], float)
+            return np.ones(shape)
+        result = np.empty(shape)
+        for k in range(shape[1]):
+            rows = _features(start, values[:, : k + 1], self.middle)
+            result[:, k] = self.model.predict_proba((rows - self.centre) / self.scale)[:, 1]
+        return np.maximum.accumulate(result, axis=1)
+
+    def times(
+        self,
+        start: FloatArray,
+        values: FloatArray,
+        times: FloatArray,
+        uniform: FloatArray,
+        first: bool,
+    ) -> FloatArray:
+        """When members end (n,), NaN for not here; times (m + 1,), the arc's start first.
+
+        The inverse of the broken line through the chances, from none at the start, at `uniform`.
+        What a start alone says comes evenly over the arc: who is there has not ended there. But on
+        the `first` arc of all it comes at once.
+        """
+        known = np.hstack([np.zeros((start.shape[0], 1)), self.chance(start, values)])
+        if not first:
+            part = (times[1:] - times[0]) / (times[-1] - times[0])
+            known[:, 1:] -= self.chance(start, start[:, None]) * (1.0 - part)
+            known = np.maximum.accumulate(np.maximum(known, 0.0), axis=1)
+        step = np.argmax(known > uniform[:, None], axis=1)
+        before, member = np.maximum(step - 1, 0), np.arange(step.size)
+        low, high = known[member, before], known[member, step]
+        with np.errstate(invalid="ignore", divide="ignore"):
+            part = np.clip((uniform - low) / (high - low), 0.0, 1.0)
+        found = times[before] + part * (times[step] - times[before])
+        return np.where(step > 0, found, np.nan)
 
 
 class EndingsSeen:
     """Gathers the runs of all arcs so far, those that ended among them."""
 
     def __init__(self) -> None:
-        self._starts: list[FloatArray] = []
-        self._values: list[FloatArray] = []
-        self._ended: list[BoolArray] = []
+        self._parts: dict[tuple[int, int], tuple[FloatArray, FloatArray, BoolArray]] = {}
 
     @property
     def runs(self) -> int:
-        return int(sum(part.size for part in self._ended))
+        return sum(int(ended.size) for _, _, ended in self._parts.values())
 
     @property
     def ended(self) -> int:
-        return int(sum(part.sum() for part in self._ended))
+        return sum(int(ended.sum()) for _, _, ended in self._parts.values())
 
-    def add(self, start: FloatArray, values: FloatArray, ended: BoolArray) -> None:
-        """An arc's runs: (n, d), (n, m, d) by its expansion, and which ended (n,)."""
-        self._starts.append(start)
+    def add(
+        self, arc: tuple[int, int], start: FloatArray, values: FloatArray, ended: BoolArray
+    ) -> None:
+        """An arc's runs: (n, d), (n, m, d) by its expansion, and which ended (n,).
+
+        `arc` is its first and last tick: one that is built anew takes the place of its earlier self
+        so that no run counts twice.
+        """
         # arcs may have other numbers of times: extremes are all that is used of them
-        self._values.append(np.stack([values.min(axis=1), values.max(axis=1)], axis=1))
-        self._ended.append(ended)
+        spans = np.stack([values.min(axis=1), values.max(axis=1)], axis=1)
+        self._parts[arc] = (start, spans, ended)
 
     def fitted(self) -> Endings | None:
         """What all runs so far tell; None where none has ended."""
         if self.ended == 0:
             return None
-        labels = np.concatenate(self._ended)
-        starts, spans = np.concatenate(self._starts), np.concatenate(self._values)
+        starts, spans, labels = map(np.concatenate, zip(*self._parts.values(), strict=True))
         middle = np.median(starts, axis=0)
         rows = _features(starts, spans, middle)
         centre, scale = rows.mean(axis=0), rows.std(axis=0)

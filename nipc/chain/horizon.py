@@ -304,13 +304,12 @@ class Horizon:
     def _endings(
         self, arc: ArcMap, members: Members, values: FloatArray, uniform: FloatArray
     ) -> FloatArray:
-        """When members have ended (n,), within this arc or before; anywhere in it."""
+        """When members have ended (n,), within this arc or before."""
         if arc.endings is None:
             return members.ended.copy()
-        chance = arc.endings.chance(members.values, values)
-        with np.errstate(invalid="ignore", divide="ignore"):
-            when = arc.start + uniform / chance * (arc.times[-1] - arc.start)
-        return np.where(np.isnan(members.ended) & (uniform < chance), when, members.ended)
+        times = np.concatenate([[arc.start], arc.times])
+        when = arc.endings.times(members.values, values, times, uniform, arc.first == 0)
+        return np.where(np.isnan(members.ended), when, members.ended)
 
     def granted(self, arc: ArcMap, block: int) -> int:
         """Direct runs that a block of the ensemble gets of those for all of it."""

@@ -18,7 +18,7 @@ from nipc.answers import present
 from nipc.answers.chained import ChainAnswers
 from nipc.answers.confinement import Confinement
 from nipc.answers.endings import endings_of
-from nipc.answers.intervals import Interval, widen
+from nipc.answers.intervals import Interval, normal_factor, widen
 from nipc.answers.scaled_expansion import scaled_expansion
 from nipc.answers.scales import of_noise, scaled_germ, scaled_nodes
 from nipc.arrays import BoolArray, FloatArray
@@ -55,6 +55,7 @@ class Scaled(ABC):
         self.outside: BoolArray = np.zeros(0, dtype=bool)
         self.far = 0.0
         self.ended: FloatArray | None = None
+        self._times_ended: list[FloatArray] = []
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -114,15 +115,38 @@ class Scaled(ABC):
         values[self.outside] = np.clip(values[self.outside], low, high)
         return values
 
+    def _endings_error(self, ended: FloatArray) -> FloatArray | None:
+        """(T,) what the direct runs leave open of P(ended by t) with members' times of ending (n,).
+
+        None where no run has ended.
+        """
+        return None
+
     def counted(self, result: Confinement) -> Confinement:
-        """The probabilities with what else their intervals have to hold."""
-        return result
+        """The probabilities, widened by what the direct runs leave open of who ends."""
+        error = self._endings_error(np.concatenate(self._times_ended or [np.empty(0)]))
+        if error is None:
+            return result
+
+        def wide(value: FloatArray, interval: Interval) -> Interval:
+            low, high = widen(interval, value, error)
+            return Interval(np.clip(low, 0.0, 1.0), np.clip(high, 0.0, 1.0))
+
+        return replace(
+            result,
+            inside_interval=wide(result.inside, result.inside_interval),
+            survival_interval=wide(result.survival, result.survival_interval),
+        )
 
     def blocks(self, scales: FloatArray, count: int) -> Iterator[FloatArray]:
         """The ensemble's first members, block by block; afterwards `far` is of all of them."""
         far = 0.0
+        self._times_ended = []
         for block, part in blocks_of(count):
-            yield self.members(scales, block, part)
+            values = self.members(scales, block, part)
+            if self.ended is not None:
+                self._times_ended.append(self.ended)
+            yield values
             far += self.far * part / count
         self.far = far
 
@@ -138,7 +162,6 @@ class ScaledArc(Scaled):
         super().__init__(arc.study, arc.germ.groups(), arc.check)
         self.arc, self._engine, self._quantities = arc, engine, quantities
         self._endings = endings_of(arc)
-        self._times_ended: list[FloatArray] = []
         self._states: list[Mapping[str, Any]] = []  # of the generator, at the start of each block
         worst = np.fmax(arc.relative_error[-1], arc.check.error[-1])
         self._error = float(np.max(np.nan_to_num(worst), initial=0.0))
@@ -181,29 +204,11 @@ class ScaledArc(Scaled):
             values[self.times >= self.ended[:, None]] = np.nan
         return values
 
-    def blocks(self, scales: FloatArray, count: int) -> Iterator[FloatArray]:
-        self._times_ended = []
-        for values in super().blocks(scales, count):
-            if self.ended is not None:
-                self._times_ended.append(self.ended)
-            yield values
-
-    def counted(self, result: Confinement) -> Confinement:
-        """Widened by what the direct runs leave open of who ends."""
+    def _endings_error(self, ended: FloatArray) -> FloatArray | None:
         if self._endings is None:
-            return result
-        share, ends = self._endings.share(np.concatenate(self._times_ended))
-        error = np.maximum(share - ends.low, ends.high - share)
-
-        def wide(value: FloatArray, interval: Interval) -> Interval:
-            low, high = widen(interval, value, error)
-            return Interval(np.clip(low, 0.0, 1.0), np.clip(high, 0.0, 1.0))
-
-        return replace(
-            result,
-            inside_interval=wide(result.inside, result.inside_interval),
-            survival_interval=wide(result.survival, result.survival_interval),
-        )
+            return None
+        share, ends = self._endings.share(ended)
+        return np.asarray(np.maximum(share - ends.low, ends.high - share))
 
     def direct(self, scales: FloatArray, count: int, label: str) -> FloatArray:
         germ = self.arc.germ
@@ -268,7 +273,16 @@ class ScaledChain(Scaled):
                 history = history.with_stream(j, "b")
         values = answers.members(history, streams, block, count)
         self._note(answers.outside)
+        if self.chain.endings.ended:
+            self.ended = answers.ended
         return self._held(values, scales)
+
+    def _endings_error(self, ended: FloatArray) -> FloatArray | None:
+        count = self.chain.endings.ended
+        if not count:
+            return None
+        share = np.mean(self.times >= ended[:, None], axis=0)
+        return np.asarray(normal_factor() * share / np.sqrt(count))
 
     def direct(self, scales: FloatArray, count: int, label: str) -> FloatArray:
         answers = self._at(scales)

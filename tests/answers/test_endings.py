@@ -178,3 +178,31 @@ def test_once_most_have_ended_only_that_is_told():
     assert not late[:10].any()
     assert float(data["trust_horizon"][0]) < END
     assert "too few runs of the design go on" in data.attrs["notes"]
+
+
+def test_a_question_to_a_chain_counts_endings(tmp_path, monkeypatch):
+    """At scale one a what-if tells what the study tells; with no push at all fewer end."""
+    import nipc
+
+    stopping = free(lambda x: np.abs(x[:, 0]) > 0.6)
+    for place in ("nipc.workflow", "nipc.questions"):
+        monkeypatch.setattr(f"{place}.build_propagator", lambda study: stopping)
+    base = study([{"name": "x", "box": [-0.6, 0.6]}]).model_dump(exclude_none=True)
+    base["noise"][0]["terms"] = 2
+    chained = Study.model_validate(
+        base | {"chain": {"arcs": 4}, "check": {"runs": 20}, "runs": {"tolerated_failures": 0.5}}
+    )
+    told = nipc.run(chained, folder=tmp_path, backend="inline").dataset
+    name = "survival_probability"
+    whole = told[name].values[0]
+    same = nipc.whatif(chained, {"push": 1.0}, folder=tmp_path)[name].values[0]
+    # the ensemble's far members may be run directly in the study: some in ten thousand
+    assert same == pytest.approx(whole, abs=2e-3)
+    quiet = nipc.whatif(chained, {"push": 0.0}, folder=tmp_path)
+    rng = np.random.default_rng(2)
+    x, v = STD * rng.standard_normal(100_000), STD / 2 * rng.standard_normal(100_000)
+    free_motion = x[:, None] + v[:, None] * told["time"].values
+    exact = survived(np.abs(free_motion) > 0.6)
+    assert exact[-1] > whole[-1] + 0.1
+    low, high = (quiet[f"{name}_{end}"].values[0] for end in ("low", "high"))
+    assert np.all((low - 0.02 <= exact) & (exact <= high + 0.02))

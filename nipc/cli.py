@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import os
+import signal
 import sys
+import threading
 from io import TextIOWrapper
 from typing import Annotated
 
@@ -11,6 +13,7 @@ import typer
 
 from nipc.commands.allowance import allowance
 from nipc.commands.check import check
+from nipc.commands.export import export
 from nipc.commands.new import new
 from nipc.commands.plan import plan
 from nipc.commands.probe import probe
@@ -19,8 +22,9 @@ from nipc.commands.run import run
 from nipc.commands.schema import schema
 from nipc.commands.status import status
 from nipc.commands.sweep import sweep
+from nipc.commands.take_in import take_in
 from nipc.commands.whatif import whatif
-from nipc.errors import NipcError
+from nipc.errors import Interrupted, NipcError
 
 app = typer.Typer(
     no_args_is_help=True,
@@ -52,9 +56,23 @@ def _options(
 # in the order in which they are used; their names are their functions' unless told
 for _command in (
     new, check, plan, probe, run, status, report, whatif, sweep, allowance,
-    schema,
+    schema, export,
 ):  # fmt: skip
     app.command()(_command)
+app.command("import")(take_in)  # "import" is a word of Python's
+
+
+def _on_sigterm() -> list[int]:
+    """Batch queues end a job with SIGTERM: stop as on Ctrl-C; the list tells which it was."""
+    ended: list[int] = []
+
+    def stop(number: int, frame: object) -> None:
+        ended.append(number)
+        raise KeyboardInterrupt
+
+    if threading.current_thread() is threading.main_thread():
+        signal.signal(signal.SIGTERM, stop)
+    return ended
 
 
 def main() -> None:
@@ -62,11 +80,12 @@ def main() -> None:
     for stream in (sys.stdout, sys.stderr):
         if isinstance(stream, TextIOWrapper):
             stream.reconfigure(errors="replace")  # a terminal that cannot show a letter
+    ended = _on_sigterm()
     try:
         sys.exit(app(prog_name="nipc", standalone_mode=False) or 0)
     except NipcError as error:
         print(f"nipc: {error}", file=sys.stderr)
-        sys.exit(error.exit_code)
+        sys.exit(143 if ended and isinstance(error, Interrupted) else error.exit_code)
     except typer.Exit as left:
         sys.exit(left.exit_code)
     except (KeyboardInterrupt, typer.Abort):
@@ -74,7 +93,7 @@ def main() -> None:
             "nipc: stopped; what is finished is kept, and the same command goes on from there",
             file=sys.stderr,
         )
-        sys.exit(130)
+        sys.exit(143 if ended else 130)
     except BrokenPipeError:
         # whoever read the output has read enough; nothing more can be flushed to it
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())

@@ -253,11 +253,14 @@ def run(
     folder: str | Path | None = None,
     progress: Progress | None = None,
     backend: str = "processes",
+    scheduler: str | None = None,
+    retry_failed: bool = False,
 ) -> Result:
     """Run the study: design, runs, expansion, check, answers.
 
-    Runs that the ledger in the work folder already holds are not made again. Results are saved
-    there and returned. `backend` "inline" runs the propagator in this process.
+    Runs that the ledger in the work folder already holds are not made again, nor those that failed
+    unless `retry_failed`. Results are saved there and returned. `backend` "inline" runs the
+    propagator in this process, "dask" on the cluster whose `scheduler` is named by its address.
     """
     from nipc.answers.evidence import add_failures
     from nipc.answers.result import Result
@@ -270,7 +273,9 @@ def run(
     place = Path(folder) if folder is not None else work_folder(study)
     forecast = plan(study)
     propagator, quantities = build_propagator(study), build_quantities(study)
-    policy = FailurePolicy(retries=study.runs.retries, tolerated=study.runs.tolerated_failures)
+    policy = FailurePolicy(
+        retries=study.runs.retries, tolerated=study.runs.tolerated_failures, again=retry_failed
+    )
     with (
         Ledger.open(place) as ledger,
         Engine(
@@ -281,6 +286,7 @@ def run(
             policy=policy,
             progress=progress or usual(),
             backend=backend,
+            scheduler=scheduler,
         ) as engine,
     ):
         # a chain or an enriched design knows how many runs it takes only as they are made

@@ -19,7 +19,8 @@ BELOW = {
     "adapters": {"runs", "problem"},
     "commands": {
         "answers", "chain", "problem", "expansion", "runs", "report", "adapters",
-        "workflow", "questions", "pilot", "chart_choice", "study_schema", "terminal", "starter",
+        "workflow", "questions", "elsewhere", "pilot", "chart_choice", "study_schema", "terminal",
+        "starter",
     },
 }  # fmt: skip
 

@@ -16,8 +16,8 @@ from nipc.runs.propagator import Batch
 class MissingRuns(NipcError):  # noqa: N818 - nothing is wrong
     """The ledger lacks runs of a batch: at least so many."""
 
-    def __init__(self, count: int, label: str) -> None:
-        self.count, self.label = count, label
+    def __init__(self, count: int, label: str, batch: Batch) -> None:
+        self.count, self.label, self.batch = count, label, batch
         runs = "1 more run" if count == 1 else f"{count} more runs"
         super().__init__(f"at least {runs} would have to be made ({label})")
 
@@ -40,7 +40,7 @@ class KeptRuns(Engine):
         known = self.ledger.find(list(keys))
         missing = sum(not self._settled(known.get(key)) for key in keys)
         if missing:
-            raise MissingRuns(missing, label)
+            raise MissingRuns(missing, label, batch)
         return self.collect(batch)
 
     @contextmanager

@@ -48,9 +48,10 @@ for line in sys.stdin:
     words = line.split()
     m, d, p, j, rows = map(int, words[:5])
     numbers = [float(word) for word in words[5:]]
-    table = zip(*[iter(numbers[m + d + p :])] * (1 + j))
+    first, width = m + d + p, 1 + j
+    table = [numbers[k : k + width] for k in range(first, first + rows * width, width)]
     try:
-        states = drift(numbers[:m], *numbers[m : m + d], list(table))
+        states = drift(numbers[:m], *numbers[m : m + d], table)
         print("ok", *map(repr, states), flush=True)
     except (ArithmeticError, ValueError) as error:
         print("error", error, flush=True)

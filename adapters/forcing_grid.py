@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import lru_cache
 from weakref import WeakKeyDictionary
 
 import numpy as np
@@ -15,10 +16,13 @@ _KNOWN: WeakKeyDictionary[NoiseModel, dict[_Key, FloatArray]] = WeakKeyDictionar
 _MOST = 64  # grids that are kept of a model
 
 
+@lru_cache(maxsize=_MOST)
 def forcing_grid(start: float, end: float, step: float) -> FloatArray:
-    """Times from start to end in equal steps of at most `step`."""
+    """Times from start to end in equal steps of at most `step`, not to be written to."""
     count = max(1, int(np.ceil((end - start) / step - 1e-9)))
-    return np.linspace(start, end, count + 1)
+    grid = np.linspace(start, end, count + 1)
+    grid.flags.writeable = False
+    return grid
 
 
 def grid_table(forcing: Forcing, grid: FloatArray) -> FloatArray:

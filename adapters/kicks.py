@@ -87,6 +87,11 @@ class KicksPropagator(Propagator):
             found = self._with(batch.take(todo), 1, refined)
             states[todo], ended[todo] = found.states, found.ended
 
+    @property
+    def legs(self) -> int | None:
+        """How many the study says; None for "auto"."""
+        return None if self.settings.legs == "auto" else self.settings.legs
+
     def legs_needed(self, batch: Batch) -> int:
         """The number of legs from which twice as many change the batch within the tolerance."""
         free = self.inner.propagate(self._inner_batch(batch)).states

@@ -1,7 +1,7 @@
 """A function of a shared library, C or Fortran bind(C), called through ctypes.
 
-The arrays are passed as they are, without copying. A crash of the library ends the worker process
-that called it, and costs that run alone.
+Results are filled in place and the forcing is passed as it was made, without copying. A crash of
+the library ends the worker process that called it, and costs that run alone.
 """
 
 from __future__ import annotations
@@ -20,6 +20,7 @@ from nipc.adapters.forcing_grid import forcing_grid, grid_table
 from nipc.adapters.legs import by_legs
 from nipc.adapters.program import files_digest
 from nipc.adapters.reference import check_depends
+from nipc.arrays import FloatArray
 from nipc.errors import InputError, PropagatorError
 from nipc.runs.propagator import AdapterContext, Batch, Propagator, Trajectories
 
@@ -29,7 +30,6 @@ Word = Literal[
     "n_runs", "n_state", "n_times", "n_parameters", "n_forcing", "n_sources", "n_coefficients",
     "start", "end", "step",
 ]  # fmt: skip
-RESULTS = ("states", "final", "ended")
 SCALARS = ("start", "end", "step")
 PROBE = (
     "import ctypes, sys\n"
@@ -104,15 +104,14 @@ class LibraryPropagator(Propagator):
         )  # fmt: skip
 
     def _once(self, batch: Batch) -> Trajectories:
-        function = self._function or self._load()
+        function, words = self._function or self._load(), self.settings.arguments
         (n, d), m = batch.states.shape, batch.times.size
-        arrays: dict[str, Any] = {}
-        states = np.full((n, m, d), np.nan)
-        final, ended = np.full((n, d), np.nan), np.full(n, np.nan)
-        for word in self.settings.arguments:
-            arrays[word] = self._array(word, batch, states, final, ended)
-        passed = [self._passed(word, value) for word, value in arrays.items()]
-        code = function(*passed)
+        results = {"states": np.full((n, m, d), np.nan), "ended": np.full(n, np.nan)}
+        if "final" in words:
+            results["final"] = np.full((n, d), np.nan)
+        given = self._given(batch, results)
+        code = function(*[self._passed(word, given[word]) for word in words])
+        states, ended = results["states"], results["ended"]
         lost = code is not None and code == self.settings.lost_code
         if code and not lost:
             raise PropagatorError(f"{self.settings.function} returned {code}")
@@ -121,52 +120,38 @@ class LibraryPropagator(Propagator):
                 f"{self.settings.function} returned {code}, that the motion ended, and did not "
                 "store when in `ended`"
             )
-        if "final" in arrays:
-            states[:, 0], states[:, -1] = batch.states, final
+        if "final" in words:
+            states[:, 0], states[:, -1] = batch.states, results["final"]
         return Trajectories(states, ended)
 
-    def _array(self, word: str, batch: Batch, states: Any, final: Any, ended: Any) -> Any:
-        """The argument as an array of double, or a number."""
-        match word:
-            case "state":
-                return np.ascontiguousarray(batch.states, dtype=np.float64)
-            case "times":
-                return np.ascontiguousarray(batch.times, dtype=np.float64)
-            case "parameters":
-                return np.ascontiguousarray(batch.parameters, dtype=np.float64)
-            case "coefficients":
-                return np.ascontiguousarray(batch.forcing.coefficients, dtype=np.float64)
-            case "states":
-                return states
-            case "final":
-                return final
-            case "ended":
-                return ended
-            case "forcing_times":
-                return self._grid(batch)
-            case "forcing":
-                return np.ascontiguousarray(grid_table(batch.forcing, self._grid(batch)))
-            case "start":
-                return float(batch.times[0])
-            case "end":
-                return float(batch.times[-1])
-            case "step":
-                grid = self._grid(batch)
-                return float(grid[1] - grid[0])
-        return {
-            "n_runs": len(batch), "n_state": batch.states.shape[1], "n_times": batch.times.size,
-            "n_parameters": batch.parameters.shape[1], "n_sources": batch.forcing.n_sources,
-            "n_coefficients": batch.forcing.coefficients.shape[1],
-            "n_forcing": self._grid(batch).size if word == "n_forcing" else 0,
-        }[word]  # fmt: skip
+    def _given(self, batch: Batch, results: dict[str, FloatArray]) -> dict[str, Any]:
+        """Every word's array of double, or number.
 
-    def _grid(self, batch: Batch) -> Any:
-        assert self.settings.forcing_step is not None
-        return forcing_grid(batch.times[0], batch.times[-1], self.settings.forcing_step)
+        A function may use what it is given as room of its own, so it gets no array of the batch.
+        """
+        times, coefficients = batch.times, batch.forcing.coefficients
+        given: dict[str, Any] = {
+            "n_runs": len(batch), "n_state": batch.states.shape[1], "n_times": times.size,
+            "n_parameters": batch.parameters.shape[1], "n_sources": batch.forcing.n_sources,
+            "n_coefficients": coefficients.shape[1], "start": times[0], "end": times[-1],
+        }  # fmt: skip
+        own = (("state", batch.states), ("times", times), ("parameters", batch.parameters),
+               ("coefficients", coefficients))  # fmt: skip
+        for word, array in own:
+            if word in self.settings.arguments:
+                given[word] = np.array(array, dtype=np.float64, order="C")
+        if self.settings.forcing_step is not None:
+            grid = forcing_grid(float(times[0]), float(times[-1]), self.settings.forcing_step)
+            given |= {"n_forcing": grid.size, "step": grid[1] - grid[0]}
+            if "forcing_times" in self.settings.arguments:
+                given["forcing_times"] = grid.copy()
+            if "forcing" in self.settings.arguments:
+                given["forcing"] = np.ascontiguousarray(grid_table(batch.forcing, grid))
+        return given | results
 
     def _passed(self, word: str, value: Any) -> Any:
         if isinstance(value, np.ndarray):
-            return ctypes.c_void_p(value.ctypes.data)
+            return ctypes.c_void_p(value.__array_interface__["data"][0])
         number = ctypes.c_double(value) if word in SCALARS else ctypes.c_int32(value)
         return ctypes.byref(number) if self.settings.by_reference else number
 

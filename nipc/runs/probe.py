@@ -59,6 +59,9 @@ class ProbeReport:
 class CountsLegs(Protocol):
     """A propagator that divides its arcs and can tell how finely it should."""
 
+    @property
+    def legs(self) -> int | None: ...
+
     def legs_needed(self, batch: Batch) -> int: ...
 
 
@@ -242,7 +245,7 @@ class _Probe:
             return "nothing can be told of its strength"
         return (
             f"its integral has moved {self.names[c]} by {full[1, c] / impulse:.3g} times itself "
-            "(a factor that a unit could explain, such as 1000 or 86400, is a wrong unit)"
+            "(1000, 86400 and the like are a wrong unit, a factor below zero may be a wrong sign)"
         )
 
     def _restart(self, base: FloatArray, first: Outcomes) -> ProbeFinding:
@@ -289,10 +292,17 @@ class _Probe:
         )  # fmt: skip
 
     def _legs(self, propagator: CountsLegs) -> ProbeFinding:
-        legs = propagator.legs_needed(self.batch.take(slice(0, min(2, self.n))))
+        needed = propagator.legs_needed(self.batch.take(slice(0, min(2, self.n))))
+        if propagator.legs is None:
+            return ProbeFinding(
+                "legs", True, f"with legs = {needed} the kicks have converged.",
+                f'Say legs = {needed} in place of "auto": that spares most of the runs.',
+            )  # fmt: skip
+        good = propagator.legs >= needed
         return ProbeFinding(
-            "legs", True, f"with legs = {legs} the kicks have converged.",
-            f'Say legs = {legs} in place of "auto": that spares most of the runs.',
+            "legs", good,
+            f"with legs = {needed} the kicks have converged; the study says {propagator.legs}.",
+            "" if good else f"Say legs = {needed}, or allow a larger tolerance of the kicks.",
         )  # fmt: skip
 
     def _worst(self, gap: FloatArray) -> tuple[int, float]:

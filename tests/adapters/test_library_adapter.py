@@ -50,6 +50,21 @@ def test_a_function_that_only_returns_the_end(library, tmp_path):
     np.testing.assert_allclose(states, oscillator(batch), atol=ACCURACY)
 
 
+def test_a_function_that_writes_to_what_it_is_given_harms_no_other_run(library, tmp_path):
+    batch = oscillator_batch(2)
+    before = [a.copy() for a in (batch.states, batch.times, batch.parameters)]
+    germ = batch.forcing.coefficients.copy()
+    arguments = ("state", "times", "parameters", "coefficients", "final")
+    propagator = made(library, tmp_path, "in_place", arguments, returns="nothing")
+    states, _ = one_by_one(propagator, batch)
+    x, v = before[0].T
+    expected = x[:, None] + v[:, None] * (before[1] - before[1][0])
+    np.testing.assert_allclose(states[:, :, 0], expected, rtol=1e-13)
+    after = (batch.states, batch.times, batch.parameters)
+    assert all(np.array_equal(a, b) for a, b in zip(after, before, strict=True))
+    assert np.array_equal(batch.forcing.coefficients, germ)
+
+
 def test_fortran_by_reference(compiled, tmp_path):
     library = compiled("motion.f90", "-shared", "-fPIC")
     batch = oscillator_batch(2)

@@ -60,6 +60,8 @@ class Faulty(Propagator):
             xi[:, 1] = 0.0
         if self.fault == "thousandfold":
             xi[:, 0] *= 1000.0
+        if self.fault == "wrong sign":
+            xi[:, 0] *= -1.0
         # a force that depends on the time, as of a tide
         force = 0.3 * np.cos(t - shift)
         return np.stack([x[:, 1] + 0.1 * xi[:, 1], -x[:, 0] + xi[:, 0] + force], axis=1)

@@ -63,3 +63,37 @@ def test_a_wrong_unit_shows_as_a_factor():
     text = found["noise push"].found
     factor = float(text.split("moved v by ")[1].split(" ")[0])
     np.testing.assert_allclose(factor, 1000, rtol=0.2)
+
+
+class Kicked(Faulty):
+    """As one whose kicks converge with eight legs."""
+
+    def __init__(self, legs):
+        super().__init__("")
+        self.legs = legs
+
+    def legs_needed(self, batch):
+        return 8
+
+
+@pytest.mark.parametrize(
+    ("legs", "good", "said"),
+    [
+        (None, True, "Say legs = 8 in place of"),
+        (4, False, "Say legs = 8, or allow"),
+        (8, True, "the study says 8."),
+    ],
+)
+def test_too_few_legs_are_found(legs, good, said):
+    report = probe(Kicked(legs), probe_batch(), ("x", "v"))
+    (finding,) = [f for f in report.findings if f.topic == "legs"]
+    assert finding.good is good
+    assert said in f"{finding.found} {finding.advice}"
+
+
+def test_a_wrong_sign_shows_in_the_factor():
+    found, _ = findings("wrong sign")
+    text = found["noise push"].found
+    factor = float(text.split("moved v by ")[1].split(" ")[0])
+    np.testing.assert_allclose(factor, -1.0, rtol=0.2)
+    assert "may be a wrong sign" in text

@@ -14,12 +14,13 @@ from pydantic import BaseModel, ConfigDict, Field, field_validator, model_valida
 from nipc.adapters.base import Adapter, AdapterSettings
 from nipc.adapters.deck import Deck, InputFile, NumberFormat, Numbers, ScratchName, table_text
 from nipc.adapters.endings import until
-from nipc.adapters.forcing_grid import forcing_grid, grid_table
+from nipc.adapters.forcing_grid import forcing_grid, grid_table, table_error
 from nipc.adapters.legs import by_legs
 from nipc.adapters.outputs import OutputTable, end_between
 from nipc.adapters.program import call, failure, files_digest, program_of
 from nipc.arrays import FloatArray
 from nipc.errors import InputError, PropagatorError
+from nipc.problem.noise import NoiseModel
 from nipc.runs.propagator import AdapterContext, Batch, Propagator, Trajectories
 
 Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
@@ -257,6 +258,11 @@ class ExecutablePropagator(Propagator):
             ended[row] = end_between(times, int(reach[row]), end)
             states[row] = until(states[row], times, ended[row])
         return Trajectories(states, ended)
+
+    def table_error(self, model: NoiseModel) -> float:
+        """How far a table of this noise is off by its step: see `forcing_grid`."""
+        forcing = self.settings.forcing
+        return table_error(model, None if forcing is None else forcing.step)
 
     def fingerprint(self) -> str:
         folder, settings = self.context.folder, self.settings

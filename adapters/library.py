@@ -16,12 +16,13 @@ import numpy as np
 from pydantic import Field, model_validator
 
 from nipc.adapters.base import Adapter, AdapterSettings
-from nipc.adapters.forcing_grid import forcing_grid, grid_table
+from nipc.adapters.forcing_grid import forcing_grid, grid_table, table_error
 from nipc.adapters.legs import by_legs
 from nipc.adapters.program import files_digest
 from nipc.adapters.reference import check_depends
 from nipc.arrays import FloatArray
 from nipc.errors import InputError, PropagatorError
+from nipc.problem.noise import NoiseModel
 from nipc.runs.propagator import AdapterContext, Batch, Propagator, Trajectories
 
 Word = Literal[
@@ -163,6 +164,10 @@ class LibraryPropagator(Propagator):
             raise PropagatorError(f"cannot load {self.path.name}: {error}") from None
         self._function.restype = ctypes.c_int if self.settings.returns == "code" else None
         return self._function
+
+    def table_error(self, model: NoiseModel) -> float:
+        """How far a table of this noise is off by its step: see `forcing_grid`."""
+        return table_error(model, self.settings.forcing_step)
 
     def fingerprint(self) -> str:
         files = [self.path, *(self.folder / name for name in self.settings.depends)]

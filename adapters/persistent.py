@@ -24,12 +24,13 @@ from pydantic import Field
 
 from nipc.adapters.base import Adapter, AdapterSettings
 from nipc.adapters.endings import until
-from nipc.adapters.forcing_grid import forcing_grid, grid_table
+from nipc.adapters.forcing_grid import forcing_grid, grid_table, table_error
 from nipc.adapters.program import end, failure, files_digest, program_of, start, tail
 from nipc.adapters.reference import check_depends
 from nipc.adapters.table_file import field_value
 from nipc.arrays import FloatArray
 from nipc.errors import InputError, PropagatorError
+from nipc.problem.noise import NoiseModel
 from nipc.runs.propagator import AdapterContext, Batch, Propagator, Trajectories
 
 Positive = Annotated[float, Field(gt=0, allow_inf_nan=False)]
@@ -168,6 +169,10 @@ class PersistentPropagator(Propagator):
         assert self._process.stdin is not None
         os.set_blocking(self._process.stdin.fileno(), False)
         return self._process
+
+    def table_error(self, model: NoiseModel) -> float:
+        """How far a table of this noise is off by its step: see `forcing_grid`."""
+        return table_error(model, self.settings.forcing_step)
 
     def fingerprint(self) -> str:
         files = [Path(self.command[0])]

@@ -220,6 +220,7 @@ def probe(study: Study) -> ProbeReport:
     They cover the first two arcs of a chain, or the whole of a single arc.
     """
     from nipc.chain.horizon import cell_count
+    from nipc.chain.noise_terms import NoiseTerms
     from nipc.chain.single_arc import generator, run_times
     from nipc.problem.germ import Germ
     from nipc.runs.probe import probe as ask
@@ -237,12 +238,17 @@ def probe(study: Study) -> ProbeReport:
     germ = Germ.of(study, terms, float(times[0]), float(times[-1]))
     nodes = germ.sample(generator(study, "probe"), 4)
     batch = Batch(germ.states(nodes), times, germ.forcing(nodes), germ.parameters(nodes))
+    noise = germ.noise
+    if arcs > 1:
+        most = NoiseTerms.of(study, float(edges[1] - edges[0])).piloted
+        noise = Germ.of(study, most, float(edges[0]), float(edges[1])).noise
     return ask(
         build_propagator(study),
         batch,
         study.state_names,
         tolerance=study.tolerance,
         time_limit=study.runs.time_limit,
+        arc_noise=noise,
     )
 
 

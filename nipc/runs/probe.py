@@ -16,7 +16,7 @@ from typing import Protocol, runtime_checkable
 import numpy as np
 
 from nipc.arrays import FloatArray
-from nipc.problem.noise import Forcing
+from nipc.problem.noise import Forcing, NoiseModel
 from nipc.runs.engine import Engine
 from nipc.runs.ledger import Ledger
 from nipc.runs.outcomes import Outcomes
@@ -65,6 +65,13 @@ class CountsLegs(Protocol):
     def legs_needed(self, batch: Batch) -> int: ...
 
 
+@runtime_checkable
+class ReadsTable(Protocol):
+    """A propagator whose noise comes as a table, read by straight lines with an error."""
+
+    def table_error(self, model: NoiseModel) -> float: ...
+
+
 def probe(
     propagator: Propagator,
     batch: Batch,
@@ -72,13 +79,16 @@ def probe(
     *,
     tolerance: float = 0.01,
     time_limit: float | None = None,
+    arc_noise: NoiseModel | None = None,
 ) -> ProbeReport:
     """Findings on a propagator from a few runs of one arc.
 
     `batch` holds some four runs, of different starts and paths, over three times at the least.
-    `tolerance` is what the study asks for, as a share of the spread.
+    `tolerance` is what the study asks for, as a share of the spread. `arc_noise` is the noise of an
+    arc with the most terms that it may get, where that is not the batch's.
     """
-    return _Probe(propagator, batch, state_names, tolerance, time_limit).report()
+    noise = arc_noise or batch.forcing.model
+    return _Probe(propagator, batch, state_names, tolerance, time_limit, noise).report()
 
 
 class _Probe:
@@ -89,9 +99,10 @@ class _Probe:
         names: tuple[str, ...],
         tolerance: float,
         limit: float | None,
+        arc_noise: NoiseModel,
     ) -> None:
         self.propagator, self.batch, self.names = propagator, batch, names
-        self.tolerance, self.limit = tolerance, limit
+        self.tolerance, self.limit, self.arc_noise = tolerance, limit, arc_noise
         self.n = len(batch)
 
     def report(self) -> ProbeReport:
@@ -115,6 +126,8 @@ class _Probe:
         if self.propagator.vectorised:
             findings.append(self._alone(base))
         findings += self._noise(first)
+        if isinstance(self.propagator, ReadsTable) and self.batch.forcing.n_sources:
+            findings.append(self._table(self.propagator.table_error(self.arc_noise)))
         findings += [self._restart(base, first), self._digits(base)]
         if isinstance(self.propagator, CountsLegs):
             findings.append(self._legs(self.propagator))
@@ -289,6 +302,20 @@ class _Probe:
             f"{self.names[c]} comes with {digits[c]} digits: its last one is {ratio:.1g} of the "
             "spread.",
             "Print more digits; an expansion fits the rounding otherwise.",
+        )  # fmt: skip
+
+    def _table(self, error: float) -> ProbeFinding:
+        """An error of a variance, which may add up twice: a quarter of the tolerance is allowed."""
+        told = (
+            "straight lines between the rows of the table of noise have an error of "
+            f"{error:.1g} of its variance."
+        )  # fmt: skip
+        if error <= 0.25 * self.tolerance:
+            return ProbeFinding("table", True, told)
+        return ProbeFinding(
+            "table", False, told,
+            "Every run would share that error, and no check sees it: make the step of the forcing "
+            "smaller, or give the source fewer terms.",
         )  # fmt: skip
 
     def _legs(self, propagator: CountsLegs) -> ProbeFinding:

@@ -117,7 +117,8 @@ def test_a_restart_goes_on_where_the_run_was(compiled, tmp_path):
     )
     propagator = build(
         "executable", tmp_path, command=(str(compiled("oscillator.f90")),),
-        inputs=({"file": "run.nml", "text": deck + "$times\n"}, {"file": "cards.txt", "text": "$x$v$k\n"}),
+        inputs=({"file": "run.nml", "text": deck + "$times\n"},
+                {"file": "cards.txt", "text": "$x$v$k\n"}),
         forcing={"file": "forcing.dat", "step": 0.025},
         output={"file": "track.out", "columns": (3, 4), "time_column": 2, "time_tolerance": 1e-6},
         formats={"x": "%24.16e", "v": "%24.16e", "k": "%12.9f"},

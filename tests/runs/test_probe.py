@@ -97,3 +97,25 @@ def test_a_wrong_sign_shows_in_the_factor():
     factor = float(text.split("moved v by ")[1].split(" ")[0])
     np.testing.assert_allclose(factor, -1.0, rtol=0.2)
     assert "may be a wrong sign" in text
+
+
+class Tabled(Faulty):
+    """As one whose noise comes as a table."""
+
+    def __init__(self, error):
+        super().__init__("")
+        self.error, self.asked = error, None
+
+    def table_error(self, model):
+        self.asked = model
+        return self.error
+
+
+@pytest.mark.parametrize(("error", "good"), [(1e-3, True), (0.08, False)])
+def test_a_table_of_noise_that_is_too_coarse_is_found(error, good):
+    batch, propagator = probe_batch(), Tabled(error)
+    report = probe(propagator, batch, ("x", "v"), tolerance=0.05)
+    (finding,) = [f for f in report.findings if f.topic == "table"]
+    assert finding.good is good
+    assert f"an error of {error:.1g} of its variance" in finding.found
+    assert propagator.asked is batch.forcing.model

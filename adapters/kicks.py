@@ -47,6 +47,8 @@ class KicksSettings(AdapterSettings):
             raise ValueError("name the inner propagator's adapter: adapter = ...")
         if value["adapter"] == "kicks":
             raise ValueError("kicks cannot wrap kicks: give all of them here")
+        if value["adapter"] == "map":
+            raise ValueError("kicks fall inside a map's steps; give the map its noise, as w")
         return value
 
 

@@ -148,6 +148,67 @@ def test_a_source_without_a_kick_goes_to_the_propagator_itself(tmp_path):
     np.testing.assert_allclose(found.states, oscillator(batch), atol=1e-9)
 
 
+SWING = """#!/usr/bin/env python3
+import math, sys
+
+def swing(x, v, k, times):
+    w = math.sqrt(k)
+    for t in times:
+        c, s = math.cos(w * (t - times[0])), math.sin(w * (t - times[0]))
+        yield from (x * c + v / w * s, v * c - w * x * s)
+
+for line in sys.stdin:
+    words = line.split()
+    m = int(words[0])
+    head = 5 if len(sys.argv) > 1 else 1  # persistent requests begin with five counts
+    numbers = [float(word) for word in words[head:]]
+    states = list(swing(*numbers[m : m + 3], numbers[:m]))
+    if head == 5:
+        print("ok", *map(repr, states), flush=True)
+    else:
+        for x, v in zip(states[::2], states[1::2]):
+            print(repr(x), repr(v))
+"""
+
+
+def test_kicks_around_each_kind_of_adapter(compiled, folder):
+    """The same swing as a function, a right-hand side, a library and two kinds of program."""
+    program = folder / "swing.py"
+    program.write_text(SWING)
+    program.chmod(0o755)
+    (folder / "slope.py").write_text("def rates(t, x, xi, p):\n    return [x[1], -p[0] * x[0]]\n")
+    library = compiled("motion.f90", "-shared", "-fPIC")
+    deck = "{{ n_times }} {% for t in times %}{{ number(t) }} {% endfor %}"
+    deck += "{{ number(x) }} {{ number(v) }} {{ number(k) }}\n"
+    kinds = {
+        "ode": {"rhs": "slope:rates", "rtol": 1e-12},
+        "library": {
+            "library": str(library), "function": "swing", "returns": "nothing",
+            "arguments": ("state", "n_times", "times", "parameters", "states"),
+            "by_reference": True,
+        },
+        "persistent": {"command": ("swing.py", "stay")},
+        "executable": {
+            "command": ("swing.py",), "stdin": "deck", "stdout": "table",
+            "inputs": ({"file": "deck", "text": deck, "language": "jinja"},),
+            "output": {"file": "table", "columns": (1, 2)},
+        },
+    }  # fmt: skip
+    batch = oscillator_batch(2, times=3)
+    expected = kicked(folder, legs=4).propagate(batch).states
+    for name, table in kinds.items():
+        propagator = build("kicks", folder, propagator={"adapter": name} | table, kick=KICK, legs=4)
+        found, _ = one_by_one(propagator, batch)
+        np.testing.assert_allclose(found, expected, atol=1e-10, err_msg=name)
+        if name == "persistent":
+            propagator.inner.close()
+
+
+def test_kicks_do_not_fit_into_a_map():
+    with pytest.raises(ValueError, match="give the map its noise"):
+        load_adapter("kicks").Settings(propagator={"adapter": "map", "map": "a:b"}, kick=KICK)
+
+
 def test_runs_that_end_between_kicks(folder):
     batch = oscillator_batch(3)
     found = kicked(folder, "until_two", legs=5).propagate(batch)

@@ -12,7 +12,7 @@ from nipc.answers.drivers import PickFreezeAccumulator
 from nipc.answers.ensemble import CLOUD, add_ensemble, cloud_rows
 from nipc.answers.evidence import add_degree_norms, add_noise_bases, degree_norms
 from nipc.answers.exits import ExitDrivers
-from nipc.answers.intervals import Interval, normal_factor
+from nipc.answers.intervals import Interval, normal_factor, wilson
 from nipc.answers.separation import add_exponents, chain_logs, worst_error
 from nipc.answers.single import add_check, add_ended
 from nipc.answers.spreading import spread_rate
@@ -240,6 +240,13 @@ class ChainAnswers:
         share = np.mean(self.times >= ended[:, None], axis=0)
         # a rate that n endings tell is known to 1 / sqrt(n) of itself
         error = normal_factor() * share / np.sqrt(seen.ended)
+        beyond, some = self.times > self.chain.reached, self.chain.continued
+        if beyond.any():  # nobody else was followed there
+            share[beyond] = error[beyond] = np.nan
+        if beyond.any() and some is not None:
+            share[beyond] = np.mean(self.times[beyond] >= some.ended[:, None], axis=0)
+            ends = wilson(share[beyond], np.full(int(beyond.sum()), float(some.ended.size)))
+            error[beyond] = np.maximum(share[beyond] - ends.low, ends.high - share[beyond])
         add_ended(table, share, Interval(share - error, share + error))
         table.notes.append(
             f"{seen.ended} of {seen.runs} runs of arcs ended early for a physical reason. Which"

@@ -167,6 +167,21 @@ def test_who_decides_the_ending(tmp_path, monkeypatch):
         assert float(found.sel(source=name)) == pytest.approx(share, abs=0.08)
 
 
+@pytest.mark.parametrize("budget", [26, 18])
+def test_where_the_chain_stops_only_those_followed_tell(tmp_path, monkeypatch, budget):
+    """Of later times twenty members run directly tell, or nobody; not those whom none followed."""
+    settings = study(arcs=8, budget=budget, check={"runs": 20})
+    data = solved(settings, Lost(0.6), tmp_path, monkeypatch)
+    assert "The chain stops at" in data.attrs["notes"]
+    share, low, high = (data[f"ended_probability{end}"].values for end in ("", "_low", "_high"))
+    if budget == 18:
+        assert np.isfinite(share[0])
+        assert np.isnan([share[-1], low[-1], high[-1]]).all()
+        return
+    assert share[-1] * 20 == pytest.approx(round(share[-1] * 20))
+    assert low[-1] <= 1.0 - lost(0.6, -0.6)[-1] <= high[-1]
+
+
 MAP = """\
 import numpy as np
 
